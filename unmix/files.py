@@ -1,0 +1,183 @@
+"""Reading strict TOML and writing files so that nothing half-written is ever seen."""
+
+from __future__ import annotations
+
+import contextlib
+import difflib
+import json
+import os
+import re
+import shutil
+import tempfile
+import tomllib
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any, TypeVar
+
+import msgspec
+
+from unmix.errors import FileError, InputError
+
+__all__ = [
+    "decode_toml",
+    "folder_aside",
+    "read_toml",
+    "refuse_to_replace",
+    "write_aside",
+    "write_json",
+    "write_toml",
+]
+
+T = TypeVar("T")
+
+
+def read_toml(path: Path, kind: type[T]) -> T:
+    """Read a TOML file into the struct `kind`; unknown keys and wrong types name file, key and remedy.
+
+    Raises FileError when the file is missing or unreadable, InputError when its content is wrong.
+    """
+    try:
+        text = path.read_bytes()
+    except FileNotFoundError:
+        raise FileError(f"{path}: no such file; check the path") from None
+    except OSError as error:
+        raise FileError(f"{path}: cannot be read ({error.strerror}); check the path and its permissions") from None
+    return decode_toml(text, kind, where=str(path))
+
+
+def decode_toml(text: bytes | str, kind: type[T], *, where: str) -> T:
+    """Decode TOML text into the struct `kind`; `where` names its source in errors."""
+    try:
+        tree = tomllib.loads(text.decode("utf-8") if isinstance(text, bytes) else text)
+    except UnicodeDecodeError:
+        raise InputError(f"{where}: not UTF-8 text; is this a TOML file?") from None
+    except tomllib.TOMLDecodeError as error:
+        raise InputError(f"{where}: not valid TOML: {error}") from None
+    try:
+        return msgspec.convert(tree, kind, strict=True)
+    except msgspec.ValidationError as error:
+        raise InputError(f"{where}: {_explain(str(error), tree, kind)}") from None
+
+
+def _explain(message: str, tree: dict[str, Any], kind: type) -> str:
+    """Turn msgspec's message into one that names the key and, for an unknown key, the nearest known one."""
+    what, _, at = message.partition(" - at ")
+    key = at.strip("`").removeprefix("$").removeprefix(".")
+    unknown = re.search(r"unknown field `(.+?)`", what)
+    if unknown is None:
+        return f"key `{key}`: {what[:1].lower()}{what[1:]}" if key else what
+    name = unknown.group(1)
+    table = re.sub(r"\[\.\.\.\]|\[\d+\]", "", key)
+    known = _fields_at(kind, table)
+    near = difflib.get_close_matches(name, known, n=1)
+    remedy = f"did you mean `{near[0]}`?" if near else f"known keys: {', '.join(known)}"
+    return f"unknown key `{name}` in {f'[{table}]' if table else 'the top level'}; {remedy}"
+
+
+def _fields_at(kind: Any, table: str) -> list[str]:
+    """Names of the keys of the struct that stands at the dotted path `table`."""
+    info = msgspec.inspect.type_info(kind)
+    for part in filter(None, table.split(".")):
+        fields = {f.encode_name: f.type for f in getattr(_struct_in(info), "fields", ())}
+        if part not in fields:
+            return []
+        info = fields[part]
+    return [f.encode_name for f in getattr(_struct_in(info), "fields", ())]
+
+
+def _struct_in(info: Any) -> Any:
+    """The struct inside an optional, a list or itself; None when there is none."""
+    if isinstance(info, msgspec.inspect.StructType):
+        return info
+    inner = list(getattr(info, "types", ())) or [getattr(info, n) for n in ("item_type", "type") if hasattr(info, n)]
+    return next((found for found in map(_struct_in, inner) if found is not None), None)
+
+
+def refuse_to_replace(path: Path, *, overwrite: bool) -> None:
+    """Raise FileError when `path` exists and replacing was not asked for."""
+    if path.exists() and not overwrite:
+        raise FileError(f"{path}: exists already; choose another place or pass --overwrite")
+
+
+@contextlib.contextmanager
+def write_aside(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
+    """Yield a temporary path beside `path` and rename it onto `path` when the block ends well.
+
+    Missing folders are made. When the block raises, the temporary file goes and `path` is untouched. Raises FileError
+    when the place cannot be written.
+    """
+    refuse_to_replace(path, overwrite=overwrite)
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        handle, name = tempfile.mkstemp(prefix=f".{path.stem}-", suffix=path.suffix, dir=path.parent)
+    except OSError as error:
+        raise FileError(f"{path.parent}: cannot be written ({error.strerror}); choose another folder") from None
+    os.close(handle)
+    aside = Path(name)
+    try:
+        yield aside
+        aside.chmod(0o666 & ~_umask())
+        aside.replace(path)
+    except OSError as error:
+        if isinstance(error, FileError):
+            raise
+        raise FileError(f"{path}: cannot be written ({error.strerror}); is the disk full?") from None
+    finally:
+        aside.unlink(missing_ok=True)
+
+
+def _umask() -> int:
+    mask = os.umask(0)
+    os.umask(mask)
+    return mask
+
+
+def write_json(path: Path, tree: Any, *, overwrite: bool = False) -> None:
+    """Write a tree of plain values as JSON, aside and renamed; NaN and infinity are refused."""
+    text = json.dumps(tree, indent=2, allow_nan=False, ensure_ascii=False)
+    with write_aside(path, overwrite=overwrite) as aside:
+        aside.write_text(text + "\n", encoding="utf-8")
+
+
+def write_toml(path: Path, tree: dict[str, Any], *, overwrite: bool = False) -> None:
+    """Write a tree of plain values as TOML, aside and renamed; keys whose value is None are left out."""
+    import tomli_w
+
+    with write_aside(path, overwrite=overwrite) as aside:
+        aside.write_text(tomli_w.dumps(_without_none(tree)), encoding="utf-8")
+
+
+def _without_none(tree: Any) -> Any:
+    if isinstance(tree, dict):
+        return {k: _without_none(v) for k, v in tree.items() if v is not None}
+    if isinstance(tree, list | tuple):
+        return [_without_none(v) for v in tree]
+    return tree
+
+
+@contextlib.contextmanager
+def folder_aside(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
+    """Yield a temporary folder beside `path` and move its files into `path` when the block ends well.
+
+    Files already in `path` under the same names are replaced only with `overwrite`; others there are left alone.
+    Nothing is moved before every name has been checked.
+    """
+    try:
+        path.mkdir(parents=True, exist_ok=True)
+        aside = Path(tempfile.mkdtemp(prefix=".unfinished-", dir=path))
+    except OSError as error:
+        raise FileError(f"{path}: cannot be written ({error.strerror}); choose another folder") from None
+    try:
+        yield aside
+        made = sorted(p.relative_to(aside) for p in aside.rglob("*") if p.is_file())
+        for name in made:
+            refuse_to_replace(path / name, overwrite=overwrite)
+        for name in made:
+            (path / name).parent.mkdir(parents=True, exist_ok=True)
+            (aside / name).replace(path / name)
+    except OSError as error:
+        if isinstance(error, FileError):
+            raise
+        raise FileError(f"{path}: cannot be written ({error.strerror}); is the disk full?") from None
+    finally:
+        shutil.rmtree(aside, ignore_errors=True)

@@ -1,6 +1,6 @@
 """What a strict file may hold, read off the structs that hold it: key, type, unit, range, default, meaning.
 
-Types, ranges, defaults and meanings come from the struct's annotations (`msgspec.Meta`), units from the ending of the key.
+Types, ranges, defaults and meanings come from the struct's annotations (`msgspec.Meta`), units from the key's ending.
 """
 
 from __future__ import annotations
@@ -29,9 +29,17 @@ _UNITS = (
 )
 
 
+_NAMES: dict[type, str] = {
+    inspect.StrType: "text",
+    inspect.IntType: "integer",
+    inspect.FloatType: "number",
+    inspect.BoolType: "yes/no",
+}
+
+
 @dataclass(frozen=True, slots=True)
 class FieldInfo:
-    """One key of a file. ``key`` is dotted, with ``[]`` where a table repeats; texts are empty where nothing applies."""
+    """One key of a file: ``key`` is dotted, ``[]`` marks a table that repeats; texts are empty where nothing applies."""
 
     key: str
     type: str
@@ -97,13 +105,7 @@ def _type(info: Any) -> str:
         return f"list of {len(info.item_types)} ({', '.join(dict.fromkeys(map(_type, info.item_types)))})"
     if isinstance(info, inspect.DictType):
         return f"table ({_type(info.value_type)})"
-    names = {
-        inspect.StrType: "text",
-        inspect.IntType: "integer",
-        inspect.FloatType: "number",
-        inspect.BoolType: "yes/no",
-    }
-    return names.get(type(info), type(info).__name__.removesuffix("Type").lower())
+    return _NAMES.get(type(info), type(info).__name__.removesuffix("Type").lower())
 
 
 def _range(info: Any) -> str:
@@ -126,7 +128,7 @@ def _range(info: Any) -> str:
 def _default(field: Any) -> str:
     if field.required:
         return "required"
-    value = field.default_factory() if field.default_factory is not inspect.NODEFAULT else field.default
+    value = field.default_factory() if field.default_factory is not msgspec.NODEFAULT else field.default
     if value is None:
         return "none"
     if isinstance(value, bool):

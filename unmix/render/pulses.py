@@ -20,7 +20,7 @@ import scipy.fft
 import scipy.signal
 from numpy.typing import NDArray
 
-__all__ = ["BAND_EDGE", "LEAD", "band_limit", "pulse_train"]
+__all__ = ["BAND_EDGE", "FINENESS", "LEAD", "ORDER", "band_limit", "band_limit_spectrum", "pulse_train"]
 
 Floats = NDArray[np.float64]
 
@@ -71,12 +71,13 @@ def pulse_train(delays: Floats, amplitudes: Floats, samples: int, *, order: int 
             factor = factor * (-1j * omega / power)
         grid = np.bincount(spot, weights=weight, minlength=length * FINENESS)
         spectrum += factor * scipy.fft.rfft(grid)[: omega.size]
-    spectrum *= _band_limit_spectrum(length)
+    spectrum *= band_limit_spectrum(length)
     return np.asarray(scipy.fft.irfft(spectrum, length)[: samples + 2 * LEAD])
 
 
 @lru_cache(maxsize=8)
-def _band_limit_spectrum(length: int) -> Floats:
+def band_limit_spectrum(length: int) -> Floats:
+    """W on the bins of a real FFT of ``length`` samples: (length // 2 + 1,), real."""
     taps = np.zeros(length)
     taps[: LEAD + 1] = band_limit()[LEAD:]
     taps[-LEAD:] = band_limit()[:LEAD]

@@ -43,7 +43,10 @@ class RoomSpec(_Strict, kw_only=True):
         float, Meta(ge=0.0, le=0.5, description="largest random displacement of image sources along each axis")
     ] = 0.08
     high_pass_hz: Annotated[
-        float, Meta(ge=0.0, le=200.0, description="edge below which clips are taken out before the room; 0: not at all")
+        float,
+        Meta(
+            ge=0.0, le=200.0, description="high-pass on every clip: image sources pile up pressure near 0 Hz; 0: none"
+        ),
     ] = 40.0
 
 
@@ -57,7 +60,7 @@ class ArraySpec(_Strict, kw_only=True):
         Meta(description="microphone at which references are received; default: the array file's, else 0"),
     ] = None
     centre_m: Annotated[
-        Triple | None, Meta(description="the array's origin in the room; default: the middle of the floor, 1.2 m up")
+        Triple | None, Meta(description="the array's origin in the room; default: near the middle, 1.2 m up")
     ] = None
     orientation: Annotated[
         str | None, Meta(description="the array turns: CSV with time_s, qw, qx, qy, qz, array to world")

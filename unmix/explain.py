@@ -39,7 +39,7 @@ _NAMES: dict[type, str] = {
 
 @dataclass(frozen=True, slots=True)
 class FieldInfo:
-    """One key of a file: ``key`` is dotted, ``[]`` marks a table that repeats; texts are empty where nothing applies."""
+    """One key of a file: ``key`` is dotted, ``[]`` marks a table that repeats; texts are empty where none apply."""
 
     key: str
     type: str

@@ -1,8 +1,8 @@
 """A clip read at delays that change from sample to sample, exactly.
 
-The clip is laid on a grid Q times finer together with its derivatives, all from one FFT, and each sample is expanded about
-the nearest point of that grid: clip(t - tau) = sum_l d^l/l! clip^(l)(t0), |d| <= 1/2 of the fine grid. The error is that of
-`unmix.render.pulses`: under -105 dB up to its band edge, beyond which the clip is low-passed in the same way.
+The clip is laid on a grid Q times finer together with its derivatives, all from one FFT, and each sample is expanded
+about the nearest point of that grid: clip(t - tau) = sum_l d^l/l! clip^(l)(t0), |d| <= 1/2 of the fine grid. The error
+is that of `unmix.render.pulses`, whose low-pass the clip passes on the way.
 """
 
 from __future__ import annotations

@@ -24,7 +24,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["DEFAULT_JITTER_M", "ImageField", "Images", "image_field"]
+__all__ = ["DEFAULT_JITTER_M", "ImageField", "Images", "NearImages", "image_field", "wall_product"]
 
 Floats = NDArray[np.float64]
 Counts = NDArray[np.int16]
@@ -48,12 +48,17 @@ class Images:
 
     def amplitude(self, reflection: Floats) -> Floats:
         """Product of the walls' reflection factors ``reflection`` (6,) for each image, (images,)."""
-        if np.all(reflection == reflection[0]):
-            return np.asarray(_powers(reflection[0], int(self.order.max(initial=0)))[self.order])
-        total = np.ones(self.positions_m.shape[1])
-        for count, factor in zip(self.walls, reflection, strict=True):
-            total *= _powers(factor, int(count.max(initial=0)))[count]
-        return total
+        return wall_product(self.walls, reflection)
+
+
+@dataclass(frozen=True, slots=True)
+class NearImages:
+    """Images of few reflections as functions of the source's place s: ``sign * s + offset_m``, (3, images) each."""
+
+    sign: Floats
+    offset_m: Floats
+    walls: Counts
+    direct: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,9 +85,25 @@ class ImageField:
             places[:, direct] = source_m
         return Images(places, walls, direct)
 
+    def nearest(self, order: int) -> NearImages:
+        """The images of at most ``order`` reflections, for a source at any place."""
+        n, p = (np.stack(np.meshgrid(*axes, indexing="ij")).reshape(3, -1) for axes in self._indices())
+        walls = np.stack([count for axis in range(3) for count in (np.abs(n - p)[axis], np.abs(n)[axis])])
+        kept = np.flatnonzero(walls.sum(axis=0) <= order)
+        n, p, walls = n[:, kept], p[:, kept], walls[:, kept].astype(np.int16)
+        direct = int(np.flatnonzero(~walls.any(axis=0))[0])
+        offset = 2.0 * n * self.size_m[:, None]
+        if self.jitter_m is not None:
+            offset += self.jitter_m[:, kept]
+            offset[:, direct] = 0.0
+        return NearImages((1 - 2 * p).astype(np.float64), offset, walls, direct)
+
+    def _indices(self) -> tuple[list[NDArray[np.int64]], list[NDArray[np.int64]]]:
+        """Lattice index and mirror flag along each axis, in the order in which images are counted."""
+        return [np.repeat(n, 2) for n in self.lattice], [np.tile([0, 1], n.size) for n in self.lattice]
+
     def _axis(self, axis: int, source: float) -> tuple[Floats, Counts, Counts]:
-        n = np.repeat(self.lattice[axis], 2)
-        p = np.tile([0, 1], self.lattice[axis].size)
+        n, p = (index[axis] for index in self._indices())
         place = (1 - 2 * p) * source + 2.0 * n * self.size_m[axis]
         return place, np.abs(n - p).astype(np.int16), np.abs(n).astype(np.int16)
 
@@ -105,6 +126,17 @@ def image_field(
         count = int(np.prod([2 * axis.size for axis in lattice]))
         jitter = rng.uniform(-jitter_m, jitter_m, (3, count))
     return ImageField(size, float(reach_m), (lattice[0], lattice[1], lattice[2]), jitter)
+
+
+def wall_product(walls: Counts, reflection: Floats) -> Floats:
+    """Product of the reflection factors ``reflection`` (6,) to the powers ``walls`` (6, images): (images,)."""
+    if np.all(reflection == reflection[0]):
+        order = walls.sum(axis=0, dtype=np.int64)
+        return np.asarray(_powers(reflection[0], int(order.max(initial=0)))[order])
+    total = np.ones(walls.shape[1])
+    for count, factor in zip(walls, reflection, strict=True):
+        total *= _powers(factor, int(count.max(initial=0)))[count]
+    return total
 
 
 def _powers(factor: float, last: int) -> Floats:

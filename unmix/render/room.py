@@ -15,7 +15,7 @@ from __future__ import annotations
 
 import math
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.signal
@@ -62,6 +62,7 @@ class Room:
     length_s: float
     jitter_m: float = DEFAULT_JITTER_M
     seed: int = 0
+    high_pass_hz: float = DEFAULT_HIGH_PASS_HZ
 
     def field(self, source: int) -> ImageField:
         """Image lattice of source number ``source``; each source has displacements of its own."""
@@ -122,7 +123,6 @@ def responses(
     sample_rate: int,
     *,
     source: int = 0,
-    high_pass_hz: float = DEFAULT_HIGH_PASS_HZ,
     early_s: float = EARLY_S,
 ) -> Responses:
     """Responses from ``source_m`` (3,) to the microphones ``mics_m`` (channels, 3), all in the room's coordinates.
@@ -150,7 +150,7 @@ def responses(
     with ThreadPoolExecutor(2) as pool:
         rows = list(pool.map(one, mics_m))
     direct_rows, early_rows, full_rows = (
-        high_pass(np.stack([row[kind] for row in rows]), sample_rate, high_pass_hz) for kind in range(3)
+        high_pass(np.stack([row[kind] for row in rows]), sample_rate, room.high_pass_hz) for kind in range(3)
     )
     return Responses(direct_rows, early_rows, full_rows, np.array([row[3] for row in rows]), sample_rate)
 
@@ -166,6 +166,7 @@ def build_room(
     sample_rate: int = 16000,
     jitter_m: float = DEFAULT_JITTER_M,
     seed: int = 0,
+    high_pass_hz: float = DEFAULT_HIGH_PASS_HZ,
 ) -> Room:
     """A room from its measured reverberation time or from its walls' absorption.
 
@@ -190,51 +191,39 @@ def build_room(
         raise InputError("room: give either t20_s or absorption, not both and not neither")
     if absorption is not None:
         alpha = np.broadcast_to(np.asarray(absorption, dtype=np.float64), (6,))
-        return Room(
-            size, np.sqrt(1.0 - alpha), speed_m_s, _length_from_absorption(size, alpha, speed_m_s), jitter_m, seed
-        )
+        length_s = _length_from_absorption(size, alpha, speed_m_s)
+        return Room(size, np.sqrt(1.0 - alpha), speed_m_s, length_s, jitter_m, seed, high_pass_hz)
     if sources_m is None or mic_m is None or t20_s is None:
         raise InputError("room: t20_s is measured at seats: give sources_m and mic_m")
-    return _walls_for_t20(size, t20_s, sources_m, mic_m, speed_m_s, sample_rate, jitter_m, seed)
+    blank = Room(size, np.ones(6), speed_m_s, max(1.1 * t20_s, 0.1), jitter_m, seed, high_pass_hz)
+    return _walls_for_t20(blank, t20_s, sources_m, mic_m, sample_rate)
 
 
-def _walls_for_t20(
-    size: Floats,
-    t20_s: float,
-    sources_m: Floats,
-    mic_m: Floats,
-    speed_m_s: float,
-    sample_rate: int,
-    jitter_m: float,
-    seed: int,
-) -> Room:
-    """Secant iteration on x = -ln(1 - alpha), to which the decay rate is nearly proportional."""
-    length_s = max(1.1 * t20_s, 0.1)
-    blank = Room(size, np.ones(6), speed_m_s, length_s, jitter_m, seed)
+def _walls_for_t20(blank: Room, t20_s: float, sources_m: Floats, mic_m: Floats, sample_rate: int) -> Room:
+    """``blank`` with the walls that give ``t20_s``: secant rule on x = -ln(1 - alpha), to which the decay rate is
+    nearly proportional."""
     seats = [blank.field(k).images(source, mic_m) for k, source in enumerate(sources_m)]
-    samples = math.ceil(length_s * sample_rate)
+
+    def walls(x: float) -> Room:
+        return replace(blank, reflection=np.full(6, math.exp(-0.5 * x)))
 
     def measured(x: float) -> float:
-        reflection = np.full(6, math.exp(-0.5 * x))
+        room = walls(x)
         with ThreadPoolExecutor(2) as pool:
-            times = list(
-                pool.map(lambda seat: _seat_t20(seat, mic_m, reflection, speed_m_s, sample_rate, samples), seats)
-            )
-        return float(np.mean(times))
+            return float(np.mean(list(pool.map(lambda seat: _seat_t20(room, seat, mic_m, sample_rate), seats))))
 
-    x = -math.log1p(-absorption_eyring(size, t20_s, speed_m_s))
+    x = -math.log1p(-absorption_eyring(blank.size_m, t20_s, blank.speed_m_s))
     history: list[tuple[float, float]] = []
     for _ in range(_T20_ROUNDS):
-        rate = 1.0 / measured(x)
-        history.append((x, rate))
-        if abs(rate * t20_s - 1.0) < _T20_TOLERANCE:
-            return Room(size, np.full(6, math.exp(-0.5 * x)), speed_m_s, length_s, jitter_m, seed)
+        history.append((x, 1.0 / measured(x)))
+        if abs(history[-1][1] * t20_s - 1.0) < _T20_TOLERANCE:
+            return walls(x)
         x = _next_absorption(history, 1.0 / t20_s)
         if not 1e-4 < x < 14.0:
             break
     raise UnsolvableError(
-        f"room: no absorption gives a measured T20 of {t20_s:g} s in a room of {_size_text(size)} "
-        f"(nearest {1.0 / history[-1][1]:.3f} s): change t20_s or size_m"
+        f"room: no absorption gives a measured T20 of {t20_s:g} s in a room of {_size_text(blank.size_m)} "
+        f"(last: {1.0 / history[-1][1]:.3f} s): change t20_s or size_m"
     )
 
 
@@ -251,13 +240,13 @@ def _next_absorption(history: list[tuple[float, float]], target: float) -> float
     return min(max(step, 0.5 * x1), 2.0 * x1)
 
 
-def _seat_t20(
-    seat: Images, mic_m: Floats, reflection: Floats, speed_m_s: float, sample_rate: int, samples: int
-) -> float:
+def _seat_t20(room: Room, seat: Images, mic_m: Floats, sample_rate: int) -> float:
     distance = np.sqrt(np.square(seat.positions_m - mic_m[:, None]).sum(axis=0))
-    delay = distance * (sample_rate / speed_m_s)
-    coarse = pulse_train(delay, seat.amplitude(reflection) / distance, samples, order=0)
-    decay = response_decay(high_pass(coarse, sample_rate), float(delay[seat.direct]) / sample_rate, sample_rate)
+    delay = distance * (sample_rate / room.speed_m_s)
+    samples = math.ceil(room.length_s * sample_rate)
+    coarse = pulse_train(delay, seat.amplitude(room.reflection) / distance, samples, order=0)
+    heard = high_pass(coarse, sample_rate, room.high_pass_hz)
+    decay = response_decay(heard, float(delay[seat.direct]) / sample_rate, sample_rate)
     # A room too dead to show 25 dB of decay behind the direct sound decays at once.
     return decay.t20_s if decay.t20_s is not None else 1e-3
 

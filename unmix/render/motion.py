@@ -1,0 +1,170 @@
+"""Talkers that move and arrays that turn: responses that change over time.
+
+The direct sound and all reflections of up to second order are exact at every sample (`FineClip`). Behind them, the
+tail is made of responses at places along the path, cross-faded linearly in distance moved. Half way between two places
+D metres apart, a wave of wavenumber k is then up to 1 - cos(k D/2) of its amplitude short: with 2 cm, 0.02 at 1 kHz
+(-36 dB), 0.07 at 2 kHz, 0.26 at 4 kHz, of the tail alone. References and mixture are cut from the same sound, so that
+truth and mixture agree exactly all the same.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from concurrent.futures import ThreadPoolExecutor
+
+import numpy as np
+from numpy.typing import NDArray
+
+from unmix.render.convolve import convolve_responses
+from unmix.render.fine import FineClip
+from unmix.render.images import ImageField, NearImages, wall_product
+from unmix.render.pulses import LEAD, pulse_train
+from unmix.render.room import EARLY_S, Room, high_pass
+from unmix.render.seats import Seat
+
+__all__ = ["render_moving"]
+
+Floats = NDArray[np.float64]
+Kinds = tuple[Floats, Floats, Floats]
+
+_EXACT_ORDER = 2
+_CHUNK = 8192
+_TAIL_EXPANSION = 3
+_EARLY_FADE_S = 0.001
+
+
+def render_moving(
+    clip: Floats,
+    seat: Seat,
+    room: Room | None,
+    sample_rate: int,
+    *,
+    speed_m_s: float,
+    reference: int,
+    source: int = 0,
+    path_step_m: float = 0.02,
+) -> Kinds:
+    """``clip`` (samples,) as heard while talker or array move.
+
+    Returns dry and early at microphone ``reference`` (samples,) and the image at all (channels, samples).
+    """
+    if room is None:
+        return _near_sound(clip, seat, None, None, sample_rate, speed_m_s, reference)
+    clip = high_pass(clip, sample_rate, room.high_pass_hz)
+    field = room.field(source)
+    near = field.nearest(_EXACT_ORDER)
+    dry, early, image = _near_sound(clip, seat, near, room, sample_rate, speed_m_s, reference)
+    early_tail, tail = _tail_sound(clip, seat, room, field, sample_rate, reference, path_step_m)
+    return dry, early + early_tail, image + tail
+
+
+def _near_sound(
+    clip: Floats,
+    seat: Seat,
+    near: NearImages | None,
+    room: Room | None,
+    sample_rate: int,
+    speed_m_s: float,
+    reference: int,
+) -> Kinds:
+    """Direct sound and first reflections, exact at every sample."""
+    starts = range(0, clip.size, _CHUNK)
+    per_metre = sample_rate / speed_m_s
+
+    def chunk(start: int) -> Kinds:
+        sample = np.arange(start, min(start + _CHUNK, clip.size))
+        time_s = sample / sample_rate
+        length, amplitude = seat.straight(time_s)
+        paths = [(length, amplitude)]
+        if near is not None and room is not None:
+            paths += _reflections(near, room, seat, time_s)
+        delays = [path * per_metre for path, _ in paths]
+        first = math.floor(sample[0] - max(d.max() for d in delays))
+        fine = FineClip(clip, first, math.ceil(sample[-1] - min(d.min() for d in delays)))
+        heard = [gain.T * fine.at(sample - d.T) for (_, gain), d in zip(paths, delays, strict=True)]
+        early = heard[0][reference].copy()
+        for sound, d in zip(heard[1:], delays[1:], strict=True):
+            ahead = delays[0][:, reference] + EARLY_S * sample_rate - d[:, reference]
+            early += np.clip(0.5 + ahead / (_EARLY_FADE_S * sample_rate), 0.0, 1.0) * sound[reference]
+        return heard[0][reference], early, np.sum(heard, axis=0)
+
+    with ThreadPoolExecutor(2) as pool:
+        parts = list(pool.map(chunk, starts))
+    return (
+        np.concatenate([p[0] for p in parts]),
+        np.concatenate([p[1] for p in parts]),
+        np.concatenate([p[2] for p in parts], axis=1),
+    )
+
+
+def _reflections(near: NearImages, room: Room, seat: Seat, time_s: Floats) -> Iterator[tuple[Floats, Floats]]:
+    """Length and amplitude of each reflected path, (times, channels) each."""
+    source, mics = seat.source(time_s), seat.microphones(time_s)
+    gains = wall_product(near.walls, room.reflection)
+    for index, gain in enumerate(gains):
+        if index == near.direct:
+            continue
+        image = near.sign[:, index] * source + near.offset_m[:, index]
+        length = np.linalg.norm(image[:, None, :] - mics, axis=-1)
+        yield length, gain / length
+
+
+def _tail_sound(
+    clip: Floats, seat: Seat, room: Room, field: ImageField, sample_rate: int, reference: int, path_step_m: float
+) -> tuple[Floats, Floats]:
+    """What comes behind the exact images: its early part at ``reference``, and all of it at all microphones."""
+    knots_s, weights = _path(seat, clip.size, sample_rate, path_step_m)
+    early, image = np.zeros(clip.size), np.zeros((len(seat.mics_m), clip.size))
+
+    def block(knot: int) -> tuple[slice, Floats]:
+        source, mics = seat.source(knots_s[[knot]])[0], seat.microphones(knots_s[[knot]])[0]
+        rows = _tail_responses(room, field, source, mics, sample_rate, reference)
+        weight = np.maximum(1.0 - np.abs(weights - knot), 0.0)
+        heard_at = np.flatnonzero(weight)
+        start, stop = int(heard_at[0]), int(heard_at[-1]) + 1
+        first = max(0, start - rows.shape[1])
+        sound = convolve_responses(clip[first : stop + LEAD], rows, LEAD, stop - first)[:, start - first :]
+        return slice(start, stop), weight[start:stop] * sound
+
+    with ThreadPoolExecutor(2) as pool:
+        for place, sound in pool.map(block, range(len(knots_s))):
+            early[place] += sound[0]
+            image[:, place] += sound[1:]
+    return early, image
+
+
+def _tail_responses(
+    room: Room, field: ImageField, source_m: Floats, mics_m: Floats, sample_rate: int, reference: int
+) -> Floats:
+    """Responses of all images beyond the exact ones: the early part at ``reference``, then all microphones in full."""
+    images = field.images(source_m, mics_m.mean(axis=0))
+    gain = images.amplitude(room.reflection)
+    kept = np.flatnonzero((images.order > _EXACT_ORDER) & (gain > 1e-7))
+    places, gain = images.positions_m[:, kept], gain[kept]
+    samples = math.ceil(room.length_s * sample_rate) + 1
+    rows = []
+    for channel, mic in enumerate(mics_m):
+        length = np.sqrt(np.square(places - mic[:, None]).sum(axis=0))
+        delay, amplitude = length * (sample_rate / room.speed_m_s), gain / length
+        rows.append(pulse_train(delay, amplitude, samples, order=_TAIL_EXPANSION))
+        if channel == reference:
+            direct = float(np.linalg.norm(source_m - mic)) / room.speed_m_s
+            soon = np.flatnonzero(delay <= (direct + EARLY_S) * sample_rate)
+            rows.insert(0, pulse_train(delay[soon], amplitude[soon], samples, order=_TAIL_EXPANSION))
+    return np.stack(rows)
+
+
+def _path(seat: Seat, samples: int, sample_rate: int, step_m: float) -> tuple[Floats, Floats]:
+    """Times of the knots, and for each sample its place among them (between knots k and k+1: from k to k+1)."""
+    coarse_s = np.arange(0.0, samples / sample_rate + 0.01, 0.01)
+    source, mics = seat.source(coarse_s), seat.microphones(coarse_s)
+    talker_m = np.linalg.norm(np.diff(source, axis=0), axis=1)
+    array_m = np.linalg.norm(np.diff(mics, axis=0), axis=2).max(axis=1)
+    moved_m = np.concatenate([[0.0], np.cumsum(talker_m + array_m)])
+    count = max(2, math.ceil(moved_m[-1] / step_m) + 1)
+    # Standing still moves nothing: a hair of slope keeps the path invertible.
+    moved_m += 1e-9 * coarse_s
+    knots_s = np.interp(np.linspace(0.0, moved_m[-1], count), moved_m, coarse_s)
+    place = np.interp(np.arange(samples) / sample_rate, coarse_s, moved_m) / moved_m[-1] * (count - 1)
+    return knots_s, place

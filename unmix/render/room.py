@@ -14,6 +14,7 @@ mixture stay consistent.
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 
@@ -34,6 +35,7 @@ __all__ = [
     "absorption_eyring",
     "build_room",
     "eyring_s",
+    "free_field",
     "high_pass",
     "response_decay",
     "responses",
@@ -155,13 +157,21 @@ def responses(
     return Responses(direct_rows, early_rows, full_rows, np.array([row[3] for row in rows]), sample_rate)
 
 
+def free_field(length_m: Floats, amplitude: Floats, sample_rate: int, *, speed_m_s: float) -> Responses:
+    """Responses without a room, from the length and amplitude of the direct path to each microphone, (channels,)."""
+    delay = length_m * (sample_rate / speed_m_s)
+    samples = math.ceil(float(delay.max())) + 1
+    direct = np.stack([pulse_train(d[None], a[None], samples) for d, a in zip(delay, amplitude, strict=True)])
+    return Responses(direct, direct, direct, delay / sample_rate, sample_rate)
+
+
 def build_room(
     size_m: Floats,
     *,
     speed_m_s: float,
     t20_s: float | None = None,
     absorption: float | Floats | None = None,
-    sources_m: Floats | None = None,
+    sources_m: Floats | Mapping[int, Floats] | None = None,
     mic_m: Floats | None = None,
     sample_rate: int = 16000,
     jitter_m: float = DEFAULT_JITTER_M,
@@ -175,7 +185,8 @@ def build_room(
     size_m : (3,)
         Length, width, height in metres.
     t20_s : float, optional
-        Reverberation time to be measured, as the mean over ``sources_m`` (sources, 3) heard at ``mic_m`` (3,).
+        Reverberation time to be measured, as the mean over ``sources_m`` (sources, 3) heard at ``mic_m`` (3,). A
+        mapping gives the sources' numbers, as in `responses`.
     absorption : float or (6,), optional
         Energy absorbed by the walls x=0, x=L, y=0, y=L, z=0, z=L, instead.
 
@@ -196,13 +207,14 @@ def build_room(
     if sources_m is None or mic_m is None or t20_s is None:
         raise InputError("room: t20_s is measured at seats: give sources_m and mic_m")
     blank = Room(size, np.ones(6), speed_m_s, max(1.1 * t20_s, 0.1), jitter_m, seed, high_pass_hz)
-    return _walls_for_t20(blank, t20_s, sources_m, mic_m, sample_rate)
+    numbered = sources_m if isinstance(sources_m, Mapping) else dict(enumerate(sources_m))
+    return _walls_for_t20(blank, t20_s, numbered, mic_m, sample_rate)
 
 
-def _walls_for_t20(blank: Room, t20_s: float, sources_m: Floats, mic_m: Floats, sample_rate: int) -> Room:
+def _walls_for_t20(blank: Room, t20_s: float, sources_m: Mapping[int, Floats], mic_m: Floats, sample_rate: int) -> Room:
     """``blank`` with the walls that give ``t20_s``: secant rule on x = -ln(1 - alpha), to which the decay rate is
     nearly proportional."""
-    seats = [blank.field(k).images(source, mic_m) for k, source in enumerate(sources_m)]
+    seats = [blank.field(k).images(source, mic_m) for k, source in sources_m.items()]
 
     def walls(x: float) -> Room:
         return replace(blank, reflection=np.full(6, math.exp(-0.5 * x)))

@@ -12,9 +12,10 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from unmix.solvers.snapshots import SnapshotSolver
 from unmix.solvers.stationary import FilterBank
 
-__all__ = ["BlockSeparator", "FilterBankSeparator", "Separator", "run"]
+__all__ = ["BlockSeparator", "FilterBankSeparator", "Separator", "SnapshotSeparator", "run"]
 
 Floats = NDArray[np.float64]
 SolveBlock = Callable[[Floats, int], Floats]
@@ -122,3 +123,18 @@ class FilterBankSeparator:
 
     def _join(self, ready: list[Floats]) -> Floats:
         return np.concatenate(ready, axis=1) if ready else np.zeros((self._bank.taps.shape[0], 0))
+
+
+class SnapshotSeparator:
+    """Every snapshot alone: one talker, nothing held back."""
+
+    def __init__(self, solver: SnapshotSolver) -> None:
+        self._solver = solver
+
+    def push(self, chunk: Floats) -> Floats:
+        """Take (channels, n) samples; return (1, n)."""
+        return self._solver.solve(chunk)[0][:1]
+
+    def flush(self) -> Floats:
+        """Nothing is held back."""
+        return np.zeros((1, 0))

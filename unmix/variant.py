@@ -1,0 +1,191 @@
+"""A variant: one complete choice of settings, as a named preset or a TOML file."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+import msgspec
+from msgspec import Meta
+
+from unmix.errors import FileError, InputError
+from unmix.explain import FieldInfo, explain_fields
+from unmix.files import read_toml
+
+__all__ = ["PRESETS", "ModelSettings", "SolverSettings", "Variant", "describe_fields", "load_variant"]
+
+
+class _Strict(msgspec.Struct, forbid_unknown_fields=True, kw_only=True, frozen=True):
+    pass
+
+
+class ModelSettings(_Strict, kw_only=True, frozen=True):
+    """How a delayed talker is written with its derivatives."""
+
+    anchor: Annotated[Literal["nearest", "own"], Meta(description="sample about which delays are expanded")] = "nearest"
+    order: Annotated[int, Meta(ge=0, le=12, description="highest derivative of the expansion")] = 6
+    differentiator: Annotated[
+        Literal["least-squares", "finite-difference"], Meta(description="family of derivative filters")
+    ] = "least-squares"
+    error_db: Annotated[
+        float,
+        Meta(ge=-120.0, le=0.0, description="error allowed for a delay of half a sample; sets the filters' width"),
+    ] = -50.0
+    band_edge: Annotated[
+        float,
+        Meta(gt=0.0, lt=1.0, description="where that error must still hold, as a fraction of the Nyquist frequency"),
+    ] = 0.85
+    half_width: Annotated[
+        Annotated[int, Meta(ge=1, le=64)] | None,
+        Meta(description="width of the filters in samples to either side, instead of chosen"),
+    ] = None
+    wave: Annotated[
+        Literal["auto", "plane"], Meta(description="auto: spherical where a distance is given; plane: never")
+    ] = "auto"
+
+
+class SolverSettings(_Strict, kw_only=True, frozen=True):
+    """How each block is solved."""
+
+    constraint: Annotated[
+        Literal["tied", "propagated", "free"], Meta(description="what couples the jets of neighbouring samples")
+    ] = "tied"
+    method: Annotated[
+        Literal["stationary", "reduced", "kkt", "convex"], Meta(description="how the least-squares problem is solved")
+    ] = "stationary"
+    noise: Annotated[
+        Literal["white", "diffuse", "measured", "fitted", "observed"], Meta(description="covariance of the noise")
+    ] = "white"
+    self_noise_db: Annotated[
+        float, Meta(ge=-60.0, le=20.0, description="microphones' own noise relative to the diffuse field")
+    ] = -20.0
+    whitening_half_width: Annotated[
+        int, Meta(ge=4, le=400, description="samples that the whitening filter reaches to either side")
+    ] = 64
+    prior: Annotated[
+        Literal["none", "flat", "speech"], Meta(description="what is believed of a talker before listening")
+    ] = "flat"
+    prior_weight: Annotated[
+        float, Meta(ge=0.0, le=10.0, description="weight of the prior, relative to the mean diagonal of H'R^-1 H")
+    ] = 1e-6
+    tail: Annotated[
+        float, Meta(gt=0.0, le=0.1, description="share of a filter's magnitude that its cut-off tail may hold")
+    ] = 1e-6
+    block_s: Annotated[
+        Annotated[float, Meta(gt=0.0, le=120.0)] | None,
+        Meta(description="seconds kept of each block, instead of four margins"),
+    ] = None
+    hold_s: Annotated[float, Meta(gt=0.0, le=0.1, description="seconds for which moving delays are held")] = 1e-3
+    huber: Annotated[
+        Annotated[float, Meta(gt=0.0)] | None,
+        Meta(description="convex: residual, in noise deviations, beyond which it counts linearly"),
+    ] = None
+    clip_level: Annotated[
+        Annotated[float, Meta(gt=0.0, le=1.0)] | None,
+        Meta(description="convex: magnitude from which a sample counts as clipped"),
+    ] = None
+    peak: Annotated[
+        Annotated[float, Meta(gt=0.0)] | None, Meta(description="convex: bound on the magnitude of each talker")
+    ] = None
+    convex_solver: Annotated[Literal["CLARABEL", "OSQP"], Meta(description="convex: which solver")] = "CLARABEL"
+
+
+class Variant(_Strict, kw_only=True, frozen=True):
+    """One complete choice of settings."""
+
+    name: Annotated[str, Meta(description="name in tables and reports")] = ""
+    summary: Annotated[str, Meta(description="one line on what it is for")] = ""
+    base: Annotated[str | None, Meta(description="preset that the file starts from (default: full)")] = None
+    separator: Annotated[
+        Literal["model", "reference-mic", "delay-and-sum", "minimum-variance", "linear-constraint"],
+        Meta(description="the model, or a baseline to compare with"),
+    ] = "model"
+    model: ModelSettings = ModelSettings()
+    solver: SolverSettings = SolverSettings()
+
+    def to_dict(self) -> dict[str, Any]:
+        """The variant as plain values, the form in which it stands in results."""
+        tree: dict[str, Any] = msgspec.to_builtins(self)
+        return tree
+
+
+PRESETS: dict[str, Variant] = {
+    v.name: v
+    for v in (
+        Variant(
+            name="reference-mic",
+            separator="reference-mic",
+            summary="the unprocessed reference microphone, once per talker",
+        ),
+        Variant(
+            name="delay-and-sum",
+            separator="delay-and-sum",
+            summary="microphones aligned to each talker and averaged",
+        ),
+        Variant(
+            name="minimum-variance",
+            separator="minimum-variance",
+            summary="each talker kept, the diffuse field minimised",
+        ),
+        Variant(
+            name="linear-constraint",
+            separator="linear-constraint",
+            summary="each talker kept, the others cancelled, the diffuse field minimised",
+        ),
+        Variant(name="model", summary="the delay model alone: anechoic or nearly so, and the least latency of thought"),
+    )
+}
+"""Variants by name; the last ones with the room stage."""
+
+
+def load_variant(variant: str | Path | Variant) -> Variant:
+    """A preset by name, a TOML file, or a variant as it is.
+
+    A file states only what differs from its `base` preset. Raises InputError for an unknown name or field (with the nearest
+    known one), FileError for a missing file.
+    """
+    if isinstance(variant, Variant):
+        return variant
+    name = str(variant)
+    if name in PRESETS:
+        return PRESETS[name]
+    path = Path(variant)
+    if path.suffix != ".toml" and not path.exists():
+        import difflib
+
+        near = difflib.get_close_matches(name, PRESETS, n=1)
+        hint = f"did you mean {near[0]!r}?" if near else f"presets: {', '.join(PRESETS)}"
+        raise InputError(f"no variant {name!r}; {hint} A variant file ends in .toml")
+    return _from_file(path)
+
+
+def _from_file(path: Path) -> Variant:
+    import tomllib
+
+    read_toml(path, Variant)  # names what is wrong, with the file
+    try:
+        tree = tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise FileError(f"{path}: cannot be read ({error.strerror})") from None
+    base = tree.get("base", DEFAULT)
+    if base not in PRESETS:
+        raise InputError(f"{path}: key `base`: no preset {base!r}; presets: {', '.join(PRESETS)}")
+    merged = _merge(PRESETS[base].to_dict(), {"name": path.stem, "summary": "", **tree})
+    return msgspec.convert(merged, Variant)
+
+
+def _merge(below: dict[str, Any], above: dict[str, Any]) -> dict[str, Any]:
+    merged = dict(below)
+    for key, value in above.items():
+        under = merged.get(key)
+        merged[key] = _merge(under, value) if isinstance(under, dict) and isinstance(value, dict) else value
+    return merged
+
+
+DEFAULT = "model"
+"""Preset used when none is named."""
+
+
+def describe_fields() -> list[FieldInfo]:
+    """Every field of a variant: key, type, unit, range, default, meaning."""
+    return explain_fields(Variant)

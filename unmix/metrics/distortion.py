@@ -1,0 +1,307 @@
+"""Distortion ratios: BSS Eval version 3 and SI-SDR.
+
+An estimate e is split against K references s_1..s_K, each of which may pass through any causal filter of L taps
+[1]_. With P_j the projection on the L delayed copies of s_j and P that on all K L of them,
+
+    s_target = P_j e,    e_interf = P e - P_j e,    e_artif = e - P e
+    SDR = |s_target|^2 / |e_interf + e_artif|^2
+    SIR = |s_target|^2 / |e_interf|^2
+    SAR = |s_target + e_interf|^2 / |e_artif|^2
+
+The three parts are orthogonal, so their energies are all that is needed. The delayed copies' Gram matrix G (K L x K L,
+block Toeplitz) depends on the references alone: a `ReferenceSet` factors it once and splits any number of estimates.
+With D the correlations of e with the delayed copies, G c = D and G_jj c_j = D_j,
+
+    |s_target|^2 = c_j' G_jj c_j,    |e_interf|^2 = (c - c_j)' G (c - c_j),
+
+both free of cancellation; |e_artif|^2 is summed over the filtered signals themselves.
+
+SI-SDR [2]_ allows one gain instead of a filter: a = <e, s> / |s|^2, SI-SDR = |a s|^2 / |a s - e|^2.
+
+.. [1] E. Vincent, R. Gribonval, C. Fevotte, "Performance measurement in blind audio source separation", IEEE Trans.
+   Audio, Speech and Language Processing 14(4), 2006.
+.. [2] J. Le Roux, S. Wisdom, H. Erdogan, J. R. Hershey, "SDR - half-baked or well done?", ICASSP 2019.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import scipy.fft
+import scipy.linalg
+from numpy.typing import NDArray
+
+__all__ = ["FILTER_LENGTH", "Distortion", "ReferenceSet", "describe_unusable", "si_sdr_db"]
+
+Floats = NDArray[np.float64]
+Signals = NDArray[np.floating[Any]]
+
+FILTER_LENGTH = 512
+ROUNDING_DB = 200.0
+"""Beyond this ratio what is left is the rounding of double precision, not an error of the estimate."""
+
+DEPENDENT = 1e-4
+"""A reference of whose innovation the others leave less than this (-40 dB) is a filtered copy of them."""
+
+SINGULAR = 1e-14
+RIDGE = 1e-13
+"""When pivots differ by more than this (references without energy in part of the band) G gets a ridge on its diagonal."""
+
+GROUP = 4
+"""Frames transformed at a time: few enough for the processor's cache."""
+KEEP_BYTES = 200e6
+"""Spectra of the references are kept for the next estimates up to this size, else computed anew each time."""
+
+
+def describe_unusable(signal: Signals) -> str | None:
+    """Why no ratio can be formed with `signal` (samples,): it is empty, silent or not finite; None when it is usable."""
+    if signal.size == 0:
+        return "is empty"
+    if not np.isfinite(signal).all():
+        return "holds NaN or infinite samples"
+    if not signal.any():
+        return "is silent"
+    return None
+
+
+@dataclass(frozen=True)
+class Distortion:
+    """Ratios of every estimate against every reference, (estimates, references), in dB; NaN where undefined.
+
+    `undefined` gives the reason, keyed by (figure, estimate, reference).
+    """
+
+    sdr_db: Floats
+    sir_db: Floats
+    sar_db: Floats
+    undefined: dict[tuple[str, int, int], str]
+
+
+class ReferenceSet:
+    """References against which any number of estimates are split; the Gram matrix is built and factored once.
+
+    Parameters
+    ----------
+    references : (references, samples)
+        Aligned with the estimates to come, see `unmix.metrics.alignment`. A silent or non-finite one is left out:
+        figures against it are undefined, those against the others are as if it were not there.
+    filter_length : int
+        Taps L of the allowed filter.
+
+    Attributes
+    ----------
+    ridged : bool
+        Whether a reference is so nearly band-limited that a ridge was needed to factor G.
+    """
+
+    def __init__(self, references: Signals, *, filter_length: int = FILTER_LENGTH) -> None:
+        self.references = references
+        self.filter_length = filter_length
+        self.unusable = {
+            k: f"the reference {why}" for k, s in enumerate(references) if (why := describe_unusable(s)) is not None
+        }
+        self._usable = [k for k in range(len(references)) if k not in self.unusable]
+        self.ridged = False
+        self.dependent = False
+        self._kept: dict[int, NDArray[np.complex128]] = {}
+        self._too_short = references.shape[1] < max(1, len(self._usable)) * filter_length
+        if self._usable and not self._too_short:
+            self._factor()
+
+    def _factor(self) -> None:
+        L, K = self.filter_length, len(self._usable)
+        # r[i, j, d] = sum_n s_i[n] s_j[n - d]
+        r = self._correlate(self.references[self._usable])
+        scale = r[np.arange(K), np.arange(K), 0]
+        self._scale = np.sqrt(scale)
+        r = r / (self._scale[:, None, None] * self._scale[None, :, None])
+        G = np.empty((K * L, K * L))
+        for i in range(K):
+            for j in range(K):
+                G[i * L : (i + 1) * L, j * L : (j + 1) * L] = scipy.linalg.toeplitz(r[j, i], r[i, j])
+        self._G = G
+        own = [slice(k * L, (k + 1) * L) for k in range(K)]
+        self._own_factors = [self._cholesky(G[s, s]) for s in own]
+        self._factor_all = self._own_factors[0] if K == 1 else self._cholesky(G)
+        # Pivots are innovations: of a delayed copy given its reference's later ones, and given all references before.
+        given_own = np.concatenate([np.diag(c) for c in self._own_factors])
+        self.dependent = bool(np.min(np.diag(self._factor_all) / given_own) ** 2 < DEPENDENT)
+
+    def _cholesky(self, G: Floats) -> Floats:
+        """Lower Cholesky factor of the symmetric G, with a ridge when G is singular to working precision."""
+        factor, failed = scipy.linalg.lapack.dpotrf(G.T, lower=1, clean=0)
+        if not failed:
+            pivots = np.diag(factor) ** 2
+            if pivots.min() > SINGULAR * pivots.max():
+                return np.asarray(factor)
+        self.ridged = True
+        ridged = G + RIDGE * len(G) * np.eye(len(G))
+        return np.asarray(scipy.linalg.cholesky(ridged, lower=True, check_finite=False))
+
+    def split(self, estimates: Signals) -> Distortion:
+        """SDR, SIR, SAR of `estimates` (estimates, samples) against every reference; samples as the references'."""
+        shape = (len(estimates), len(self.references))
+        sdr, sir, sar = (np.full(shape, np.nan) for _ in range(3))
+        undefined: dict[tuple[str, int, int], str] = {}
+        bad = {e: why for e, signal in enumerate(estimates) if (why := describe_unusable(signal)) is not None}
+        good = [e for e in range(len(estimates)) if e not in bad]
+        if good and self._usable and not self._too_short:
+            target, interference, artifacts = self._energies(estimates[good])
+            cells = np.ix_(good, self._usable)
+            sdr[cells] = _ratio_db(target, interference + artifacts[:, None])
+            sir[cells] = _ratio_db(target, interference)
+            sar[cells] = _ratio_db(target + interference, artifacts[:, None])
+        for e, k in np.ndindex(*shape):
+            for figure, values in (("sdr_db", sdr), ("sir_db", sir), ("sar_db", sar)):
+                reason = self._why_undefined(figure, e, k, bad, values[e, k])
+                if reason is not None:
+                    values[e, k] = np.nan
+                    undefined[figure, e, k] = reason
+        return Distortion(sdr, sir, sar, undefined)
+
+    def _why_undefined(self, figure: str, e: int, k: int, bad: dict[int, str], value: float) -> str | None:
+        if k in self.unusable:
+            return self.unusable[k]
+        if e in bad:
+            return f"the estimate {bad[e]}"
+        if self._too_short:
+            needed = len(self._usable) * self.filter_length
+            return f"too short: {self.references.shape[1]} samples, and the filters have {needed} taps"
+        if figure == "sir_db" and len(self._usable) == 1:
+            return "there is one reference, so nothing can interfere"
+        if figure == "sir_db" and self.dependent:
+            return "a reference is a filtered copy of the others, so interference cannot be told from the talker"
+        if np.isnan(value):
+            return "the estimate is orthogonal to the reference"
+        if value > ROUNDING_DB:
+            return "nothing is left but rounding: the estimate is the reference, filtered"
+        return None
+
+    def contributions(self, estimates: Signals) -> Floats:
+        """Energy of each filtered reference in the joint projection of each usable estimate: (estimates, references).
+
+        |c_k s_k|^2 for P e = sum_k c_k s_k; NaN for references left out. Unlike the split above the contributions are
+        not orthogonal; they are what each reference adds.
+        """
+        energies = np.full((len(estimates), len(self.references)), np.nan)
+        if not self._usable or self._too_short:
+            return energies
+        L = self.filter_length
+        D = self._scaled_correlations(estimates)
+        c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(len(estimates), -1).T, check_finite=False)
+        for i, k in enumerate(self._usable):
+            own = slice(i * L, (i + 1) * L)
+            energies[:, k] = _quadratic(self._G[own, own], c[own])
+        return energies
+
+    def _energies(self, estimates: Signals) -> tuple[Floats, Floats, Floats]:
+        """|s_target|^2 and |e_interf|^2, (estimates, usable references), and |e_artif|^2, (estimates,)."""
+        E, K, L = len(estimates), len(self._usable), self.filter_length
+        D = self._scaled_correlations(estimates)
+        c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(E, K * L).T, check_finite=False)
+        target = np.empty((E, K))
+        differences = np.repeat(c[:, None, :], K, axis=1)
+        for j in range(K):
+            own = slice(j * L, (j + 1) * L)
+            c_j = scipy.linalg.cho_solve((self._own_factors[j], True), D[:, j].T, check_finite=False)
+            target[:, j] = np.einsum("le,el->e", c_j, D[:, j])
+            differences[own, j] -= c_j
+        interference = _quadratic(self._G, differences.reshape(K * L, K * E)).reshape(K, E).T
+        filters = c.T.reshape(E, K, L) / self._scale[:, None]
+        return target, interference, self._residual_energy(estimates, filters)
+
+    def _scaled_correlations(self, estimates: Signals) -> Floats:
+        return self._correlate(estimates) / self._scale[:, None]
+
+    def _correlate(self, signals: Signals) -> Floats:
+        """D[e, k, l] = sum_n signals[e, n] s_k[n - l], l = 0..L-1: (signals, usable references, L)."""
+        total = 0.0
+        for group in range(self._groups):
+            spectra = np.conj(scipy.fft.rfft(self._own_frames(signals, group), n=self._frame, axis=-1))
+            total = total + np.einsum("etf,ktf->ekf", spectra, self._spectra(group))
+        # The references' frames start L - 1 samples before the signals', so lag L - 1 comes first.
+        return np.asarray(scipy.fft.irfft(total, n=self._frame, axis=-1)[..., self.filter_length - 1 :: -1])
+
+    def _residual_energy(self, estimates: Signals, filters: Floats) -> Floats:
+        """|e - sum_k c_k * s_k|^2 per estimate; `filters` (estimates, usable references, L)."""
+        transfer = scipy.fft.rfft(filters, n=self._frame, axis=-1)
+        energy = np.zeros(len(estimates))
+        for group in range(self._groups):
+            spectra = np.einsum("ekf,ktf->etf", transfer, self._spectra(group))
+            filtered = scipy.fft.irfft(spectra, n=self._frame, axis=-1)[..., self.filter_length - 1 :]
+            rest = self._own_frames(estimates, group) - filtered
+            energy += np.einsum("etn,etn->e", rest, rest)
+        return energy
+
+    def _own_frames(self, signals: Signals, group: int) -> Floats:
+        """A group of frames of `signals` side by side: (signals, frames, hop)."""
+        size = GROUP * self._hop
+        return _stretch(signals, group * size, (group + 1) * size).reshape(len(signals), GROUP, self._hop)
+
+    def _spectra(self, group: int) -> NDArray[np.complex128]:
+        """Spectra of the usable references' frames, each from L - 1 samples before its hop: (usable, frames, bins)."""
+        if group not in self._kept:
+            start = group * GROUP * self._hop - (self.filter_length - 1)
+            stretch = _stretch(self.references[self._usable], start, start + GROUP * self._hop + self.filter_length - 1)
+            frames = np.lib.stride_tricks.sliding_window_view(stretch, self._frame, axis=1)[:, :: self._hop]
+            spectra = scipy.fft.rfft(frames, axis=-1)
+            if self._groups * spectra.nbytes > KEEP_BYTES:
+                return np.asarray(spectra)
+            self._kept[group] = spectra
+        return self._kept[group]
+
+    @property
+    def _frame(self) -> int:
+        return int(scipy.fft.next_fast_len(16 * self.filter_length, real=True))
+
+    @property
+    def _hop(self) -> int:
+        return self._frame - self.filter_length + 1
+
+    @property
+    def _groups(self) -> int:
+        """Groups of frames that cover the references and the tails of their filtered copies."""
+        return -(-(self.references.shape[1] + self.filter_length - 1) // (GROUP * self._hop))
+
+
+def _stretch(signals: Signals, start: int, stop: int) -> Floats:
+    """`signals[:, start:stop]` with zeros outside the samples there are."""
+    stretch = np.zeros((len(signals), stop - start))
+    low, high = max(0, start), min(signals.shape[1], stop)
+    if low < high:
+        stretch[:, low - start : high - start] = signals[:, low:high]
+    return stretch
+
+
+def _quadratic(G: Floats, c: Floats) -> Floats:
+    """c' G c for each column of c; rounding below zero counts as zero."""
+    return np.maximum(np.einsum("ie,ie->e", c, G @ c), 0.0)
+
+
+def _ratio_db(numerator: Floats, denominator: Floats) -> Floats:
+    """10 log10 of the ratio: infinite where nothing stands below the line, NaN where nothing stands above it."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        ratio = 10.0 * np.log10(np.where(numerator > 0.0, numerator, np.nan) / denominator)
+    return np.asarray(ratio)
+
+
+def si_sdr_db(estimate: Signals, reference: Signals) -> tuple[float | None, str | None]:
+    """Scale-invariant signal-to-distortion ratio of one estimate, and the reason when it is undefined.
+
+    Both (samples,), aligned to a fraction of a sample. The mean is not removed.
+    """
+    for name, signal in (("reference", reference), ("estimate", estimate)):
+        why = describe_unusable(signal)
+        if why is not None:
+            return None, f"the {name} {why}"
+    e, s = np.asarray(estimate, dtype=np.float64), np.asarray(reference, dtype=np.float64)
+    gain = float(e @ s) / float(s @ s)
+    target = gain * s
+    numerator, denominator = float(target @ target), float(np.sum((target - e) ** 2))
+    if numerator <= 10.0 ** (-ROUNDING_DB / 10.0) * denominator:
+        return None, "the estimate is orthogonal to the reference"
+    if denominator <= 10.0 ** (-ROUNDING_DB / 10.0) * numerator:
+        return None, "nothing is left but rounding: the estimate is the reference, scaled"
+    return 10.0 * float(np.log10(numerator / denominator)), None

@@ -24,88 +24,96 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["DEFAULT_JITTER_M", "ImageField", "Images", "NearImages", "image_field", "wall_product"]
+__all__ = ["DEFAULT_JITTER_M", "ImageField", "Images", "image_field"]
 
 Floats = NDArray[np.float64]
-Counts = NDArray[np.int16]
+Whole = NDArray[np.int64]
 
 DEFAULT_JITTER_M = 0.08
 
 
 @dataclass(frozen=True, slots=True)
-class Images:
-    """Images of one source: ``positions_m`` (3, images) and ``walls`` (6, images), how often each wall (x=0, x=L, y=0,
-    y=L, z=0, z=L) reflected; ``direct`` is the index of the source itself."""
-
-    positions_m: Floats
-    walls: Counts
-    direct: int
-
-    @property
-    def order(self) -> NDArray[np.int64]:
-        """Number of reflections of each image, (images,)."""
-        return np.asarray(self.walls.sum(axis=0, dtype=np.int64))
-
-    def amplitude(self, reflection: Floats) -> Floats:
-        """Product of the walls' reflection factors ``reflection`` (6,) for each image, (images,)."""
-        return wall_product(self.walls, reflection)
-
-
-@dataclass(frozen=True, slots=True)
-class NearImages:
-    """Images of few reflections as functions of the source's place s: ``sign * s + offset_m``, (3, images) each."""
+class _Axis:
+    """All images along one axis: at ``sign * s + offset_m``, reflected ``walls`` (2, images) times by its two walls."""
 
     sign: Floats
     offset_m: Floats
-    walls: Counts
+    walls: Whole
+
+
+@dataclass(frozen=True, slots=True)
+class Images:
+    """Images of one source as functions of its place.
+
+    ``index`` (3, images) is each image's place in the axes' tables, ``jitter_m`` (3, images) its displacement,
+    ``direct`` the index of the source itself, -1 when it is not among them.
+    """
+
+    axes: tuple[_Axis, _Axis, _Axis]
+    index: Whole
+    jitter_m: Floats | None
     direct: int
+
+    def at(self, source_m: Floats) -> Floats:
+        """Places of all images for a source at ``source_m`` (3,): (3, images)."""
+        places = np.empty(self.index.shape)
+        for axis, index, source, place in zip(self.axes, self.index, source_m, places, strict=True):
+            np.take(axis.sign * source + axis.offset_m, index, out=place)
+        if self.jitter_m is not None:
+            places += self.jitter_m
+        return places
+
+    @property
+    def order(self) -> Whole:
+        """Number of reflections of each image, (images,)."""
+        x, y, z = (axis.walls.sum(axis=0)[index] for axis, index in zip(self.axes, self.index, strict=True))
+        return np.asarray(x + y + z)
+
+    def amplitude(self, reflection: Floats) -> Floats:
+        """Product of the walls' reflection factors ``reflection`` (6,) for each image, (images,)."""
+        factors = np.reshape(reflection, (3, 2, 1))
+        x, y, z = (
+            np.prod(factor**axis.walls, axis=0)[index]
+            for factor, axis, index in zip(factors, self.axes, self.index, strict=True)
+        )
+        return np.asarray(x * y * z)
+
+    def select(self, chosen: NDArray[np.bool_]) -> Images:
+        """The images for which ``chosen`` (images,) is true."""
+        if chosen.all():
+            return self
+        kept = np.flatnonzero(chosen)
+        place = np.flatnonzero(kept == self.direct)
+        jitter = None if self.jitter_m is None else self.jitter_m[:, kept]
+        return Images(self.axes, self.index[:, kept], jitter, int(place[0]) if place.size else -1)
 
 
 @dataclass(frozen=True, slots=True)
 class ImageField:
     """The lattice that all positions of one source share: same images, same displacements wherever the source goes."""
 
-    size_m: Floats
     reach_m: float
-    lattice: tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]
+    axes: tuple[_Axis, _Axis, _Axis]
     jitter_m: Floats | None
 
     def images(self, source_m: Floats, centre_m: Floats) -> Images:
-        """Images of the source at ``source_m`` (3,) that lie within reach of ``centre_m`` (3,)."""
-        axes = [self._axis(axis, float(source_m[axis])) for axis in range(3)]
-        square = [(place - centre) ** 2 for (place, _, _), centre in zip(axes, centre_m, strict=True)]
-        distance2 = square[0][:, None, None] + square[1][None, :, None] + square[2][None, None, :]
+        """The images that lie within reach of ``centre_m`` (3,) when the source is at ``source_m`` (3,)."""
+        x, y, z = (
+            (axis.sign * source + axis.offset_m - centre) ** 2
+            for axis, source, centre in zip(self.axes, source_m, centre_m, strict=True)
+        )
+        distance2 = x[:, None, None] + y[None, :, None] + z[None, None, :]
+        at_home = [int(np.flatnonzero(~axis.walls.any(axis=0))[0]) for axis in self.axes]
+        source = int(np.ravel_multi_index(at_home, distance2.shape))
+        # The source itself belongs to the field however short the reach.
+        distance2[tuple(at_home)] = 0.0
         kept = np.flatnonzero(distance2.ravel() <= self.reach_m**2)
-        index = np.unravel_index(kept, distance2.shape)
-        places = np.stack([axes[axis][0][index[axis]] for axis in range(3)])
-        walls: Counts = np.stack([axes[axis][side][index[axis]] for axis in range(3) for side in (1, 2)])
-        direct = int(np.flatnonzero(~walls.any(axis=0))[0])
+        direct = int(np.searchsorted(kept, source))
+        jitter = None
         if self.jitter_m is not None:
-            places += self.jitter_m[:, kept]
-            places[:, direct] = source_m
-        return Images(places, walls, direct)
-
-    def nearest(self, order: int) -> NearImages:
-        """The images of at most ``order`` reflections, for a source at any place."""
-        n, p = (np.stack(np.meshgrid(*axes, indexing="ij")).reshape(3, -1) for axes in self._indices())
-        walls = np.stack([count for axis in range(3) for count in (np.abs(n - p)[axis], np.abs(n)[axis])])
-        kept = np.flatnonzero(walls.sum(axis=0) <= order)
-        n, p, walls = n[:, kept], p[:, kept], walls[:, kept].astype(np.int16)
-        direct = int(np.flatnonzero(~walls.any(axis=0))[0])
-        offset = 2.0 * n * self.size_m[:, None]
-        if self.jitter_m is not None:
-            offset += self.jitter_m[:, kept]
-            offset[:, direct] = 0.0
-        return NearImages((1 - 2 * p).astype(np.float64), offset, walls, direct)
-
-    def _indices(self) -> tuple[list[NDArray[np.int64]], list[NDArray[np.int64]]]:
-        """Lattice index and mirror flag along each axis, in the order in which images are counted."""
-        return [np.repeat(n, 2) for n in self.lattice], [np.tile([0, 1], n.size) for n in self.lattice]
-
-    def _axis(self, axis: int, source: float) -> tuple[Floats, Counts, Counts]:
-        n, p = (index[axis] for index in self._indices())
-        place = (1 - 2 * p) * source + 2.0 * n * self.size_m[axis]
-        return place, np.abs(n - p).astype(np.int16), np.abs(n).astype(np.int16)
+            jitter = self.jitter_m[:, kept]
+            jitter[:, direct] = 0.0
+        return Images(self.axes, np.stack(np.unravel_index(kept, distance2.shape)), jitter, direct)
 
 
 def image_field(
@@ -116,28 +124,15 @@ def image_field(
     ``jitter_m`` is the largest displacement along each axis; it needs ``rng``. None is displaced when it is zero or
     ``rng`` is None.
     """
-    size = np.asarray(size_m, dtype=np.float64)
-    lattice = []
-    for length in size:
+    axes = []
+    for length in size_m:
         last = int(np.ceil((reach_m + length) / (2.0 * length)))
-        lattice.append(np.arange(-last, last + 1))
+        n = np.repeat(np.arange(-last, last + 1), 2)
+        p = np.tile([0, 1], 2 * last + 1)
+        sign, offset = np.asarray(1.0 - 2.0 * p), np.asarray(2.0 * float(length) * n)
+        axes.append(_Axis(sign, offset, np.abs(np.stack([n - p, n]))))
     jitter = None
     if rng is not None and jitter_m > 0.0:
-        count = int(np.prod([2 * axis.size for axis in lattice]))
+        count = int(np.prod([axis.sign.size for axis in axes]))
         jitter = rng.uniform(-jitter_m, jitter_m, (3, count))
-    return ImageField(size, float(reach_m), (lattice[0], lattice[1], lattice[2]), jitter)
-
-
-def wall_product(walls: Counts, reflection: Floats) -> Floats:
-    """Product of the reflection factors ``reflection`` (6,) to the powers ``walls`` (6, images): (images,)."""
-    if np.all(reflection == reflection[0]):
-        order = walls.sum(axis=0, dtype=np.int64)
-        return np.asarray(_powers(reflection[0], int(order.max(initial=0)))[order])
-    total = np.ones(walls.shape[1])
-    for count, factor in zip(walls, reflection, strict=True):
-        total *= _powers(factor, int(count.max(initial=0)))[count]
-    return total
-
-
-def _powers(factor: float, last: int) -> Floats:
-    return np.asarray(float(factor) ** np.arange(last + 1, dtype=np.float64))
+    return ImageField(float(reach_m), (axes[0], axes[1], axes[2]), jitter)

@@ -18,9 +18,9 @@ from numpy.typing import NDArray
 
 from unmix.render.convolve import convolve_responses
 from unmix.render.fine import FineClip
-from unmix.render.images import ImageField, NearImages, wall_product
+from unmix.render.images import Images
 from unmix.render.pulses import LEAD, pulse_train
-from unmix.render.room import EARLY_S, Room, high_pass
+from unmix.render.room import EARLY_S, Room, high_pass, paths
 from unmix.render.seats import Seat
 
 __all__ = ["render_moving"]
@@ -30,7 +30,7 @@ Kinds = tuple[Floats, Floats, Floats]
 
 _EXACT_ORDER = 2
 _CHUNK = 8192
-_TAIL_EXPANSION = 3
+_TAIL_EXPANSION = 2
 _EARLY_FADE_S = 0.001
 
 
@@ -52,17 +52,19 @@ def render_moving(
     if room is None:
         return _near_sound(clip, seat, None, None, sample_rate, speed_m_s, reference)
     clip = high_pass(clip, sample_rate, room.high_pass_hz)
-    field = room.field(source)
-    near = field.nearest(_EXACT_ORDER)
+    middle_s = np.array([0.5 * clip.size / sample_rate])
+    images = room.field(source).images(seat.source(middle_s)[0], seat.centre_m)
+    order = images.order
+    near, far = images.select(order <= _EXACT_ORDER), images.select(order > _EXACT_ORDER)
     dry, early, image = _near_sound(clip, seat, near, room, sample_rate, speed_m_s, reference)
-    early_tail, tail = _tail_sound(clip, seat, room, field, sample_rate, reference, path_step_m)
+    early_tail, tail = _tail_sound(clip, seat, room, far, sample_rate, reference, path_step_m)
     return dry, early + early_tail, image + tail
 
 
 def _near_sound(
     clip: Floats,
     seat: Seat,
-    near: NearImages | None,
+    near: Images | None,
     room: Room | None,
     sample_rate: int,
     speed_m_s: float,
@@ -98,28 +100,31 @@ def _near_sound(
     )
 
 
-def _reflections(near: NearImages, room: Room, seat: Seat, time_s: Floats) -> Iterator[tuple[Floats, Floats]]:
+def _reflections(near: Images, room: Room, seat: Seat, time_s: Floats) -> Iterator[tuple[Floats, Floats]]:
     """Length and amplitude of each reflected path, (times, channels) each."""
     source, mics = seat.source(time_s), seat.microphones(time_s)
-    gains = wall_product(near.walls, room.reflection)
-    for index, gain in enumerate(gains):
+    # Place is affine in the source along each axis: two places tell the rest.
+    offset = near.at(np.zeros(3))
+    sign = near.at(np.ones(3)) - offset
+    for index, gain in enumerate(near.amplitude(room.reflection)):
         if index == near.direct:
             continue
-        image = near.sign[:, index] * source + near.offset_m[:, index]
+        image = sign[:, index] * source + offset[:, index]
         length = np.linalg.norm(image[:, None, :] - mics, axis=-1)
         yield length, gain / length
 
 
 def _tail_sound(
-    clip: Floats, seat: Seat, room: Room, field: ImageField, sample_rate: int, reference: int, path_step_m: float
+    clip: Floats, seat: Seat, room: Room, far: Images, sample_rate: int, reference: int, path_step_m: float
 ) -> tuple[Floats, Floats]:
     """What comes behind the exact images: its early part at ``reference``, and all of it at all microphones."""
     knots_s, weights = _path(seat, clip.size, sample_rate, path_step_m)
+    gain = far.amplitude(room.reflection)
     early, image = np.zeros(clip.size), np.zeros((len(seat.mics_m), clip.size))
 
     def block(knot: int) -> tuple[slice, Floats]:
         source, mics = seat.source(knots_s[[knot]])[0], seat.microphones(knots_s[[knot]])[0]
-        rows = _tail_responses(room, field, source, mics, sample_rate, reference)
+        rows = _tail_responses(room, far.at(source), gain, source, mics, sample_rate, reference)
         weight = np.maximum(1.0 - np.abs(weights - knot), 0.0)
         heard_at = np.flatnonzero(weight)
         start, stop = int(heard_at[0]), int(heard_at[-1]) + 1
@@ -135,24 +140,19 @@ def _tail_sound(
 
 
 def _tail_responses(
-    room: Room, field: ImageField, source_m: Floats, mics_m: Floats, sample_rate: int, reference: int
+    room: Room, places_m: Floats, gain: Floats, source_m: Floats, mics_m: Floats, sample_rate: int, reference: int
 ) -> Floats:
     """Responses of all images beyond the exact ones: the early part at ``reference``, then all microphones in full."""
-    images = field.images(source_m, mics_m.mean(axis=0))
-    gain = images.amplitude(room.reflection)
-    kept = np.flatnonzero((images.order > _EXACT_ORDER) & (gain > 1e-7))
-    places, gain = images.positions_m[:, kept], gain[kept]
     samples = math.ceil(room.length_s * sample_rate) + 1
-    rows = []
+    full, early = [], np.zeros(0)
     for channel, mic in enumerate(mics_m):
-        length = np.sqrt(np.square(places - mic[:, None]).sum(axis=0))
-        delay, amplitude = length * (sample_rate / room.speed_m_s), gain / length
-        rows.append(pulse_train(delay, amplitude, samples, order=_TAIL_EXPANSION))
+        delay, amplitude = paths(places_m, gain, mic, sample_rate / room.speed_m_s)
+        full.append(pulse_train(delay, amplitude, samples, order=_TAIL_EXPANSION))
         if channel == reference:
-            direct = float(np.linalg.norm(source_m - mic)) / room.speed_m_s
-            soon = np.flatnonzero(delay <= (direct + EARLY_S) * sample_rate)
-            rows.insert(0, pulse_train(delay[soon], amplitude[soon], samples, order=_TAIL_EXPANSION))
-    return np.stack(rows)
+            direct_s = float(np.linalg.norm(source_m - mic)) / room.speed_m_s
+            soon = np.flatnonzero(delay <= (direct_s + EARLY_S) * sample_rate)
+            early = pulse_train(delay[soon], amplitude[soon], samples, order=_TAIL_EXPANSION)
+    return np.stack([early, *full])
 
 
 def _path(seat: Seat, samples: int, sample_rate: int, step_m: float) -> tuple[Floats, Floats]:

@@ -56,12 +56,13 @@ def pulse_train(delays: Floats, amplitudes: Floats, samples: int, *, order: int 
     """
     length = scipy.fft.next_fast_len(samples + 2 * LEAD + 2, real=True)
     length += length % 2
-    fine = (delays + LEAD) * FINENESS
-    spot = np.rint(fine).astype(np.intp)
-    rest = fine - spot
-    outside = (delays < 0.0) | (delays > samples)
-    weight = np.where(outside, 0.0, amplitudes)
-    np.clip(spot, 0, length * FINENESS - 1, out=spot)
+    if delays.size and (delays.min() < 0.0 or delays.max() > samples):
+        inside = np.flatnonzero((delays >= 0.0) & (delays <= samples))
+        delays, amplitudes = delays[inside], amplitudes[inside]
+    rest = (delays + LEAD) * FINENESS
+    nearest = np.rint(rest)
+    rest -= nearest
+    spot, weight = nearest.astype(np.intp), amplitudes
     omega = 2.0 * np.pi * np.arange(length // 2 + 1) / (length * FINENESS)
     spectrum = np.zeros(omega.size, dtype=np.complex128)
     factor = np.ones(omega.size, dtype=np.complex128)

@@ -37,6 +37,7 @@ __all__ = [
     "eyring_s",
     "free_field",
     "high_pass",
+    "paths",
     "response_decay",
     "responses",
     "sabine_s",
@@ -105,6 +106,16 @@ def absorption_eyring(size_m: Floats, t60_s: float, speed_m_s: float = 343.0) ->
     return -math.expm1(-sabine_s(size_m, 1.0, speed_m_s) / t60_s)
 
 
+def paths(places_m: Floats, gain: Floats, mic_m: Floats, per_metre: float) -> tuple[Floats, Floats]:
+    """Delay (``per_metre`` times the distance) and amplitude (``gain`` over it) from ``places_m`` (3, images) to one
+    microphone, (images,) each."""
+    length = np.square(places_m[0] - mic_m[0])
+    for axis in (1, 2):
+        length += np.square(places_m[axis] - mic_m[axis])
+    np.sqrt(length, out=length)
+    return length * per_metre, gain / length
+
+
 def high_pass(signals: Floats, sample_rate: float, edge_hz: float = DEFAULT_HIGH_PASS_HZ) -> Floats:
     """Signals (..., samples) without what lies below ``edge_hz`` (second-order Butterworth); unchanged for zero."""
     if edge_hz <= 0.0:
@@ -133,21 +144,18 @@ def responses(
     """
     images = room.field(source).images(source_m, mics_m.mean(axis=0))
     gain = images.amplitude(room.reflection)
-    kept = np.flatnonzero(gain > 1e-9)
-    places, gain = images.positions_m[:, kept], gain[kept]
-    direct = int(np.flatnonzero(kept == images.direct)[0])
+    # Walls that absorb everything have no images.
+    images, gain = images.select(gain > 0.0), gain[gain > 0.0]
+    places = images.at(source_m)
     samples = _length_samples(room, source_m, mics_m, sample_rate)
 
     def one(mic: Floats) -> tuple[Floats, Floats, Floats, float]:
-        distance = np.sqrt(np.square(places - mic[:, None]).sum(axis=0))
-        delay, amplitude = distance * (sample_rate / room.speed_m_s), gain / distance
-        straight = pulse_train(delay[[direct]], amplitude[[direct]], samples)
-        if kept.size == 1:
-            return straight, straight, straight, float(delay[direct]) / sample_rate
-        near = delay <= delay[direct] + early_s * sample_rate
-        early = pulse_train(delay[near], amplitude[near], samples)
-        late = pulse_train(delay[~near], amplitude[~near], samples)
-        return straight, early, early + late, float(delay[direct]) / sample_rate
+        delay, amplitude = paths(places, gain, mic, sample_rate / room.speed_m_s)
+        start = float(delay[images.direct])
+        straight = pulse_train(delay[[images.direct]], amplitude[[images.direct]], samples)
+        soon = np.flatnonzero(delay <= start + early_s * sample_rate)
+        early = pulse_train(delay[soon], amplitude[soon], samples)
+        return straight, early, pulse_train(delay, amplitude, samples), start / sample_rate
 
     with ThreadPoolExecutor(2) as pool:
         rows = list(pool.map(one, mics_m))
@@ -214,15 +222,21 @@ def build_room(
 def _walls_for_t20(blank: Room, t20_s: float, sources_m: Mapping[int, Floats], mic_m: Floats, sample_rate: int) -> Room:
     """``blank`` with the walls that give ``t20_s``: secant rule on x = -ln(1 - alpha), to which the decay rate is
     nearly proportional."""
-    seats = [blank.field(k).images(source, mic_m) for k, source in sources_m.items()]
+    seats = []
+    for number, source in sources_m.items():
+        images = blank.field(number).images(source, mic_m)
+        delay, spread = paths(images.at(source), np.ones(1), mic_m, sample_rate / blank.speed_m_s)
+        seats.append((images, delay, spread))
 
     def walls(x: float) -> Room:
         return replace(blank, reflection=np.full(6, math.exp(-0.5 * x)))
 
     def measured(x: float) -> float:
-        room = walls(x)
+        def at_seat(seat: tuple[Images, Floats, Floats]) -> float:
+            return _seat_t20(walls(x), *seat, sample_rate)
+
         with ThreadPoolExecutor(2) as pool:
-            return float(np.mean(list(pool.map(lambda seat: _seat_t20(room, seat, mic_m, sample_rate), seats))))
+            return float(np.mean(list(pool.map(at_seat, seats))))
 
     x = -math.log1p(-absorption_eyring(blank.size_m, t20_s, blank.speed_m_s))
     history: list[tuple[float, float]] = []
@@ -252,13 +266,11 @@ def _next_absorption(history: list[tuple[float, float]], target: float) -> float
     return min(max(step, 0.5 * x1), 2.0 * x1)
 
 
-def _seat_t20(room: Room, seat: Images, mic_m: Floats, sample_rate: int) -> float:
-    distance = np.sqrt(np.square(seat.positions_m - mic_m[:, None]).sum(axis=0))
-    delay = distance * (sample_rate / room.speed_m_s)
-    samples = math.ceil(room.length_s * sample_rate)
-    coarse = pulse_train(delay, seat.amplitude(room.reflection) / distance, samples, order=0)
+def _seat_t20(room: Room, images: Images, delay: Floats, spread: Floats, sample_rate: int) -> float:
+    samples = math.ceil(room.length_s * sample_rate) + 1
+    coarse = pulse_train(delay, images.amplitude(room.reflection) * spread, samples, order=0)
     heard = high_pass(coarse, sample_rate, room.high_pass_hz)
-    decay = response_decay(heard, float(delay[seat.direct]) / sample_rate, sample_rate)
+    decay = response_decay(heard, float(delay[images.direct]) / sample_rate, sample_rate)
     # A room too dead to show 25 dB of decay behind the direct sound decays at once.
     return decay.t20_s if decay.t20_s is not None else 1e-3
 

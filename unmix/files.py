@@ -10,7 +10,8 @@ import re
 import shutil
 import tempfile
 import tomllib
-from collections.abc import Iterator
+import unicodedata
+from collections.abc import Iterable, Iterator
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -23,6 +24,7 @@ __all__ = [
     "folder_aside",
     "read_toml",
     "refuse_to_replace",
+    "safe_names",
     "write_aside",
     "write_json",
     "write_toml",
@@ -91,6 +93,19 @@ def _struct_in(info: Any) -> Any:
         return info
     inner = list(getattr(info, "types", ())) or [getattr(info, n) for n in ("item_type", "type") if hasattr(info, n)]
     return next((found for found in map(_struct_in, inner) if found is not None), None)
+
+
+def safe_names(names: Iterable[str]) -> list[str]:
+    """File names for talkers' names: letters, digits, `-` and `_` only, never empty, unique whatever the case."""
+    chosen: list[str] = []
+    for name in names:
+        plain = unicodedata.normalize("NFKD", name).encode("ascii", "ignore").decode()
+        stem = re.sub(r"[^A-Za-z0-9_-]+", "-", plain).strip("-") or "talker"
+        taken, candidate, count = {c.lower() for c in chosen}, stem, 2
+        while candidate.lower() in taken:
+            candidate, count = f"{stem}-{count}", count + 1
+        chosen.append(candidate)
+    return chosen
 
 
 def refuse_to_replace(path: Path, *, overwrite: bool) -> None:

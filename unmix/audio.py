@@ -17,7 +17,7 @@ from unmix.files import write_aside
 if TYPE_CHECKING:
     import soundfile
 
-__all__ = ["AudioWriter", "Recording", "read_audio", "resample", "write_audio"]
+__all__ = ["AudioWriter", "Recording", "Samples", "read_audio", "resample", "write_audio"]
 
 Floats = NDArray[np.float64]
 
@@ -154,6 +154,49 @@ class Recording:
                 f"{(at + sample) / self.sample_rate:.3f} s; repair the file or cut the stretch out with start_s/stop_s"
             )
         return chosen
+
+
+@dataclass(frozen=True)
+class Samples:
+    """A recording that is in memory already: (channels, samples), read as `Recording` is."""
+
+    signals: Floats
+    sample_rate: int
+
+    def __post_init__(self) -> None:
+        signals = np.asarray(self.signals, dtype=np.float64)
+        if signals.ndim != 2 or signals.shape[1] == 0:
+            raise InputError(f"recording: expected (channels, samples), got shape {signals.shape}")
+        bad = ~np.isfinite(signals)
+        if bad.any():
+            channel, sample = np.argwhere(bad)[0]
+            raise InputError(f"recording: channel {channel} holds NaN or infinite values from sample {sample} on")
+        object.__setattr__(self, "signals", signals)
+
+    @property
+    def channels(self) -> tuple[int, ...]:
+        """Channel numbers."""
+        return tuple(range(len(self.signals)))
+
+    @property
+    def samples(self) -> int:
+        """Samples per channel."""
+        return int(self.signals.shape[1])
+
+    @property
+    def duration_s(self) -> float:
+        """Length of the recording."""
+        return self.samples / self.sample_rate
+
+    def chunks(self, size: int | None = None) -> Iterator[Floats]:
+        """Yield (channels, size) arrays, the last one shorter."""
+        size = size or round(CHUNK_S * self.sample_rate)
+        for at in range(0, self.samples, size):
+            yield self.signals[:, at : at + size]
+
+    def read(self) -> Floats:
+        """All samples."""
+        return self.signals
 
 
 def read_audio(path: str | Path) -> tuple[Floats, int]:

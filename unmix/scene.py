@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Literal
 
 import msgspec
 import numpy as np
+from numpy.typing import ArrayLike
 
 from unmix.array import Array, ArrayFile
-from unmix.audio import Recording
+from unmix.audio import Recording, Samples
 from unmix.errors import FileError, InputError
 from unmix.files import read_toml, write_toml
 from unmix.track import Orientation, Track
@@ -91,7 +93,7 @@ class RoomTable(_Strict):
     temperature_c: float = 20.0
 
 
-class SceneFile(_Strict):
+class SceneFile(_Strict, kw_only=True):
     """A scene as it stands in a TOML file."""
 
     title: str = ""
@@ -129,7 +131,7 @@ class Scene:
     """A recording with its array and talkers; made by `Scene.load` or from arrays by `unmix.solve`."""
 
     title: str
-    recording: Recording
+    recording: Recording | Samples
     array: Array
     talkers: tuple[Talker, ...] = ()
     noise_only_s: Stretches = field(default_factory=list)
@@ -143,6 +145,23 @@ class Scene:
     def sample_rate(self) -> int:
         """Sample rate of the recording in hertz."""
         return self.recording.sample_rate
+
+    @classmethod
+    def from_arrays(
+        cls,
+        recording: ArrayLike,
+        array: Array,
+        talkers: Sequence[Talker] = (),
+        *,
+        sample_rate: int,
+        title: str = "recording",
+        temperature_c: float = 20.0,
+    ) -> Scene:
+        """A scene from samples in memory: recording (channels, samples). Raises InputError when shapes disagree."""
+        samples = Samples(np.asarray(recording, dtype=np.float64), sample_rate)
+        if len(samples.signals) != array.channels:
+            raise InputError(f"recording has {len(samples.signals)} channels and the array {array.channels} microphones")
+        return cls(title, samples, array, tuple(talkers), temperature_c=temperature_c)
 
     @classmethod
     def load(cls, path: str | Path) -> Scene:

@@ -39,7 +39,7 @@ __all__ = ["Assembly", "assemble", "paths_collide"]
 Floats = NDArray[np.float64]
 
 _LONGEST_BLOCK_S = 8.0
-_COINCIDENT_RADIANS = 1e-3
+_LARGEST_GRID = 8192
 
 
 @dataclass(frozen=True)
@@ -311,7 +311,7 @@ class _Builder:
                 f'constraint "propagated" is solved by method "reduced" or "stationary", not {self.settings.method!r}'
             )
         bank = filter_bank_from_response(
-            lambda omega: self._propagated_response(omega, weight), tail=max(self.settings.tail, 1e-5)
+            lambda omega: self._propagated_response(omega, weight), tail=self.settings.tail, largest_grid=_LARGEST_GRID
         )
         method, fallbacks = self._method()
         if method == "stationary":

@@ -26,6 +26,7 @@ Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
 Baseline = Literal["reference-mic", "delay-and-sum", "minimum-variance", "linear-constraint"]
 
+_LARGEST_GRID = 8192
 _LOADING = 1e-3
 """Relative loading of the linear constraints."""
 
@@ -69,7 +70,7 @@ def baseline_bank(
         mean = np.einsum("fkk->f", gram).real / talkers
         return np.asarray(np.linalg.solve(gram + _LOADING * mean[:, None, None] * np.eye(talkers), rows))
 
-    return filter_bank_from_response(response, tail=max(tail, 1e-4))
+    return filter_bank_from_response(response, tail=tail, largest_grid=_LARGEST_GRID)
 
 
 def _on_grid(grid: Complexes, omega: Floats) -> Complexes:

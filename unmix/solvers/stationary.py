@@ -87,8 +87,14 @@ def design(problem: Problem, *, tail: float = 1e-7) -> FilterBank:
     return filter_bank_from_response(response, tail=tail, note=note)
 
 
-def filter_bank_from_response(response: Response, *, tail: float, note: str = "") -> FilterBank:
-    """Taps of a frequency response, on the smallest grid whose wrapped tails stay below `tail`, cut where they may be."""
+def filter_bank_from_response(
+    response: Response, *, tail: float, note: str = "", largest_grid: int = LARGEST_GRID
+) -> FilterBank:
+    """Taps of a frequency response, on the smallest grid whose wrapped tails stay below `tail`, cut where they may be.
+
+    Responses that jump at the Nyquist frequency (exact fractional delays) have tails that fall off as 1/n; for them
+    `largest_grid` bounds the length.
+    """
     grid = SMALLEST_GRID
     while True:
         omega = 2.0 * np.pi * np.arange(grid // 2 + 1) / grid
@@ -98,7 +104,7 @@ def filter_bank_from_response(response: Response, *, tail: float, note: str = ""
         magnitude = np.abs(taps).sum(axis=1)
         total = magnitude.sum(axis=-1, keepdims=True)
         ends = magnitude[:, : grid // 16].sum(axis=-1) + magnitude[:, -grid // 16 :].sum(axis=-1)
-        if grid >= LARGEST_GRID or np.all(ends <= 0.25 * tail * total[:, 0]):
+        if grid >= largest_grid or np.all(ends <= 0.25 * tail * total[:, 0]):
             break
         grid *= 2
     share = np.maximum.reduce(magnitude / np.maximum(total, 1e-300), axis=0)

@@ -80,7 +80,7 @@ def _near_sound(
         length, amplitude = seat.straight(time_s)
         paths = [(length, amplitude)]
         if near is not None and room is not None:
-            paths += _reflections(near, room, seat, time_s)
+            paths += _reflections(near, room, seat, time_s, length)
         delays = [path * per_metre for path, _ in paths]
         first = math.floor(sample[0] - max(d.max() for d in delays))
         fine = FineClip(clip, first, math.ceil(sample[-1] - min(d.min() for d in delays)))
@@ -100,8 +100,10 @@ def _near_sound(
     )
 
 
-def _reflections(near: Images, room: Room, seat: Seat, time_s: Floats) -> Iterator[tuple[Floats, Floats]]:
-    """Length and amplitude of each reflected path, (times, channels) each."""
+def _reflections(
+    near: Images, room: Room, seat: Seat, time_s: Floats, shortest: Floats
+) -> Iterator[tuple[Floats, Floats]]:
+    """Length and amplitude of each reflected path, (times, channels) each, none below ``shortest``."""
     source, mics = seat.source(time_s), seat.microphones(time_s)
     # Place is affine in the source along each axis: two places tell the rest.
     offset = near.at(np.zeros(3))
@@ -110,7 +112,7 @@ def _reflections(near: Images, room: Room, seat: Seat, time_s: Floats) -> Iterat
         if index == near.direct:
             continue
         image = sign[:, index] * source + offset[:, index]
-        length = np.linalg.norm(image[:, None, :] - mics, axis=-1)
+        length = np.maximum(np.linalg.norm(image[:, None, :] - mics, axis=-1), shortest)
         yield length, gain / length
 
 

@@ -69,9 +69,8 @@ class Room:
 
     def field(self, source: int) -> ImageField:
         """Image lattice of source number ``source``; each source has displacements of its own."""
-        rng = np.random.default_rng([self.seed, 7, source])
         reach_m = self.length_s * self.speed_m_s if self.reflection.any() else 0.0
-        return image_field(self.size_m, reach_m, jitter_m=self.jitter_m, rng=rng)
+        return image_field(self.size_m, reach_m, jitter_m=self.jitter_m, seed=(self.seed, 7, source))
 
 
 @dataclass(frozen=True, slots=True)
@@ -106,13 +105,17 @@ def absorption_eyring(size_m: Floats, t60_s: float, speed_m_s: float = 343.0) ->
     return -math.expm1(-sabine_s(size_m, 1.0, speed_m_s) / t60_s)
 
 
-def paths(places_m: Floats, gain: Floats, mic_m: Floats, per_metre: float) -> tuple[Floats, Floats]:
+def paths(
+    places_m: Floats, gain: Floats, mic_m: Floats, per_metre: float, *, shortest_m: float = 0.0
+) -> tuple[Floats, Floats]:
     """Delay (``per_metre`` times the distance) and amplitude (``gain`` over it) from ``places_m`` (3, images) to one
-    microphone, (images,) each."""
+    microphone, (images,) each. No path is shorter than ``shortest_m``: displacing an image must not bring a reflection
+    ahead of the direct sound."""
     length = np.square(places_m[0] - mic_m[0])
     for axis in (1, 2):
         length += np.square(places_m[axis] - mic_m[axis])
     np.sqrt(length, out=length)
+    np.maximum(length, shortest_m, out=length)
     return length * per_metre, gain / length
 
 
@@ -150,7 +153,8 @@ def responses(
     samples = _length_samples(room, source_m, mics_m, sample_rate)
 
     def one(mic: Floats) -> tuple[Floats, Floats, Floats, float]:
-        delay, amplitude = paths(places, gain, mic, sample_rate / room.speed_m_s)
+        shortest_m = float(np.linalg.norm(mic - source_m))
+        delay, amplitude = paths(places, gain, mic, sample_rate / room.speed_m_s, shortest_m=shortest_m)
         start = float(delay[images.direct])
         straight = pulse_train(delay[[images.direct]], amplitude[[images.direct]], samples)
         soon = np.flatnonzero(delay <= start + early_s * sample_rate)
@@ -225,7 +229,10 @@ def _walls_for_t20(blank: Room, t20_s: float, sources_m: Mapping[int, Floats], m
     seats = []
     for number, source in sources_m.items():
         images = blank.field(number).images(source, mic_m)
-        delay, spread = paths(images.at(source), np.ones(1), mic_m, sample_rate / blank.speed_m_s)
+        shortest_m = float(np.linalg.norm(mic_m - source))
+        delay, spread = paths(
+            images.at(source), np.ones(1), mic_m, sample_rate / blank.speed_m_s, shortest_m=shortest_m
+        )
         seats.append((images, delay, spread))
 
     def walls(x: float) -> Room:

@@ -48,6 +48,7 @@ Floats = NDArray[np.float64]
 EARLY_S = 0.05
 DEFAULT_HIGH_PASS_HZ = 40.0
 _T20_TOLERANCE = 0.005
+_T20_ACCEPTED = 0.04
 _T20_ROUNDS = 25
 
 
@@ -254,9 +255,13 @@ def _walls_for_t20(blank: Room, t20_s: float, sources_m: Mapping[int, Floats], m
         x = _next_absorption(history, 1.0 / t20_s)
         if not 1e-4 < x < 14.0:
             break
+    # Few reflections make T20 jump: near enough is then the best there is.
+    x, rate = min(history, key=lambda point: abs(math.log(point[1] * t20_s)))
+    if abs(rate * t20_s - 1.0) < _T20_ACCEPTED:
+        return walls(x)
     raise UnsolvableError(
         f"room: no absorption gives a measured T20 of {t20_s:g} s in a room of {_size_text(blank.size_m)} "
-        f"(last: {1.0 / history[-1][1]:.3f} s): change t20_s or size_m"
+        f"(nearest: {1.0 / rate:.3f} s); change t20_s or size_m"
     )
 
 

@@ -23,18 +23,25 @@ class ModelSettings(_Strict, kw_only=True, frozen=True):
     """How a delayed talker is written with its derivatives."""
 
     anchor: Annotated[Literal["nearest", "own"], Meta(description="sample about which delays are expanded")] = "nearest"
-    order: Annotated[int, Meta(ge=0, le=12, description="highest derivative of the expansion")] = 6
+    order: Annotated[int, Meta(ge=0, le=12, description="highest derivative of the expansion")] = 8
     differentiator: Annotated[
         Literal["least-squares", "finite-difference"], Meta(description="family of derivative filters")
     ] = "least-squares"
     error_db: Annotated[
         float,
         Meta(ge=-120.0, le=0.0, description="error allowed for a delay of half a sample; sets the filters' width"),
-    ] = -50.0
+    ] = -60.0
     band_edge: Annotated[
         float,
         Meta(gt=0.0, lt=1.0, description="where that error must still hold, as a fraction of the Nyquist frequency"),
-    ] = 0.85
+    ] = 0.9
+    moving_error_db: Annotated[
+        float, Meta(ge=-120.0, le=0.0, description="the same while something moves, when width costs time")
+    ] = -45.0
+    moving_band_edge: Annotated[
+        float, Meta(gt=0.0, lt=1.0, description="where that error must still hold, as a fraction of the Nyquist
+        frequency")
+    ] = 0.8
     half_width: Annotated[
         Annotated[int, Meta(ge=1, le=64)] | None,
         Meta(description="width of the filters in samples to either side, instead of chosen"),
@@ -141,8 +148,8 @@ PRESETS: dict[str, Variant] = {
 def load_variant(variant: str | Path | Variant) -> Variant:
     """A preset by name, a TOML file, or a variant as it is.
 
-    A file states only what differs from its `base` preset. Raises InputError for an unknown name or field (with the nearest
-    known one), FileError for a missing file.
+    A file states only what differs from its `base` preset. Raises InputError for an unknown name or field (with the
+    nearest known one), FileError for a missing file.
     """
     if isinstance(variant, Variant):
         return variant

@@ -41,8 +41,8 @@ def solve(scene: Scene, variant: str | Path | Variant = DEFAULT, *, progress: Pr
     variant   a preset's name, a variant file or a `Variant`
     progress  called with the share done, 0 to 1
 
-    Returns a `Solution` whose `signals` are (talkers, samples), as received at the reference microphone. Raises InputError,
-    FileError or UnsolvableError with one line that says what to do.
+    Returns a `Solution` whose `signals` are (talkers, samples), as received at the reference microphone. Raises
+    InputError, FileError or UnsolvableError with one line that says what to do.
     """
     return _solve(scene, load_variant(variant), Memory(), progress)
 

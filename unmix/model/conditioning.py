@@ -1,8 +1,8 @@
 """What the model can resolve: singular values, noise gain and the lowest usable frequency.
 
-For K plane waves all columns of H(omega) coincide at zero frequency, so K - 1 singular values vanish there and grow with
-omega times the differences of the delays. The noise gain of talker k is [(H^H R^-1 H + Q)^-1 H^H R^-1 H (...)^-1]_kk: the
-power of its noise over that of the noise at one microphone.
+For K plane waves all columns of H(omega) coincide at zero frequency, so K - 1 singular values vanish there and grow
+with omega times the differences of the delays. The noise gain of talker k is [(H^H R^-1 H + Q)^-1 H^H R^-1 H
+(...)^-1]_kk: the power of its noise over that of the noise at one microphone.
 """
 
 from __future__ import annotations
@@ -74,7 +74,7 @@ def condition(
     first = 0 if len(bad) == 0 else int(_first_lasting(good))
     usable = first < points
     return Conditioning(
-        frequencies,
+        np.asarray(frequencies, np.float64),
         s,
         10.0 * np.log10(np.maximum(with_prior, 1e-30)),
         unprimed,

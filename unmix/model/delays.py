@@ -1,7 +1,7 @@
 """How each talker reaches each microphone: delays and gains relative to the reference microphone.
 
-A plane wave from direction u reaches microphone m early by u.p_m / c; a spherical wave from distance R travels
-|R u - p_m|. With the array's corrections, y_m(t) = sum_k g_mk s_k(t - tau_mk), s_k as received at the reference channel.
+A plane wave from direction u reaches microphone m early by u.p_m / c; a spherical wave from distance R travels |R u -
+p_m|. With the array's corrections, y_m(t) = sum_k g_mk s_k(t - tau_mk), s_k as received at the reference channel.
 """
 
 from __future__ import annotations
@@ -47,7 +47,7 @@ class Paths:
         return int(self.delay_s.shape[-1])
 
     def at(self, time_s: ArrayLike) -> tuple[Floats, Floats]:
-        """Delays and gains at the given times: (times, talkers, channels) each, linear in between, held at both ends."""
+        """Delays and gains at the given times: (times, talkers, channels), linear in between, held at both ends."""
         t = np.atleast_1d(np.asarray(time_s, dtype=np.float64))
         if self.time_s is None:
             shape = (len(t), *self.delay_s.shape)

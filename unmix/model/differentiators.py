@@ -80,24 +80,43 @@ def finite_differences(order: int, half_width: int) -> Floats:
 def least_squares_differentiators(order: int, half_width: int, band_edge: float) -> Floats:
     """Weights of the derivatives 0..order whose response is nearest (j omega)^l up to the band edge.
 
-    Minimises the integral of |D_l(omega) - (j omega)^l|^2 over 0..band_edge * pi; symmetric for even, antisymmetric for
-    odd derivatives. Returns (order + 1, 2P + 1).
+    Minimises the integral of |D_l(omega) - (j omega)^l|^2 over 0..band_edge * pi, exact for constants, slopes and
+    parabolas: at low frequencies talkers differ by little more than their slopes, and an error there is multiplied by
+    the inverse of a small singular value. Symmetric for even, antisymmetric for odd derivatives. Returns (order + 1,
+    2P + 1).
     """
     omega = (np.arange(_GRID) + 0.5) / _GRID * band_edge * math.pi
     j = np.arange(1, half_width + 1)
-    even = np.column_stack([np.ones(_GRID), 2.0 * np.cos(np.outer(omega, j))])
-    odd = 2.0 * np.sin(np.outer(omega, j))
+    bases = (
+        np.column_stack([np.ones(_GRID), 2.0 * np.cos(np.outer(omega, j))]),
+        2.0 * np.sin(np.outer(omega, j)),
+    )
+    # Rows of moments: sum_j d[j] j^q = q! for q = l, else 0.
+    moments = (
+        np.array([[1.0, *np.full(half_width, 2.0)], [0.0, *(2.0 * j**2)]]),
+        2.0 * j[None, :].astype(np.float64),
+    )
     weights = np.zeros((order + 1, 2 * half_width + 1))
     weights[0, half_width] = 1.0
     for n in range(1, order + 1):
-        basis = odd if n % 2 else even
-        target = omega**n * (-1.0) ** (n // 2)
-        half = np.linalg.lstsq(basis, target, rcond=None)[0]
-        if n % 2:
+        odd = n % 2
+        exact = np.array([float(n == 1)]) if odd else np.array([0.0, 2.0 * (n == 2)])
+        half = _constrained_fit(bases[odd], omega**n * (-1.0) ** (n // 2), moments[odd], exact)
+        if odd:
             weights[n, half_width + 1 :], weights[n, :half_width] = half, -half[::-1]
         else:
             weights[n, half_width:], weights[n, : half_width + 1] = half, half[::-1]
     return weights
+
+
+def _constrained_fit(basis: Floats, target: Floats, rows: Floats, values: Floats) -> Floats:
+    """Least squares subject to rows @ x = values, in the null space of the rows."""
+    particular = np.linalg.lstsq(rows, values, rcond=None)[0]
+    null = np.linalg.svd(rows)[2][len(rows) :].T
+    if null.shape[1] == 0:
+        return np.asarray(particular)
+    free = np.linalg.lstsq(basis @ null, target - basis @ particular, rcond=None)[0]
+    return np.asarray(particular + null @ free)
 
 
 def half_sample_error_db(weights: Floats, band_edge: float) -> float:
@@ -122,8 +141,9 @@ def choose_differentiators(
     error_db    error allowed for a delay of up to half a sample, up to the band edge
     band_edge   fraction of the Nyquist frequency, below 1
 
-    Where the Taylor remainder of the order itself exceeds `error_db`, the width is the one beyond which nothing is gained;
-    the error reached is in the result. Raises UnsolvableError when a given half-width is too narrow for the order.
+    Where the Taylor remainder of the order itself exceeds `error_db`, the width is the one beyond which nothing is
+    gained; the error reached is in the result. Raises UnsolvableError when a given half-width is too narrow for the
+    order.
     """
     least = max(1, math.ceil(order / 2))
 

@@ -1,7 +1,7 @@
 """The sparse operator over jets, and the constraints that couple their snapshots.
 
-The unknown x stacks, for a block of N samples, the jets z_k^(l)[n] (l = 0..L) at every anchor that the block touches and,
-for `tied`, the zeroth order as far out as the differentiators reach. Rows:
+The unknown x stacks, for a block of N samples, the jets z_k^(l)[n] (l = 0..L) at every anchor that the block touches
+and, for `tied`, the zeroth order as far out as the differentiators reach. Rows:
 
     H   y_m[n] = sum_k g_km sum_l (-d)^l / l! z_k^(l)[n - i]
     E   z_k^(l)[n] - sum_j d_l[j] z_k^(0)[n + j] = 0,   l = 1..L                  (`tied`)
@@ -27,6 +27,9 @@ if TYPE_CHECKING:
 __all__ = ["JetLayout", "jet_operator", "tied_rows", "transition", "transition_covariance", "transition_rows"]
 
 Floats = NDArray[np.float64]
+
+LOADING = 1e-5
+"""Share of each diagonal element added to the transition's covariance."""
 
 
 @dataclass(frozen=True)
@@ -135,16 +138,20 @@ def transition(order: int) -> Floats:
 def transition_covariance(order: int, spectrum: Floats) -> Floats:
     """Covariance of w = z[n+1] - F z[n], what the truncated transition leaves out, for a talker of a given spectrum.
 
-    spectrum  power density at evenly spaced frequencies from 0 to the Nyquist frequency; its scale sets the talker's power
+    spectrum  power density at evenly spaced frequencies from 0 to the Nyquist frequency; its scale sets the talker's
+    power
 
     With e_l(omega) = (j omega)^l (exp(j omega) - sum_{i <= L - l} (j omega)^i / i!), the covariance is the average of
-    e e^H weighted by the spectrum. Returns (order + 1, order + 1), real, loaded by 1e-12 of its diagonal.
+    e e^H weighted by the spectrum. Returns (order + 1, order + 1), real.
+
+    What is left out of one derivative nearly determines what is left out of the next, so the matrix is close to
+    singular; its diagonal is loaded by `LOADING`, without which the block's normal equations lose all their digits.
     """
     omega = np.pi * (np.arange(len(spectrum)) + 0.5) / len(spectrum)
     powers = (1j * omega[:, None]) ** np.arange(order + 1)
     left = powers * np.exp(1j * omega)[:, None] - powers @ transition(order).T
     covariance = (left.T @ (left.conj() * spectrum[:, None])).real / len(spectrum)
-    return np.asarray(covariance + np.diag(1e-12 * np.diag(covariance)))
+    return np.asarray(covariance + np.diag(LOADING * np.diag(covariance)))
 
 
 def transition_rows(layout: JetLayout) -> csr_matrix:

@@ -1,6 +1,7 @@
 """The model with `tied` jets, as short filters: y_m[n] = sum_k sum_j h_km[j] z_k[n + j], j = -R..R.
 
-Putting z^(l)[n - i] = sum_j d_l[j] z[n - i + j] into the anchored expansion leaves one filter per talker and microphone,
+Putting z^(l)[n - i] = sum_j d_l[j] z[n - i + j] into the anchored expansion leaves one filter per talker and
+microphone,
 
     h_km[j - i] = g_km sum_l (-d)^l / l! d_l[j],      tau_km / T = i + d
 
@@ -95,8 +96,8 @@ def mixing_from_paths(
 ) -> Mixing:
     """The model's filters for paths at rest, or for `samples` samples from `start` when they move.
 
-    Moving delays are held for `hold` samples at their value in the middle of each group. `reach` widens the filters to a
-    common width (blocks of one recording then have one shape).
+    Moving delays are held for `hold` samples at their value in the middle of each group. `reach` widens the filters
+    to a common width (blocks of one recording then have one shape).
     """
     if not paths.moving:
         return _placed(paths.delay_s, paths.gain, differentiators, sample_rate, anchor, reach, 0, 0)

@@ -1,8 +1,8 @@
 """The noise's covariance over frequency, and the filters that whiten it.
 
-R(omega), (channels, channels) Hermitian, scaled so that its diagonal is 1 on average. What the solvers need is a matrix
-filter W with W^H W = R^-1; its taps come from the Hermitian root R^(-1/2), cut to a stated length. Every method uses the
-same cut filter, so that they solve the same problem.
+R(omega), (channels, channels) Hermitian, scaled so that its diagonal is 1 on average. What the solvers need is a
+matrix filter W with W^H W = R^-1; its taps come from the Hermitian root R^(-1/2), cut to a stated length. Every
+method uses the same cut filter, so that they solve the same problem.
 
     white      each channel's own noise, equal and independent
     diffuse    a spherically isotropic field plus self-noise (the field alone is singular at low frequencies)
@@ -147,7 +147,7 @@ def fitted_covariance(
     from scipy.optimize import nnls
 
     frequencies = np.fft.rfftfreq(GRID, 1.0 / sample_rate)
-    h = mixing.response(2.0 * np.pi * frequencies / sample_rate)
+    h = mixing.response(np.asarray(2.0 * np.pi * frequencies / sample_rate, np.float64))
     u, s, _ = np.linalg.svd(h, full_matrices=False)
     u = u * (s > 1e-3 * s.max())[:, None, :]
     eye = np.eye(len(positions_m))

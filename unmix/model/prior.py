@@ -61,7 +61,7 @@ def make_prior(kind: PriorKind, relative_weight: float, mixing: Mixing, sample_r
 
 
 def _speech_whitening(sample_rate: float) -> Floats:
-    """All-pole fit of the average speech spectrum: the prediction-error filter, scaled to 1 where speech is strongest."""
+    """Prediction-error filter of the average speech spectrum, scaled to 1 where speech is strongest."""
     from scipy.linalg import solve_toeplitz
 
     frequencies = np.fft.rfftfreq(_GRID, 1.0 / sample_rate)

@@ -1,7 +1,7 @@
 """From a variant and the talkers' paths to a separator that can be fed chunks.
 
-Decides, in this order: which noise, which prior, which method (and by what name a method that cannot be used falls back),
-how long blocks and margins are.
+Decides, in this order: which noise, which prior, which method (and by what name a method that cannot be used falls
+back), how long blocks and margins are.
 """
 
 from __future__ import annotations
@@ -77,7 +77,8 @@ def assemble(
 ) -> Assembly:
     """Make the separator of a variant.
 
-    spectra  running covariance of the recording (noise `observed`, `fitted`) or of its talker-free stretches (`measured`)
+    spectra  running covariance of the recording (noise `observed`, `fitted`) or of its talker-free stretches
+    (`measured`)
 
     Raises UnsolvableError when the case has no answer: more talkers than microphones, bearings that coincide, ...
     """
@@ -90,8 +91,8 @@ def assemble(
     differentiators = choose_differentiators(
         variant.model.order,
         family=variant.model.differentiator,
-        error_db=variant.model.error_db,
-        band_edge=variant.model.band_edge,
+        error_db=variant.model.moving_error_db if paths.moving else variant.model.error_db,
+        band_edge=variant.model.moving_band_edge if paths.moving else variant.model.band_edge,
         half_width=variant.model.half_width,
     )
     at_rest = mixing_from_paths(paths.still(), differentiators, sample_rate, anchor=variant.model.anchor)
@@ -118,7 +119,7 @@ def _check_solvable(paths: Paths) -> None:
     pair = paths_collide(paths)
     if pair is not None:
         raise UnsolvableError(
-            f"talkers {pair[0]} and {pair[1]} (counted from 0) have the same delays at every microphone, so nothing can "
+            f"talkers {pair[0]} and {pair[1]} (counted from 0) have the same delays at every microphone: nothing can "
             "tell them apart; correct their bearings, or give one talker"
         )
 
@@ -208,8 +209,8 @@ class _Builder:
         method, fallbacks = self._method()
         if method != "stationary" and self.prior.weight == 0.0 and self.paths.talkers > 1:
             raise UnsolvableError(
-                f'method {method!r} needs a prior with two talkers or more; set prior = "flat", or method = "stationary" '
-                "for the minimum-norm answer"
+                f'method {method!r} needs a prior with two talkers or more; set prior = "flat", or method =
+                "stationary" ' "for the minimum-norm answer"
             )
         bank = design(problem, tail=self.settings.tail)
         if method == "stationary":
@@ -229,7 +230,7 @@ class _Builder:
         self, solve: Callable[[Floats, int], Floats], method: str, margin: int, fallbacks: tuple[str, ...]
     ) -> Assembly:
         longest = round(_LONGEST_BLOCK_S * self.sample_rate)
-        block = round(self.settings.block_s * self.sample_rate) if self.settings.block_s else min(4 * margin, longest)
+        block = round(self.settings.block_s * self.sample_rate) if self.settings.block_s else min(8 * margin, longest)
         block = max(self.hold, block // self.hold * self.hold)
         margin = -(-margin // self.hold) * self.hold
         separator = BlockSeparator(
@@ -298,10 +299,11 @@ class _Builder:
         return solve
 
     def propagated(self) -> Assembly:
-        order, anchor = self.variant.model.order, self.variant.model.anchor
+        order = self.variant.model.order
         if self.settings.prior == "none" or self.settings.prior_weight == 0.0:
             raise UnsolvableError(
-                'constraint "propagated" takes the talkers\' assumed power from the prior; set prior = "speech" or "flat"'
+                'constraint "propagated" takes the talkers\' assumed power from the prior; set prior = "speech" or
+                "flat"'
             )
         power = 1.0 / (self.settings.prior_weight * self.paths.channels)
         weight = propagated.transition_weight(order, self.prior, power)

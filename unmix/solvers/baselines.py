@@ -60,7 +60,7 @@ def baseline_bank(
         a = steering(paths, omega, sample_rate)
         adjoint = a.conj().transpose(0, 2, 1)
         if kind == "delay-and-sum":
-            return adjoint / np.sum(np.abs(a) ** 2, axis=1)[:, :, None]
+            return np.asarray(adjoint / np.sum(np.abs(a) ** 2, axis=1)[:, :, None])
         gamma = _on_grid(grid, omega)
         white = np.linalg.solve(gamma, a)
         rows = white.conj().transpose(0, 2, 1)

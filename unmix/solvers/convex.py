@@ -28,7 +28,8 @@ class ConvexBlock:
     """A block of given length and delays, compiled; `solve` takes the samples.
 
     huber    threshold M in whitened units, None for least squares
-    clip     magnitude at and above which a sample counts as clipped, None for none (white noise only)
+    clip     magnitude at and above which a sample counts as clipped, one for all channels or (channels,) with infinity
+             for those that never clip; None for none (white noise only)
     peak     bound on the magnitude of each talker, None for none
     solver   "CLARABEL" or "OSQP"
     """
@@ -39,17 +40,20 @@ class ConvexBlock:
         samples: int,
         *,
         huber: float | None = None,
-        clip: float | None = None,
+        clip: float | Floats | None = None,
         peak: float | None = None,
         solver: str = "CLARABEL",
     ) -> None:
-        import cvxpy as cp
+        import cvxpy
+
+        cp: Any = cvxpy
 
         if clip is not None and problem.noise.taps is not None:
             raise UnsolvableError('clipped samples need noise = "white": whitening mixes them with sound ones')
         if problem.prior.weight == 0.0 and problem.mixing.talkers > 1:
             raise UnsolvableError('method `convex` needs a prior with two talkers or more; set prior = "flat"')
-        self._problem, self.samples, self._solver, self._clip = problem, samples, solver, clip
+        self._problem, self.samples, self._solver = problem, samples, solver
+        self._clip = None if clip is None else np.repeat(np.broadcast_to(clip, problem.mixing.channels), samples)
         self._matrix = mixing_matrix(problem.whitened, samples)
         rows, unknowns = self._matrix.shape
         self._z = cp.Variable(unknowns)
@@ -59,19 +63,27 @@ class ConvexBlock:
         if clip is not None:
             self._sound = cp.Parameter(rows, nonneg=True)
             self._sign = cp.Parameter(rows)
-            self._level = cp.Parameter(rows, nonneg=True)
+            self._level = cp.Parameter(rows)
             residual = self._y - cp.multiply(self._sound, self._matrix @ self._z)
             constraints.append(cp.multiply(self._sign, self._matrix @ self._z) >= self._level)
         if peak is not None:
             constraints.append(cp.abs(self._z) <= peak)
         loss = cp.sum_squares(residual) if huber is None else cp.sum(cp.huber(residual, huber))
         objective = loss + cp.sum_squares(_prior_root(problem, samples) @ self._z)
+        # Plain least squares can be solved to the last digits; with inequalities such tolerances stall.
+        tight = 1e-13 if huber is None and not constraints else 1e-9
+        self._tolerances: dict[str, Any] = (
+            {"tol_gap_abs": tight, "tol_gap_rel": tight, "tol_feas": tight}
+            if solver == "CLARABEL"
+            else {"eps_abs": 1e-9, "eps_rel": 1e-9, "max_iter": 20000}
+        )
         self._compiled = cp.Problem(cp.Minimize(objective), constraints)
 
     def solve(self, whitened: Floats) -> Floats:
         """Talkers (talkers, samples) of a whitened block. Raises UnsolvableError when the solver finds no answer."""
-        import cvxpy as cp
+        import cvxpy
 
+        cp: Any = cvxpy
         y = whitened.ravel()
         if self._clip is None:
             self._y.value = y
@@ -79,15 +91,11 @@ class ConvexBlock:
             over = np.abs(y) >= self._clip
             self._sound.value = np.where(over, 0.0, 1.0)
             self._sign.value = np.where(over, np.sign(y), 0.0)
-            self._level.value = np.where(over, self._clip, 0.0)
+            # Rows of sound samples read 0 >= -1: always true, and never on the border, where interior points stall.
+            self._level.value = np.where(over, self._clip, -1.0)
             self._y.value = np.where(over, 0.0, y)
-        tight: dict[str, Any] = (
-            {"tol_gap_abs": 1e-13, "tol_gap_rel": 1e-13, "tol_feas": 1e-13}
-            if self._solver == "CLARABEL"
-            else {"eps_abs": 1e-9, "eps_rel": 1e-9, "max_iter": 20000}
-        )
         try:
-            self._compiled.solve(solver=self._solver, enforce_dpp=True, warm_start=False, **tight)
+            self._compiled.solve(solver=self._solver, enforce_dpp=True, warm_start=False, **self._tolerances)
         except cp.SolverError as error:
             raise UnsolvableError(f"{self._solver} found no answer ({error}); loosen the peak bound") from None
         if self._z.value is None:

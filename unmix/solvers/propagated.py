@@ -29,7 +29,7 @@ from unmix.solvers.kkt import prior_matrix, whitening_operator
 if TYPE_CHECKING:
     from scipy.sparse import csr_matrix
 
-__all__ = ["PropagatedBlock", "trusted_band", "transition_weight"]
+__all__ = ["PropagatedBlock", "transition_weight", "trusted_band"]
 
 Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -43,7 +43,10 @@ def transition_weight(order: int, prior: Prior, signal_power: float) -> Floats:
     response = np.exp(-1j * np.outer(omega, np.arange(len(prior.taps)))) @ prior.taps
     spectrum = 1.0 / np.abs(response) ** 2
     covariance = transition_covariance(order, signal_power * spectrum / spectrum.mean())
-    return np.asarray(np.linalg.inv(covariance))
+    # Deviations differ by orders of magnitude from one derivative to the next: scale them before inverting.
+    deviation = np.sqrt(np.diag(covariance))
+    inverse = np.linalg.inv(covariance / np.outer(deviation, deviation)) / np.outer(deviation, deviation)
+    return np.asarray(0.5 * (inverse + inverse.T))
 
 
 def trusted_band(order: int, error_db: float = -20.0) -> float:
@@ -143,7 +146,8 @@ def stationary_response(
     anchor: Anchor = "nearest",
     whitening: Complexes | None = None,
 ) -> Complexes:
-    """The block solution far from its ends, per frequency: (frequencies, talkers, channels), before whitening is applied.
+    """The block solution far from its ends, per frequency: (frequencies, talkers, channels), before whitening is
+    applied.
 
     whitening  response of W (frequencies, channels, channels), None for white noise
     """

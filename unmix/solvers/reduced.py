@@ -91,7 +91,7 @@ def normal_band(mixing: Mixing, prior: Prior, samples: int) -> Floats:
 
 @lru_cache(maxsize=8)
 def _band_places(groups: int, hold: int, samples: int, width: int, k: int) -> tuple[Indices, Indices, Indices]:
-    """Where each product of two taps of each group enters and leaves the band, and where it stands among the products."""
+    """Where each product of two taps of each group enters and leaves the band, and where it stands among them all."""
     a, p, b, q = np.meshgrid(np.arange(width), np.arange(k), np.arange(width), np.arange(k), indexing="ij")
     a, p, b, q = (v.ravel() for v in (a, p, b, q))
     lower = (b - a) * k + q - p >= 0

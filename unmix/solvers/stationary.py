@@ -2,9 +2,9 @@
 
     B(omega) = (H^H R^-1 H + Q)^-1 H^H R^-1,      z_k[n] = sum_m sum_j b_km[j] y_m[n - j]
 
-Its taps decay as fast as the prior allows. They are designed on a grid fine enough that their tails do not wrap, and cut
-where what is left out is below a stated share; that reach is the margin within which the ends of a recording differ from
-one long block solve.
+Its taps decay as fast as the prior allows. They are designed on a grid fine enough that their tails do not wrap, and
+cut where what is left out is below a stated share; that reach is the margin within which the ends of a recording
+differ from one long block solve.
 """
 
 from __future__ import annotations
@@ -48,7 +48,7 @@ class FilterBank:
     @property
     def after(self) -> int:
         """Samples of the past that a filter sees."""
-        return self.taps.shape[-1] - 1 - self.before
+        return int(self.taps.shape[-1]) - 1 - self.before
 
     @property
     def margin(self) -> int:
@@ -73,10 +73,10 @@ def design(problem: Problem, *, tail: float = 1e-7) -> FilterBank:
         h = problem.whitened.response(omega)
         adjoint = h.conj().transpose(0, 2, 1)
         if problem.prior.weight == 0.0:
-            inverse: Complexes = np.linalg.pinv(h, rcond=MINIMUM_NORM_RCOND)
+            inverse = np.asarray(np.linalg.pinv(h, rcond=MINIMUM_NORM_RCOND), np.complex128)
         else:
             q = problem.prior.precision(omega)[:, None, None] * np.eye(h.shape[2])
-            inverse = np.linalg.solve(adjoint @ h + q, adjoint)
+            inverse = np.asarray(np.linalg.solve(adjoint @ h + q, adjoint), np.complex128)
         if problem.noise.taps is None:
             return inverse
         w = problem.noise.half_width

@@ -1,7 +1,7 @@
 """Push chunks of a recording in, get the talkers out, in memory that does not grow with the recording.
 
-A separator has `push(chunk) -> talkers` and `flush() -> talkers`; what comes out, joined, has the recording's length and
-is aligned with it.
+A separator has `push(chunk) -> talkers` and `flush() -> talkers`; what comes out, joined, has the recording's length
+and is aligned with it.
 """
 
 from __future__ import annotations

@@ -33,14 +33,13 @@ class ModelSettings(_Strict, kw_only=True, frozen=True):
     ] = -60.0
     band_edge: Annotated[
         float,
-        Meta(gt=0.0, lt=1.0, description="where that error must still hold, as a fraction of the Nyquist frequency"),
+        Meta(gt=0.0, lt=1.0, description="where that error must still hold, a fraction of the Nyquist frequency"),
     ] = 0.9
     moving_error_db: Annotated[
         float, Meta(ge=-120.0, le=0.0, description="the same while something moves, when width costs time")
     ] = -45.0
     moving_band_edge: Annotated[
-        float, Meta(gt=0.0, lt=1.0, description="where that error must still hold, as a fraction of the Nyquist
-        frequency")
+        float, Meta(gt=0.0, lt=1.0, description="where that error must still hold, a fraction of the Nyquist frequency")
     ] = 0.8
     half_width: Annotated[
         Annotated[int, Meta(ge=1, le=64)] | None,

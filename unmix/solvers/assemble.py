@@ -209,8 +209,8 @@ class _Builder:
         method, fallbacks = self._method()
         if method != "stationary" and self.prior.weight == 0.0 and self.paths.talkers > 1:
             raise UnsolvableError(
-                f'method {method!r} needs a prior with two talkers or more; set prior = "flat", or method =
-                "stationary" ' "for the minimum-norm answer"
+                f'method {method!r} needs a prior with two talkers or more; set prior = "flat", or '
+                'method = "stationary" for the minimum-norm answer'
             )
         bank = design(problem, tail=self.settings.tail)
         if method == "stationary":
@@ -302,8 +302,8 @@ class _Builder:
         order = self.variant.model.order
         if self.settings.prior == "none" or self.settings.prior_weight == 0.0:
             raise UnsolvableError(
-                'constraint "propagated" takes the talkers\' assumed power from the prior; set prior = "speech" or
-                "flat"'
+                'constraint "propagated" takes the talkers\' assumed power from the prior; set prior = "speech" '
+                'or "flat"'
             )
         power = 1.0 / (self.settings.prior_weight * self.paths.channels)
         weight = propagated.transition_weight(order, self.prior, power)

@@ -30,6 +30,7 @@ import scipy.fft
 import scipy.ndimage
 import scipy.optimize
 import scipy.signal
+import scipy.special
 import scipy.stats
 from numpy.typing import NDArray
 
@@ -219,13 +220,13 @@ def _transform_length(length: int, reach: int) -> int:
 def _between_samples(c: Floats, peak: int) -> float:
     """Where |c| peaks within one sample of index `peak`, by band-limited interpolation."""
     first, last = max(0, peak - HALF_WIDTH), min(c.size, peak + HALF_WIDTH + 1)
-    points, values = np.arange(first, last), np.sign(c[peak]) * c[first:last]
+    points, values = np.arange(first, last, dtype=np.float64), np.sign(c[peak]) * c[first:last]
 
     def negative(at: float) -> float:
-        return -float(values @ _interpolator(at - points))
+        return -float(values @ _interpolator(np.asarray(at - points)))
 
     found = scipy.optimize.minimize_scalar(
-        negative, bounds=(peak - 1.0, peak + 1.0), method="bounded", options={"xatol": 1e-5}
+        negative, bounds=(peak - 1.0, peak + 1.0), method="bounded", options={"xatol": 1e-4}
     )
     return float(found.x)
 
@@ -233,7 +234,9 @@ def _between_samples(c: Floats, peak: int) -> float:
 def _interpolator(distance: Floats) -> Floats:
     """The windowed sinc at `distance` samples from its centre."""
     inside = np.clip(1.0 - np.square(distance / (HALF_WIDTH + 1)), 0.0, None)
-    return np.asarray(np.sinc(distance) * np.i0(KAISER_BETA * np.sqrt(inside)) / np.i0(KAISER_BETA))
+    return np.asarray(
+        np.sinc(distance) * scipy.special.i0(KAISER_BETA * np.sqrt(inside)) / scipy.special.i0(KAISER_BETA)
+    )
 
 
 def advance(signal: Signals, samples: float, *, length: int | None = None) -> Floats:
@@ -248,7 +251,7 @@ def advance(signal: Signals, samples: float, *, length: int | None = None) -> Fl
     margin = 0
     if abs(fraction) > 1e-6:
         margin = HALF_WIDTH
-        taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1) + fraction)
+        taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1, dtype=np.float64) + fraction)
         x = scipy.signal.oaconvolve(x, taps)
     moved = np.zeros(length)
     low, high = max(0, -whole - margin), min(length, x.size - whole - margin)

@@ -45,9 +45,8 @@ ROUNDING_DB = 200.0
 DEPENDENT = 1e-4
 """A reference of whose innovation the others leave less than this (-40 dB) is a filtered copy of them."""
 
-SINGULAR = 1e-14
-RIDGE = 1e-13
-"""When pivots differ by more than this (references without energy in part of the band) G gets a ridge on its diagonal."""
+SINGULAR, RIDGE = 1e-14, 1e-13
+"""Where pivots differ by more than this (a reference lacks energy in part of its band) G gets a ridge."""
 
 GROUP = 4
 """Frames transformed at a time: few enough for the processor's cache."""
@@ -56,7 +55,7 @@ KEEP_BYTES = 200e6
 
 
 def describe_unusable(signal: Signals) -> str | None:
-    """Why no ratio can be formed with `signal` (samples,): it is empty, silent or not finite; None when it is usable."""
+    """Why no ratio can be formed with `signal` (samples,): empty, silent, not finite; None when it is usable."""
     if signal.size == 0:
         return "is empty"
     if not np.isfinite(signal).all():
@@ -155,7 +154,7 @@ class ReferenceSet:
             sar[cells] = _ratio_db(target + interference, artifacts[:, None])
         for e, k in np.ndindex(*shape):
             for figure, values in (("sdr_db", sdr), ("sir_db", sir), ("sar_db", sar)):
-                reason = self._why_undefined(figure, e, k, bad, values[e, k])
+                reason = self._why_undefined(figure, e, k, bad, float(values[e, k]))
                 if reason is not None:
                     values[e, k] = np.nan
                     undefined[figure, e, k] = reason
@@ -180,27 +179,32 @@ class ReferenceSet:
         return None
 
     def contributions(self, estimates: Signals) -> Floats:
-        """Energy of each filtered reference in the joint projection of each usable estimate: (estimates, references).
+        """Energy of each filtered reference in the joint projection of each estimate: (estimates, references).
 
-        |c_k s_k|^2 for P e = sum_k c_k s_k; NaN for references left out. Unlike the split above the contributions are
-        not orthogonal; they are what each reference adds.
+        |c_k s_k|^2 for P e = sum_k c_k s_k. Unlike the parts of the split the contributions are not orthogonal; they
+        are what each reference adds. NaN for references and estimates that cannot be used.
         """
         energies = np.full((len(estimates), len(self.references)), np.nan)
-        if not self._usable or self._too_short:
+        good = [e for e, signal in enumerate(estimates) if describe_unusable(signal) is None]
+        if not good or not self._usable or self._too_short:
             return energies
         L = self.filter_length
-        D = self._scaled_correlations(estimates)
-        c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(len(estimates), -1).T, check_finite=False)
+        c = self._joint_filters(self._scaled_correlations(estimates[good]))
         for i, k in enumerate(self._usable):
             own = slice(i * L, (i + 1) * L)
-            energies[:, k] = _quadratic(self._G[own, own], c[own])
+            energies[good, k] = _quadratic(self._G[own, own], c[own])
         return energies
+
+    def _joint_filters(self, D: Floats) -> Floats:
+        """c with G c = D, one column per estimate: (K L, estimates)."""
+        c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(len(D), -1).T, check_finite=False)
+        return np.asarray(c)
 
     def _energies(self, estimates: Signals) -> tuple[Floats, Floats, Floats]:
         """|s_target|^2 and |e_interf|^2, (estimates, usable references), and |e_artif|^2, (estimates,)."""
         E, K, L = len(estimates), len(self._usable), self.filter_length
         D = self._scaled_correlations(estimates)
-        c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(E, K * L).T, check_finite=False)
+        c = self._joint_filters(D)
         target = np.empty((E, K))
         differences = np.repeat(c[:, None, :], K, axis=1)
         for j in range(K):
@@ -213,7 +217,7 @@ class ReferenceSet:
         return target, interference, self._residual_energy(estimates, filters)
 
     def _scaled_correlations(self, estimates: Signals) -> Floats:
-        return self._correlate(estimates) / self._scale[:, None]
+        return np.asarray(self._correlate(estimates) / self._scale[:, None])
 
     def _correlate(self, signals: Signals) -> Floats:
         """D[e, k, l] = sum_n signals[e, n] s_k[n - l], l = 0..L-1: (signals, usable references, L)."""
@@ -247,7 +251,7 @@ class ReferenceSet:
             stretch = _stretch(self.references[self._usable], start, start + GROUP * self._hop + self.filter_length - 1)
             frames = np.lib.stride_tricks.sliding_window_view(stretch, self._frame, axis=1)[:, :: self._hop]
             spectra = scipy.fft.rfft(frames, axis=-1)
-            if self._groups * spectra.nbytes > KEEP_BYTES:
+            if self._groups * int(spectra.nbytes) > KEEP_BYTES:
                 return np.asarray(spectra)
             self._kept[group] = spectra
         return self._kept[group]
@@ -263,7 +267,7 @@ class ReferenceSet:
     @property
     def _groups(self) -> int:
         """Groups of frames that cover the references and the tails of their filtered copies."""
-        return -(-(self.references.shape[1] + self.filter_length - 1) // (GROUP * self._hop))
+        return int(np.ceil((self.references.shape[1] + self.filter_length - 1) / (GROUP * self._hop)))
 
 
 def _stretch(signals: Signals, start: int, stop: int) -> Floats:
@@ -277,7 +281,7 @@ def _stretch(signals: Signals, start: int, stop: int) -> Floats:
 
 def _quadratic(G: Floats, c: Floats) -> Floats:
     """c' G c for each column of c; rounding below zero counts as zero."""
-    return np.maximum(np.einsum("ie,ie->e", c, G @ c), 0.0)
+    return np.asarray(np.maximum(np.einsum("ie,ie->e", c, G @ c), 0.0))
 
 
 def _ratio_db(numerator: Floats, denominator: Floats) -> Floats:

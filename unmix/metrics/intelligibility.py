@@ -182,7 +182,7 @@ def _bands(x: Floats, chosen: NDArray[np.intp]) -> Floats:
 
 
 def _segments(bands: Floats, first: int) -> Floats:
-    """Stretches of SEGMENT frames that start at `first` and the CHUNK - 1 frames after it: (segments, bands, SEGMENT)."""
+    """Stretches of SEGMENT frames from `first` and the CHUNK - 1 frames after it on: (segments, bands, SEGMENT)."""
     stretch = bands[:, first : first + CHUNK + SEGMENT - 1]
     return np.lib.stride_tricks.sliding_window_view(stretch, SEGMENT, axis=1).transpose(1, 0, 2)
 

@@ -1,0 +1,331 @@
+"""A scene's references, ready to grade any number of variants.
+
+What depends on the references alone (their place in time, the factored Gram matrix, their side of intelligibility,
+the microphones' figures) is computed once, for all estimates graded.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+from unmix.metrics.alignment import DRIFT_PPM, GUARD_S, MAX_OFFSET_S, Offset, advance, guard_samples
+from unmix.metrics.assignment import best_assignment
+from unmix.metrics.bench import Bench, difference_to_mir_eval_db
+from unmix.metrics.distortion import FILTER_LENGTH, Distortion, ReferenceSet, describe_unusable
+from unmix.metrics.grades import Figures, Grades, TalkerGrade
+from unmix.metrics.leakage import leakage_of_outputs_db, projected_leakage_db
+from unmix.metrics.timebase import Matched, Span, Timebase, clarity
+
+__all__ = ["Grader", "Match"]
+
+Floats = NDArray[np.float64]
+Signals = NDArray[np.floating[Any]]
+Match = Literal["name", "best"]
+
+KEPT = 4
+"""Choices of time whose factored references are kept."""
+
+
+@dataclass(frozen=True)
+class _Before:
+    """The microphones' figures for one talker."""
+
+    unprocessed: Figures
+    best: Figures | None
+    best_channel: int | None
+
+
+class Grader:
+    """Grades the estimates of one scene, variant after variant.
+
+    Parameters
+    ----------
+    references : (talkers, samples)
+        Finite or not, silent or not: what cannot be graded is undefined in the result, with the reason.
+    sample_rate : int
+        In hertz, of every signal.
+    names : sequence of str
+        The talkers, in the references' order.
+    unprocessed : (samples,), optional
+        The recording's reference microphone.
+    microphones : (channels, samples), optional
+        All microphones, for the best of them.
+    images : (talkers, samples), optional
+        Each talker alone at the reference microphone, for leakage.
+    against : str
+        Kind of the references; only reported.
+    filter_length, guard_s, max_offset_s
+        Taps of BSS Eval; by how much signals are held back behind their references; how far offsets are searched.
+    notes : sequence of str
+        Warnings that go into every result.
+    """
+
+    def __init__(
+        self,
+        references: Signals,
+        *,
+        sample_rate: int,
+        names: Sequence[str],
+        unprocessed: Signals | None = None,
+        microphones: Signals | None = None,
+        images: Signals | None = None,
+        against: str = "plain",
+        filter_length: int = FILTER_LENGTH,
+        guard_s: float = GUARD_S,
+        max_offset_s: float = MAX_OFFSET_S,
+        notes: Sequence[str] = (),
+    ) -> None:
+        self.references = references
+        self.sample_rate = sample_rate
+        self.names = tuple(names)
+        self.unprocessed = unprocessed
+        self.microphones = microphones
+        self.images = images
+        self.against = against
+        self.filter_length = filter_length
+        self.guard = guard_samples(sample_rate, guard_s)
+        self.notes = tuple(notes)
+        self._clock = Timebase(
+            references, sample_rate, unprocessed=unprocessed, guard=self.guard, max_offset_s=max_offset_s
+        )
+        self._benches: dict[Span, Bench] = {}
+        self._befores: dict[Span, list[_Before]] = {}
+        self._image_sets: dict[Span, ReferenceSet] = {}
+
+    def grade(
+        self,
+        estimates: Signals,
+        *,
+        match: Match = "name",
+        matched: Matched | None = None,
+        image_outputs: Signals | None = None,
+        cross_check: bool = False,
+        notes: Sequence[str] = (),
+    ) -> Grades:
+        """Grade `estimates` (estimates, samples).
+
+        Parameters
+        ----------
+        match : {"name", "best"}
+            "name": `matched` says which estimate is whose (by default they stand in the references' order); "best":
+            such that the mean SIR is highest.
+        matched : list of int or None
+            The estimate of each reference.
+        image_outputs : (images, talkers, samples), optional
+            What the filters behind the estimates make of each image alone; leakage is then read off these.
+        cross_check : bool
+            Recompute the ratios with mir_eval.
+        notes : sequence of str
+            Warnings that go into this result.
+        """
+        if match == "best":
+            offsets = self._clock.offsets(estimates, None)
+            matched = best_assignment(clarity(offsets))
+        else:
+            matched = matched or list(range(len(self.names)))
+            offsets = self._clock.offsets(estimates, matched)
+        time, aligned = self._clock.align(estimates, offsets, matched)
+        distortion = self._bench(time).split(aligned)
+        if match == "best" and (better := best_assignment(_scores(distortion))) != matched:
+            # Ratios need offsets first; the pairs they choose may have others.
+            matched = better
+            time, aligned = self._clock.align(estimates, offsets, matched)
+            distortion = self._bench(time).split(aligned)
+        leakage, leakage_by = self._leakage(aligned, matched, time, image_outputs)
+        difference, why_not = self._cross_check(time, aligned, distortion, matched) if cross_check else (None, None)
+        return Grades(
+            talkers=tuple(
+                self._talker(k, time, offsets, matched, aligned, distortion, leakage) for k in range(len(self.names))
+            ),
+            against=self.against,
+            sample_rate=self.sample_rate,
+            filter_length=self.filter_length,
+            guard_samples=self.guard,
+            span_s=(time.start / self.sample_rate, time.stop / self.sample_rate),
+            leakage_by=leakage_by,
+            cross_check_db=difference,
+            warnings=(*self.notes, *notes, *self._warnings(time, offsets, matched, aligned, why_not)),
+        )
+
+    def _bench(self, time: Span) -> Bench:
+        if time not in self._benches:
+            length = time.stop - time.start
+            moved = [
+                advance(s, time.start - base, length=length) if describe_unusable(s) is None else s[:length]
+                for s, base in zip(self.references, time.bases, strict=True)
+            ]
+            _drop_oldest(self._benches)
+            self._benches[time] = Bench(
+                np.array(moved, dtype=np.float64),
+                self.sample_rate,
+                filter_length=self.filter_length,
+                guard=self.guard,
+            )
+        return self._benches[time]
+
+    def _talker(
+        self,
+        k: int,
+        time: Span,
+        offsets: dict[tuple[int, int], Offset],
+        matched: Matched,
+        aligned: Floats,
+        distortion: Distortion,
+        leakage: Floats | None,
+    ) -> TalkerGrade:
+        e, before = matched[k], self._before(time)[k]
+        if e is None:
+            figures, offset = Figures.none_because("no estimate was matched to this talker"), Offset(None)
+        else:
+            figures, offset = self._bench(time).figures(aligned[e], distortion, e, k), offsets[e, k]
+        undefined = dict(figures.undefined)
+        if offset.samples is None:
+            undefined["offset_s"] = offset.undefined or "no estimate was matched to this talker"
+        if offset.drift_ppm is None:
+            undefined["drift_ppm"] = "fewer than four stretches of a second resemble the reference clearly"
+        leaks = None
+        if leakage is not None:
+            leaks = {
+                name: float(leakage[k, j]) if np.isfinite(leakage[k, j]) else None
+                for j, name in enumerate(self.names)
+                if j != k
+            }
+            undefined |= {
+                f"leakage_db.{name}": "an image, or what comes out for it, is silent"
+                for name, value in leaks.items()
+                if value is None
+            }
+        return TalkerGrade(
+            **figures.figures(),
+            undefined=undefined,
+            name=self.names[k],
+            estimate=e,
+            offset_s=None if offset.samples is None else offset.samples / self.sample_rate,
+            drift_ppm=offset.drift_ppm,
+            unprocessed=before.unprocessed,
+            unprocessed_offset_s=self._heard_s(k),
+            gain=figures.gain_over(before.unprocessed),
+            best_microphone=before.best,
+            best_channel=before.best_channel,
+            gain_over_best=None if before.best is None else figures.gain_over(before.best),
+            leakage_db=leaks,
+        )
+
+    def _heard_s(self, k: int) -> float | None:
+        samples = None if self._clock.heard is None else self._clock.heard[k].samples
+        return None if samples is None else samples / self.sample_rate
+
+    def _before(self, time: Span) -> list[_Before]:
+        """The microphones' figures for each talker; the same for every variant."""
+        if time not in self._befores:
+            _drop_oldest(self._befores)
+            talkers = range(len(self.names))
+            unprocessed, best = self._unprocessed(time), self._best_microphones(time)
+            self._befores[time] = [_Before(unprocessed[k], *best[k]) for k in talkers]
+        return self._befores[time]
+
+    def _unprocessed(self, time: Span) -> list[Figures]:
+        if self.unprocessed is None:
+            return [Figures.none_because("the unprocessed recording was not given") for _ in self.names]
+        bench, signal = self._bench(time), self.unprocessed[time.start : time.stop]
+        split = bench.split(signal[None])
+        # Each reference was moved to where the microphone hears its talker, so the microphone stays where it is.
+        return [bench.figures(signal, split, 0, k) for k in range(len(self.names))]
+
+    def _best_microphones(self, time: Span) -> list[tuple[Figures | None, int | None]]:
+        """Figures and channel of the microphone with the highest SDR for each talker."""
+        if self.microphones is None:
+            return [(None, None) for _ in self.names]
+        bench = self._bench(time)
+        split = bench.split(self.microphones[:, time.start : time.stop])
+        found: list[tuple[Figures | None, int | None]] = []
+        for k, sdr in enumerate(split.sdr_db.T):
+            if not np.isfinite(sdr).any():
+                found.append((Figures.none_because(split.undefined["sdr_db", 0, k]), None))
+                continue
+            best = int(np.nanargmax(sdr))
+            offset = self._clock.finders[k].find(self.microphones[best]).samples
+            late = 0.0 if offset is None else offset - time.bases[k]
+            signal = advance(self.microphones[best], time.start + late, length=time.stop - time.start)
+            found.append((bench.figures(signal, bench.split(signal[None]), 0, k), best))
+        return found
+
+    def _leakage(
+        self, aligned: Floats, matched: Matched, time: Span, image_outputs: Signals | None
+    ) -> tuple[Floats | None, str | None]:
+        if image_outputs is not None:
+            return leakage_of_outputs_db(image_outputs), "filters"
+        if self.images is None:
+            return None, None
+        if time not in self._image_sets:
+            _drop_oldest(self._image_sets)
+            images = np.pad(self.images[:, time.start : time.stop], ((0, 0), (0, self.guard)))
+            self._image_sets[time] = ReferenceSet(images, filter_length=self.filter_length)
+        given = [k for k, e in enumerate(matched) if e is not None]
+        leakage = np.full((len(matched), len(matched)), np.nan)
+        signals = self._bench(time).hold_back(aligned[[e for e in matched if e is not None]])
+        leakage[given] = projected_leakage_db(signals, self._image_sets[time], given)
+        return leakage, "projection"
+
+    def _cross_check(
+        self, time: Span, aligned: Floats, distortion: Distortion, matched: Matched
+    ) -> tuple[float | None, str | None]:
+        order = [e for e in matched if e is not None]
+        if len(order) < len(matched):
+            return None, "not every talker has an estimate"
+        ratios = np.array([getattr(distortion, name)[order] for name in ("sdr_db", "sir_db", "sar_db")])
+        return difference_to_mir_eval_db(self._bench(time), aligned[order], ratios)
+
+    def _warnings(
+        self,
+        time: Span,
+        offsets: dict[tuple[int, int], Offset],
+        matched: Matched,
+        aligned: Floats,
+        why_no_cross_check: str | None,
+    ) -> Iterator[str]:
+        for k, e in enumerate(matched):
+            name = self.names[k]
+            if e is None:
+                yield f"{name}: no estimate was matched"
+                continue
+            offset = offsets[e, k]
+            if offset.slips:
+                yield (
+                    f"{name}: the estimate drifts against its reference by {offset.drift_ppm:.1f} ppm, beyond "
+                    f"{DRIFT_PPM:g}: two sample clocks, or a talker who moves; distortion figures are too low"
+                )
+            if (
+                offset.samples is None
+                and describe_unusable(aligned[e]) is None
+                and k not in self._bench(time).set.unusable
+            ):
+                yield f"{name}: {offset.undefined}; graded as if it were in time"
+        spare = sorted(set(range(len(aligned))) - set(matched))
+        if spare:
+            yield f"estimates left over, counted from zero: {', '.join(map(str, spare))}"
+        samples, lost = self.references.shape[1], self.references.shape[1] - (time.stop - time.start)
+        if lost:
+            yield (
+                f"graded over {(samples - lost) / self.sample_rate:.2f} of {samples / self.sample_rate:.2f} s, where "
+                "every signal has samples once moved in time"
+            )
+        if self._bench(time).set.ridged:
+            yield "a reference has no energy in part of its band; ratios beyond about 100 dB are not reached"
+        if why_no_cross_check is not None:
+            yield f"not cross-checked: {why_no_cross_check}"
+
+
+def _scores(distortion: Distortion) -> Floats:
+    """SIR of each pair, as the published assignment has it; SDR where nothing interferes."""
+    return distortion.sir_db if np.isfinite(distortion.sir_db).any() else distortion.sdr_db
+
+
+def _drop_oldest(kept: dict[Span, Any]) -> None:
+    while len(kept) >= KEPT:
+        del kept[next(iter(kept))]

@@ -20,6 +20,7 @@ import msgspec
 from unmix.errors import FileError, InputError
 
 __all__ = [
+    "convert_tree",
     "decode_toml",
     "folder_aside",
     "read_toml",
@@ -55,10 +56,15 @@ def decode_toml(text: bytes | str, kind: type[T], *, where: str) -> T:
         raise InputError(f"{where}: not UTF-8 text; is this a TOML file?") from None
     except tomllib.TOMLDecodeError as error:
         raise InputError(f"{where}: not valid TOML: {error}") from None
+    return convert_tree(tree, kind, where=where)
+
+
+def convert_tree(tree: dict[str, Any], kind: type[T], *, where: str = "") -> T:
+    """Turn a tree of plain values into the struct `kind`; `where` names its source in errors."""
     try:
         return msgspec.convert(tree, kind, strict=True)
     except msgspec.ValidationError as error:
-        raise InputError(f"{where}: {_explain(str(error), tree, kind)}") from None
+        raise InputError((f"{where}: " if where else "") + _explain(str(error), tree, kind)) from None
 
 
 def _explain(message: str, tree: dict[str, Any], kind: type) -> str:

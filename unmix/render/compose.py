@@ -100,7 +100,7 @@ def render_scene(
     UnsolvableError
         The reverberation time asked for cannot be had in the room asked for.
     """
-    base = Path(base)
+    base, spec = Path(base), spec.checked()
     array = spec_array(spec, base)
     rng_faults, rng_sensor, rng_diffuse = (np.random.default_rng([spec.seed, stream]) for stream in (1, 2, 3))
     faults = draw_faults(spec.faults, array.channels, rng_faults)

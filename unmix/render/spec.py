@@ -5,13 +5,17 @@ A spec without a `[room]` table is anechoic. Paths are relative to the file they
 
 from __future__ import annotations
 
+import math
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Annotated, Literal
 
 import msgspec
+import numpy as np
 from msgspec import Meta
 
-from unmix.files import read_toml
+from unmix.errors import InputError
+from unmix.files import convert_tree, read_toml
 
 __all__ = ["ArraySpec", "FaultSpec", "NoiseSpec", "RenderSpec", "RoomSpec", "TalkerSpec"]
 
@@ -174,3 +178,33 @@ class RenderSpec(_Strict, kw_only=True):
     def load(cls, path: str | Path) -> RenderSpec:
         """Read a spec from TOML. Raises FileError or InputError naming file, key and remedy."""
         return read_toml(Path(path), cls)
+
+    def checked(self) -> RenderSpec:
+        """The spec with plain numbers, all of them finite and within their ranges, also when it was built in Python.
+
+        Raises InputError naming the key.
+        """
+        tree = msgspec.to_builtins(self, enc_hook=_plain)
+        for key, value in _numbers(tree, ""):
+            if not math.isfinite(value):
+                raise InputError(f"key `{key}`: {value} is not a finite number")
+        return convert_tree(tree, RenderSpec)
+
+
+def _plain(value: object) -> object:
+    """Numbers and arrays of NumPy's as Python's."""
+    if isinstance(value, np.ndarray | np.generic):
+        return value.tolist()
+    raise InputError(f"{value!r} has no place in a rendering spec")
+
+
+def _numbers(tree: object, key: str) -> Iterator[tuple[str, float]]:
+    """All numbers in a tree of plain values, with the dotted key of each."""
+    if isinstance(tree, dict):
+        for name, value in tree.items():
+            yield from _numbers(value, f"{key}.{name}" if key else str(name))
+    elif isinstance(tree, list):
+        for index, value in enumerate(tree):
+            yield from _numbers(value, f"{key}[{index}]")
+    elif isinstance(tree, float):
+        yield key, tree

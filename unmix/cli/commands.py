@@ -1,0 +1,19 @@
+"""The commands, one line each.
+
+A command called `name` lives in `unmix/cli/name.py` as the click command `command`. Its module is imported only when
+the command is invoked or asked for its own help. To add one: write the module, add its line here.
+"""
+
+from __future__ import annotations
+
+__all__ = ["COMMANDS"]
+
+COMMANDS: dict[str, str] = {
+    "demo": "Render, solve and grade a small scene: the whole job at a glance.",
+    "solve": "Separate the talkers of a scene: one audio file each.",
+    "grade": "Grade talker signals against references, before and after.",
+    "render": "Render a scene with known truth: mixture, references, scene file.",
+    "variants": "List the presets and every field of a variant.",
+    "completion": "Print the script that completes commands in a shell.",
+}
+"""Command names and their one-line help, in the order of the help page."""

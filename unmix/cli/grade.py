@@ -1,0 +1,114 @@
+"""`unmix grade`: talker signals and references in, figures out."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from unmix.cli.common import console, existing_file, json_option, overwrite_option, print_json, progress_bar
+
+if TYPE_CHECKING:
+    from unmix.metrics.grades import Grades
+
+__all__ = ["command", "print_grades"]
+
+
+@click.command("grade")
+@click.argument("scene", metavar="[SCENE]", type=existing_file, required=False)
+@click.option("--estimates", type=existing_file, metavar="DIR", help="Folder of talker signals, as `solve` writes it.")
+@click.option(
+    "--against",
+    type=click.Choice(["early", "image", "dry", "plain"]),
+    help="Kind of reference. [default: the first the talkers have]",
+)
+@click.option("--reference", "references", multiple=True, type=existing_file, help="Clean speech; once per talker.")
+@click.option("--estimate", "given", multiple=True, type=existing_file, help="A talker signal; once per talker.")
+@click.option("--unprocessed", type=existing_file, metavar="MIX", help="The recording, for the figures before.")
+@click.option("--unprocessed-channel", type=int, default=0, show_default=True, help="Its reference microphone.")
+@click.option(
+    "--match",
+    type=click.Choice(["name", "best"]),
+    help="By name, or whichever assignment gives the highest SIR. [default: name where names fit]",
+)
+@click.option("--filter-length", type=int, default=512, show_default=True, help="Taps of BSS Eval's allowed filter.")
+@click.option("--cross-check", is_flag=True, help="Recompute with mir_eval and print the largest difference.")
+@click.option("--out", type=existing_file, metavar="DIR", help="Folder for grades.json.")
+@overwrite_option
+@json_option
+def command(
+    scene: Path | None,
+    estimates: Path | None,
+    against: str | None,
+    references: tuple[Path, ...],
+    given: tuple[Path, ...],
+    unprocessed: Path | None,
+    unprocessed_channel: int,
+    match: str | None,
+    filter_length: int,
+    cross_check: bool,
+    out: Path | None,
+    overwrite: bool,
+    as_json: bool,
+) -> None:
+    """Grade talker signals against references, before and after.
+
+    Either a SCENE with references and --estimates DIR, or files: --reference and --estimate once per talker, and
+    --unprocessed for the recording.
+    """
+    _check_usage(scene, estimates, references, given)
+    from unmix.jobs.grade import grade_files, grade_scene
+
+    options: dict[str, Any] = {
+        "match": match,
+        "filter_length": filter_length,
+        "cross_check": cross_check,
+        "out_dir": out,
+        "overwrite": overwrite,
+    }
+    with progress_bar("grading"):
+        if scene is not None and estimates is not None:
+            from unmix.scene import Scene
+
+            grades = grade_scene(Scene.load(scene), estimates, against=against, **options)
+        else:
+            grades = grade_files(
+                given, references, unprocessed=unprocessed, unprocessed_channel=unprocessed_channel, **options
+            )
+    if as_json:
+        print_json(grades.to_dict())
+        return
+    print_grades(grades, cross_check=cross_check)
+    if out is not None:
+        click.echo(f"Written to {out}: grades.json")
+
+
+def _check_usage(
+    scene: Path | None, estimates: Path | None, references: tuple[Path, ...], given: tuple[Path, ...]
+) -> None:
+    if scene is None and (references or given):
+        if not references or not given:
+            raise click.UsageError("give --reference and --estimate, once per talker each")
+        if estimates is not None:
+            raise click.UsageError("--estimates belongs to a SCENE; give files with --estimate")
+        return
+    if scene is None:
+        raise click.UsageError("give SCENE and --estimates DIR, or --reference and --estimate files")
+    if references or given:
+        raise click.UsageError("give a SCENE or files with --reference and --estimate, not both")
+    if estimates is None:
+        raise click.UsageError("with SCENE, give the folder of talker signals: --estimates DIR")
+
+
+def print_grades(grades: Grades, *, cross_check: bool = False) -> None:
+    """The table for people."""
+    from unmix.cli.tables import before_and_after, undefined_lines
+
+    start, stop = grades.span_s
+    click.echo(f"Against the {grades.against} references, {stop - start:.1f} s at {grades.sample_rate} Hz")
+    console().print(before_and_after(grades))
+    for line in (*undefined_lines(grades), *grades.warnings):
+        click.echo(f"Note: {line}")
+    if cross_check and grades.cross_check_db is not None:
+        click.echo(f"Largest difference to mir_eval: {grades.cross_check_db:.2e} dB")

@@ -1,0 +1,73 @@
+"""`unmix solve`: a scene in, one audio file per talker out."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from unmix.cli.common import (
+    consent_line,
+    console,
+    existing_file,
+    json_option,
+    overwrite_option,
+    print_json,
+    progress_bar,
+    scene_argument,
+)
+from unmix.cli.presets import VariantName
+from unmix.variant import DEFAULT
+
+if TYPE_CHECKING:
+    from unmix.jobs.solution import Solution
+
+__all__ = ["command", "print_solution"]
+
+
+@click.command("solve")
+@scene_argument
+@click.option("--out", required=True, type=existing_file, metavar="DIR", help="Folder for the talker signals.")
+@click.option(
+    "--variant",
+    default=DEFAULT,
+    show_default=True,
+    type=VariantName(),
+    metavar="NAME_OR_FILE",
+    help="A preset (see `unmix variants`) or a variant file.",
+)
+@overwrite_option
+@json_option
+def command(scene: Path, out: Path, variant: str, overwrite: bool, as_json: bool) -> None:
+    """Separate the talkers of a scene: one audio file each.
+
+    SCENE is a scene file (TOML): the recording, the array, who sits where. Writes one 32-bit float WAV file per talker
+    and solution.json, which says whose is whose and what was done.
+    """
+    from unmix.jobs.solve import solve_to_folder
+    from unmix.scene import Scene
+
+    loaded = Scene.load(scene)
+    with progress_bar(f"separating {loaded.title}") as report:
+        solution = solve_to_folder(loaded, out, variant, overwrite=overwrite, progress=report)
+    if as_json:
+        print_json(solution.to_dict())
+        return
+    print_solution(solution, out)
+
+
+def print_solution(solution: Solution, out: Path) -> None:
+    """The table for people, and the cautions that belong to voices."""
+    from unmix.cli.tables import decibels, number, solution_table
+
+    seconds = solution.samples / solution.sample_rate
+    speed = seconds / max(solution.wall_time_s, 1e-9)
+    click.echo(
+        f"{len(solution.talkers)} talkers, {seconds:.1f} s at {solution.sample_rate} Hz, variant "
+        f"{solution.variant.name}, in {solution.wall_time_s:.1f} s ({speed:.0f} times faster than real time)"
+    )
+    console().print(solution_table(solution))
+    loudest = max(solution.talkers, key=lambda t: t.peak * t.scale)
+    click.echo(f"Written to {out}: the talkers' files and solution.json")
+    click.echo(consent_line(f"{loudest.name} ({number(decibels(loudest.peak * loudest.scale), 1)} dB FS peak)"))

@@ -1,0 +1,110 @@
+"""Tables for people: results in, rich tables out. Short, numbers aligned, units in the heads."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
+from rich import box
+from rich.table import Table
+
+from unmix.metrics.grades import Grades, TalkerGrade
+
+if TYPE_CHECKING:
+    from unmix.jobs.solution import Solution
+
+__all__ = ["before_and_after", "decibels", "number", "plain_table", "solution_table", "undefined_lines"]
+
+UNDEFINED = "–"
+_FIGURES = (
+    ("SDR\ndB", "sdr_db", 1),
+    ("SIR\ndB", "sir_db", 1),
+    ("STOI\n0 to 1", "stoi", 2),
+    ("SAR\ndB", "sar_db", 1),
+    ("SI-SDR\ndB", "si_sdr_db", 1),
+    ("ESTOI\n0 to 1", "estoi", 2),
+)
+_BRIEF = 3
+
+
+def plain_table(columns: Sequence[tuple[str, str]], rows: Sequence[Sequence[str]], *, title: str = "") -> Table:
+    """A table from texts; each column is a head and how it is set: "left" or "right"."""
+    table = Table(box=box.SIMPLE_HEAD, title=title or None, title_justify="left", title_style="bold", pad_edge=False)
+    for head, side in columns:
+        table.add_column(head, justify="right" if side == "right" else "left", no_wrap=side == "right")
+    for row in rows:
+        table.add_row(*row)
+    return table
+
+
+def solution_table(solution: Solution) -> Table:
+    """Who was separated, from where, how loud, and into which file."""
+    rows = [
+        [
+            talker.name,
+            "moving" if talker.moving else number(talker.azimuth_deg, 1),
+            number(talker.elevation_deg, 1),
+            "far" if talker.distance_m is None else number(talker.distance_m, 2),
+            number(decibels(talker.peak * talker.scale), 1),
+            talker.file or "",
+        ]
+        for talker in solution.talkers
+    ]
+    columns = [
+        ("talker", "left"),
+        ("azimuth, deg", "right"),
+        ("elevation, deg", "right"),
+        ("distance, m", "right"),
+        ("peak, dB FS", "right"),
+        ("file", "left"),
+    ]
+    return plain_table(columns, rows)
+
+
+def before_and_after(grades: Grades, *, brief: bool = False) -> Table:
+    """Each talker in the unprocessed microphone, in the separated signal, and the gain.
+
+    brief  only the figures that a newcomer needs
+    """
+    figures = _FIGURES[:_BRIEF] if brief else _FIGURES
+    leakage = not brief and any(talker.leakage_db for talker in grades.talkers)
+    columns = [("talker", "left"), ("", "left"), *[(head, "right") for head, _, _ in figures]]
+    table = plain_table([*columns, ("leakage\ndB", "right")] if leakage else columns, [])
+    for talker in grades.talkers:
+        for label, part in (("before", talker.unprocessed), ("after", talker), ("gain", talker.gain)):
+            gain = label == "gain"
+            cells = [number(getattr(part, key), digits, signed=gain) for _, key, digits in figures]
+            if leakage:
+                cells.append(number(_worst_leakage(talker), 1) if label == "after" else "")
+            name = talker.name if label == "before" else ""
+            table.add_row(name, label, *cells, style="bold" if gain else None, end_section=gain)
+    return table
+
+
+def undefined_lines(grades: Grades) -> list[str]:
+    """Why figures are missing, one line for each talker and reason."""
+    lines = []
+    for talker in grades.talkers:
+        reasons: dict[str, list[str]] = {}
+        for figure, why in talker.undefined.items():
+            reasons.setdefault(why, []).append(figure)
+        lines += [f"{talker.name}: no {', '.join(figures)}: {why}" for why, figures in reasons.items()]
+    return lines
+
+
+def number(value: float | None, digits: int, *, signed: bool = False) -> str:
+    """A figure as text; a dash when there is none."""
+    if value is None or not math.isfinite(value):
+        return UNDEFINED
+    return f"{value:{'+' if signed else ''}.{digits}f}"
+
+
+def decibels(magnitude: float) -> float | None:
+    """Level of a magnitude relative to full scale; None for silence."""
+    return 20.0 * math.log10(magnitude) if magnitude > 0.0 else None
+
+
+def _worst_leakage(talker: TalkerGrade) -> float | None:
+    known = [value for value in (talker.leakage_db or {}).values() if value is not None]
+    return max(known, default=None)

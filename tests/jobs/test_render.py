@@ -52,7 +52,10 @@ def spec(tmp_path: Path) -> Path:
 def test_a_rendered_folder_is_a_scene_with_its_truth(spec: Path, tmp_path: Path) -> None:
     out = tmp_path / "out"
     spec.write_text(WALKING)
-    done = render(spec, out)
+    shares: list[float] = []
+    done = render(spec, out, progress=shares.append)
+    assert shares == sorted(shares)
+    assert shares[-1] == 1.0
     assert {path.name for path in out.iterdir()} == set(done.files)
     scene = Scene.load(done.scene_path)
     assert scene.title == "Two at the chart table"

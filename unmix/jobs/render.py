@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import csv
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -52,6 +52,7 @@ def render(
     base: str | Path | None = None,
     clips: Mapping[str, Floats] | None = None,
     overwrite: bool = False,
+    progress: Callable[[float], None] | None = None,
 ) -> Rendered:
     """Render a scene with known truth into a folder.
 
@@ -68,6 +69,8 @@ def render(
         Dry speech by talker's name, (samples,) at the spec's rate, instead of files.
     overwrite : bool
         Whether files in ``out_dir`` may be replaced.
+    progress : optional
+        Called with the share done, 0 to 1.
 
     Raises
     ------
@@ -82,7 +85,7 @@ def render(
     stems = safe_names(talker.name for talker in spec.talker)
     refuse_to_replace(folder / "scene.toml", overwrite=overwrite)
     try:
-        scene = render_scene(spec, base=base or ".", clips=clips)
+        scene = render_scene(spec, base=base or ".", clips=clips, progress=progress)
     except InputError as error:
         raise InputError(f"{where}{error}") from None
     truth = _truth(spec, scene)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -79,6 +79,7 @@ def render_scene(
     clips: Mapping[str, Floats] | None = None,
     tracks: Mapping[str, Track] | None = None,
     orientation: Orientation | None = None,
+    progress: Callable[[float], None] | None = None,
 ) -> RenderedScene:
     """Render ``spec`` without writing anything.
 
@@ -92,6 +93,8 @@ def render_scene(
         Dry speech by talker's name, (samples,) at the spec's sample rate, instead of files.
     tracks, orientation : optional
         Paths by talker's name and the array's turning, instead of files.
+    progress : optional
+        Called with the share done, 0 to 1.
 
     Raises
     ------
@@ -116,12 +119,24 @@ def render_scene(
 
     sounds = []
     for index, (talker, material, seat) in enumerate(zip(spec.talker, materials, seats, strict=True)):
-        sound = _sound(spec, index, material, seat, room, samples, array.reference_channel)
+        watch = _part(progress, index, len(seats))
+        sound = _sound(spec, index, material, seat, room, samples, array.reference_channel, watch)
+        watch(1.0)
         sounds.append(
             _at_level(sound, talker.level_db, material.stretch(samples), array.reference_channel, talker.name)
         )
     noise = _noise(spec, base, sounds, materials, array, faults, samples, rng_sensor, rng_diffuse)
     return _assemble(spec, array, faults, sounds, noise, where, orientation, materials, room)
+
+
+def _part(progress: Callable[[float], None] | None, index: int, count: int) -> Callable[[float], None]:
+    """Progress within part ``index`` of ``count`` equal parts."""
+
+    def watch(share: float) -> None:
+        if progress is not None:
+            progress((index + share) / count)
+
+    return watch
 
 
 def _sound(
@@ -132,6 +147,7 @@ def _sound(
     room: Room | None,
     samples: int,
     reference: int,
+    progress: Callable[[float], None],
 ) -> Sound:
     placed = material.placed(samples)
     if material.take:
@@ -149,6 +165,7 @@ def _sound(
         reference=reference,
         source=index,
         path_step_m=spec.path_step_m,
+        progress=progress,
     )
 
 

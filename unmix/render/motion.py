@@ -10,7 +10,7 @@ truth and mixture agree exactly all the same.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
@@ -44,10 +44,12 @@ def render_moving(
     reference: int,
     source: int = 0,
     path_step_m: float = 0.02,
+    progress: Callable[[float], None] | None = None,
 ) -> Kinds:
     """``clip`` (samples,) as heard while talker or array move.
 
-    Returns dry and early at microphone ``reference`` (samples,) and the image at all (channels, samples).
+    ``progress`` is called with the share done, 0 to 1. Returns dry and early at microphone ``reference`` (samples,)
+    and the image at all (channels, samples).
     """
     if room is None:
         return _near_sound(clip, seat, None, None, sample_rate, speed_m_s, reference)
@@ -57,7 +59,7 @@ def render_moving(
     order = images.order
     near, far = images.select(order <= _EXACT_ORDER), images.select(order > _EXACT_ORDER)
     dry, early, image = _near_sound(clip, seat, near, room, sample_rate, speed_m_s, reference)
-    early_tail, tail = _tail_sound(clip, seat, room, far, sample_rate, reference, path_step_m)
+    early_tail, tail = _tail_sound(clip, seat, room, far, sample_rate, reference, path_step_m, progress)
     return dry, early + early_tail, image + tail
 
 
@@ -117,7 +119,14 @@ def _reflections(
 
 
 def _tail_sound(
-    clip: Floats, seat: Seat, room: Room, far: Images, sample_rate: int, reference: int, path_step_m: float
+    clip: Floats,
+    seat: Seat,
+    room: Room,
+    far: Images,
+    sample_rate: int,
+    reference: int,
+    path_step_m: float,
+    progress: Callable[[float], None] | None,
 ) -> tuple[Floats, Floats]:
     """What comes behind the exact images: its early part at ``reference``, and all of it at all microphones."""
     knots_s, weights = _path(seat, clip.size, sample_rate, path_step_m)
@@ -135,9 +144,11 @@ def _tail_sound(
         return slice(start, stop), weight[start:stop] * sound
 
     with ThreadPoolExecutor(2) as pool:
-        for place, sound in pool.map(block, range(len(knots_s))):
+        for knot, (place, sound) in enumerate(pool.map(block, range(len(knots_s)))):
             early[place] += sound[0]
             image[:, place] += sound[1:]
+            if progress is not None:
+                progress((knot + 1) / len(knots_s))
     return early, image
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -75,8 +76,9 @@ def sound_from_seat(
     reference: int,
     source: int,
     path_step_m: float,
+    progress: Callable[[float], None] | None = None,
 ) -> Sound:
-    """``clip`` (samples,) spoken from ``seat``; ``source`` numbers the talkers."""
+    """``clip`` (samples,) spoken from ``seat``; ``source`` numbers the talkers, ``progress`` gets the share done."""
     middle = np.array([0.5 * clip.size / sample_rate])
     answer = None if seat.moves and room is None else _responses_at(seat, room, middle, sample_rate, speed_m_s, source)
     t20_s = drr_db = None
@@ -93,6 +95,7 @@ def sound_from_seat(
             reference=reference,
             source=source,
             path_step_m=path_step_m,
+            progress=progress,
         )
         return Sound(dry, early, image, t20_s, drr_db)
     image = convolve_responses(clip, answer.full, answer.lead, clip.size)

@@ -39,8 +39,8 @@ def command(spec: Path | None, out: Path | None, explain: bool, overwrite: bool,
         raise click.UsageError("give SPEC and --out DIR, or --explain")
     from unmix.jobs.render import render
 
-    with progress_bar("rendering"):
-        rendered = render(spec, out, overwrite=overwrite)
+    with progress_bar("rendering") as report:
+        rendered = render(spec, out, overwrite=overwrite, progress=report)
     tree = {"scene": str(rendered.scene_path), "files": list(rendered.files), "truth": rendered.truth}
     if as_json:
         print_json(tree)

@@ -12,7 +12,8 @@ Floats = NDArray[np.float64]
 SILENT_DBFS = -120.0
 """Peak below which a channel counts as silent: under half a step of 20-bit samples."""
 _SAME = 1e-12
-_CLIPPED_RUN = 3
+_FULL = 0.999
+"""Magnitude from which three samples in a row count as clipped."""
 
 
 class ChannelHealth:
@@ -25,20 +26,17 @@ class ChannelHealth:
 
     def add(self, chunk: Floats) -> None:
         """Take in (channels, samples)."""
-        magnitude = np.abs(chunk)
-        self._peak = np.maximum(self._peak, magnitude.max(axis=1, initial=0.0))
+        peak = np.maximum(chunk.max(axis=1, initial=0.0), -chunk.min(axis=1, initial=0.0))
+        self._peak = np.maximum(self._peak, peak)
         self._gram += chunk @ chunk.T
-        full = magnitude >= 0.999
-        if full.any() and chunk.shape[1] >= _CLIPPED_RUN:
-            runs = full[:, :-2] & full[:, 1:-1] & full[:, 2:]
-            self._clipped += runs.sum(axis=1)
+        for channel in np.flatnonzero(peak >= _FULL):
+            full = np.abs(chunk[channel]) >= _FULL
+            self._clipped[channel] += np.count_nonzero(full[:-2] & full[1:-1] & full[2:])
 
     def findings(self) -> list[str]:
         """One line for every silent, duplicated or clipped channel (numbers are the array's, from zero)."""
         silent = self._peak <= 10.0 ** (SILENT_DBFS / 20.0)
-        lines = [
-            f"channel {c} is silent; leave it out of `channels` and of the array" for c in np.flatnonzero(silent)
-        ]
+        lines = [f"channel {c} is silent; leave it out of `channels` and of the array" for c in np.flatnonzero(silent)]
         power = np.diag(self._gram)
         for a in range(len(power)):
             for b in range(a + 1, len(power)):

@@ -87,7 +87,7 @@ class FilterBankSeparator:
         length = bank.taps.shape[-1]
         self._size = next_fast_len(max(4 * length, 8192), real=True)
         self._step = self._size - length + 1
-        self._spectrum = np.ascontiguousarray(rfft(bank.taps, self._size, axis=-1).transpose(2, 0, 1))
+        self._spectrum = rfft(bank.taps, self._size, axis=-1)
         # As many zeros of the past as a filter sees: the first output is then the recording's first sample.
         self._held = np.zeros((bank.taps.shape[1], bank.after))
 
@@ -117,7 +117,7 @@ class FilterBankSeparator:
         from scipy.fft import irfft, rfft
 
         spectrum = rfft(piece, self._size, axis=-1, workers=self._workers)
-        talkers = (self._spectrum @ spectrum.T[:, :, None])[:, :, 0].T
+        talkers = np.einsum("kmf,mf->kf", self._spectrum, spectrum)
         length = self._bank.taps.shape[-1]
         return np.asarray(irfft(talkers, self._size, axis=-1, workers=self._workers)[:, length - 1 :])
 

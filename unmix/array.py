@@ -96,7 +96,8 @@ class Array:
         m = len(positions)
         if not 0 <= content.reference_channel < m:
             raise InputError(
-                f"{where}: key `reference_channel`: {content.reference_channel} is not a channel; the array has 0 to {m - 1}"
+                f"{where}: key `reference_channel`: {content.reference_channel} is not a channel; the array has "
+                f"0 to {m - 1}"
             )
         columns: dict[str, Any] = {}
         for name in ("gain_db", "delay_s", "polarity", "gain_std_db", "delay_std_s", "position_std_m"):
@@ -136,6 +137,7 @@ class Array:
             delay_std_s=column("delay_std_s", None),
             position_std_m=column("position_std_m", None),
             full_scale_db_spl=self.full_scale_db_spl,
+            allow_large=self.aperture_m > _DOUBTFUL_APERTURE_M,
         )
 
     def save(self, path: str | Path, *, overwrite: bool = False) -> None:
@@ -174,8 +176,8 @@ def _checked_positions(content: ArrayFile, where: str) -> Floats:
     if distance.min() < _COINCIDENT_M:
         first, second = np.unravel_index(int(distance.argmin()), distance.shape)
         raise InputError(
-            f"{where}: key `positions_m`: microphones {min(first, second)} and {max(first, second)} stand at the same place; "
-            "correct one, or leave its channel out"
+            f"{where}: key `positions_m`: microphones {min(first, second)} and {max(first, second)} stand at the "
+            "same place; correct one, or leave its channel out"
         )
     np.fill_diagonal(distance, 0.0)
     if distance.max() > _DOUBTFUL_APERTURE_M and not content.allow_large:

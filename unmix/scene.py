@@ -16,93 +16,15 @@ from unmix.array import Array, ArrayFile
 from unmix.audio import Recording, Samples
 from unmix.errors import FileError, InputError
 from unmix.files import read_toml, write_toml
+from unmix.rttm import read_rttm
+from unmix.scene_file import ArrayTable, RecordingTable, SceneFile, Stretches, TalkerTable
 from unmix.track import Orientation, Track
 
-__all__ = ["REFERENCE_KINDS", "Scene", "SceneFile", "Talker"]
+__all__ = ["REFERENCE_KINDS", "Scene", "Talker"]
 
 ReferenceKind = Literal["early", "image", "dry"]
 REFERENCE_KINDS: tuple[ReferenceKind, ...] = ("early", "image", "dry")
 """Kinds of reference, the preferred one first."""
-
-Stretches = list[tuple[float, float]]
-
-
-class _Strict(msgspec.Struct, forbid_unknown_fields=True, kw_only=True, omit_defaults=True):
-    pass
-
-
-class RecordingTable(_Strict):
-    """The `[recording]` table."""
-
-    file: str | None = None
-    files: list[str] | None = None
-    channels: list[int] | None = None
-    start_s: float = 0.0
-    stop_s: float | None = None
-    noise_only_s: Stretches | None = None
-
-
-class ArrayTable(_Strict):
-    """The `[array]` table: a file, or the content of an array file inline."""
-
-    file: str | None = None
-    positions_m: list[list[float]] | None = None
-    reference_channel: int | None = None
-    title: str = ""
-    gain_db: list[float] | None = None
-    delay_s: list[float] | None = None
-    polarity: list[int] | None = None
-    gain_std_db: list[float] | None = None
-    delay_std_s: list[float] | None = None
-    position_std_m: list[float] | None = None
-    full_scale_db_spl: float | None = None
-    allow_large: bool = False
-
-
-class ReferencesTable(_Strict):
-    """The `references` of a talker, by kind."""
-
-    dry: str | None = None
-    early: str | None = None
-    image: str | None = None
-
-
-class TalkerTable(_Strict):
-    """One `[[talker]]` table."""
-
-    name: str | None = None
-    azimuth_deg: float | None = None
-    elevation_deg: float | None = None
-    distance_m: float | None = None
-    track: str | None = None
-    active_s: Stretches | None = None
-    reference: str | None = None
-    references: ReferencesTable | None = None
-
-
-class OrientationTable(_Strict):
-    """The `[orientation]` table."""
-
-    file: str
-    clock_offset_s: float | Literal["estimate"] = 0.0
-
-
-class RoomTable(_Strict):
-    """The `[room]` table."""
-
-    temperature_c: float = 20.0
-
-
-class SceneFile(_Strict, kw_only=True):
-    """A scene as it stands in a TOML file."""
-
-    title: str = ""
-    activity: str | None = None
-    recording: RecordingTable
-    array: ArrayTable
-    talker: list[TalkerTable] = []
-    orientation: OrientationTable | None = None
-    room: RoomTable | None = None
 
 
 @dataclass(frozen=True)
@@ -119,6 +41,13 @@ class Talker:
     track: Track | None = None
     active_s: Stretches | None = None
     references: dict[str, Path] = field(default_factory=dict)
+
+    @classmethod
+    def at(
+        cls, name: str, azimuth_deg: float, *, elevation_deg: float = 0.0, distance_m: float | None = None
+    ) -> Talker:
+        """A talker at rest at a bearing in degrees; without `distance_m` far away (plane wave)."""
+        return cls(name, float(np.radians(azimuth_deg)), float(np.radians(elevation_deg)), distance_m)
 
     @property
     def located(self) -> bool:
@@ -157,10 +86,19 @@ class Scene:
         title: str = "recording",
         temperature_c: float = 20.0,
     ) -> Scene:
-        """A scene from samples in memory: recording (channels, samples). Raises InputError when shapes disagree."""
-        samples = Samples(np.asarray(recording, dtype=np.float64), sample_rate)
+        """A scene from samples in memory: recording (channels, samples), full scale 1.0.
+
+        Raises InputError when the shapes disagree, the samples are integers or not finite, or two talkers share a name.
+        """
+        samples = Samples(np.asarray(recording), sample_rate)
         if len(samples.signals) != array.channels:
-            raise InputError(f"recording has {len(samples.signals)} channels and the array {array.channels} microphones")
+            raise InputError(
+                f"recording: {len(samples.signals)} channels for an array of {array.channels} microphones; "
+                "give (channels, samples)"
+            )
+        names = [talker.name for talker in talkers]
+        if len(set(names)) < len(names):
+            raise InputError(f"talkers: two are called {max(names, key=names.count)!r}; rename one")
         return cls(title, samples, array, tuple(talkers), temperature_c=temperature_c)
 
     @classmethod
@@ -170,6 +108,8 @@ class Scene:
         Raises FileError for a missing or damaged file, InputError for wrong content.
         """
         path = Path(path)
+        if path.is_dir():
+            raise FileError(f"{path}: is a folder; name the scene file in it (TOML)")
         content = read_toml(path, SceneFile)
         recording = _recording(content.recording, path)
         array = _array(content.array, path)
@@ -251,7 +191,8 @@ def _stretches(given: Stretches | None, recording: Recording, path: Path, key: s
 
 
 def _talkers(content: SceneFile, path: Path) -> tuple[Talker, ...]:
-    talkers = []
+    talkers: list[Talker] = []
+    activity = None if content.activity is None else _read_activity(path, content)
     for index, table in enumerate(content.talker):
         name = table.name if table.name is not None else f"talker-{index + 1}"
         key = f"talker[{index}]"
@@ -259,22 +200,39 @@ def _talkers(content: SceneFile, path: Path) -> tuple[Talker, ...]:
             raise InputError(f"{path}: key `{key}.name` is empty; give a name or leave it out")
         if name in [t.name for t in talkers]:
             raise InputError(f"{path}: key `{key}.name`: two talkers are called {name!r}; rename one")
-        talkers.append(_talker(table, name, key, path, content))
+        talkers.append(_talker(table, name, key, path, activity))
     return tuple(talkers)
 
 
-def _talker(table: TalkerTable, name: str, key: str, path: Path, content: SceneFile) -> Talker:
-    if table.track is not None and table.azimuth_deg is not None:
-        raise InputError(f"{path}: key `{key}`: both `track` and `azimuth_deg` are given; keep one")
+def _talker(table: TalkerTable, name: str, key: str, path: Path, activity: dict[str, Stretches] | None) -> Talker:
+    _check_bearing(table, key, path)
+    return Talker(
+        name=name,
+        azimuth=None if table.azimuth_deg is None else float(np.radians(table.azimuth_deg)),
+        elevation=float(np.radians(table.elevation_deg or 0.0)),
+        distance_m=table.distance_m,
+        track=Track.load(path.parent / table.track) if table.track else None,
+        active_s=_active(table, name, key, path, activity),
+        references=_references(table, key, path),
+    )
+
+
+def _check_bearing(table: TalkerTable, key: str, path: Path) -> None:
     for field_name in ("azimuth_deg", "elevation_deg", "distance_m"):
-        if getattr(table, field_name) is not None:
-            _finite(getattr(table, field_name), path, f"{key}.{field_name}")
+        if getattr(table, field_name) is None:
+            continue
+        if table.track is not None:
+            raise InputError(f"{path}: key `{key}`: both `track` and `{field_name}` are given; keep one")
+        _finite(getattr(table, field_name), path, f"{key}.{field_name}")
     if table.azimuth_deg is not None and abs(table.azimuth_deg) > 360.0:
         raise InputError(f"{path}: key `{key}.azimuth_deg`: {table.azimuth_deg:g}; give degrees within +-360")
     if table.elevation_deg is not None and abs(table.elevation_deg) > 90.0:
         raise InputError(f"{path}: key `{key}.elevation_deg`: {table.elevation_deg:g}; give degrees within +-90")
     if table.distance_m is not None and table.distance_m <= 0.0:
         raise InputError(f"{path}: key `{key}.distance_m`: {table.distance_m:g}; give metres above zero")
+
+
+def _references(table: TalkerTable, key: str, path: Path) -> dict[str, Path]:
     if table.reference is not None and table.references is not None:
         raise InputError(f"{path}: key `{key}`: both `reference` and `references` are given; keep one")
     given: dict[str, Any] = msgspec.structs.asdict(table.references) if table.references else {}
@@ -283,56 +241,28 @@ def _talker(table: TalkerTable, name: str, key: str, path: Path, content: SceneF
     for kind, file in references.items():
         if not file.exists():
             raise FileError(f"{path}: key `{key}`: {kind} reference {file} does not exist; correct the path")
-    return Talker(
-        name=name,
-        azimuth=None if table.azimuth_deg is None else float(np.radians(table.azimuth_deg)),
-        elevation=float(np.radians(table.elevation_deg or 0.0)),
-        distance_m=table.distance_m,
-        track=Track.load(path.parent / table.track) if table.track else None,
-        active_s=_activity(table, name, key, path, content),
-        references=references,
-    )
+    return references
 
 
-def _activity(table: TalkerTable, name: str, key: str, path: Path, content: SceneFile) -> Stretches | None:
-    if table.active_s is not None:
-        for start, stop in table.active_s:
-            if not 0.0 <= start < stop:
-                raise InputError(
-                    f"{path}: key `{key}.active_s`: [{start:g}, {stop:g}] is no stretch; give [start, stop]"
-                )
-        return list(table.active_s)
-    if content.activity is None:
-        return None
-    return read_rttm(path.parent / content.activity).get(name, [])
+def _read_activity(path: Path, content: SceneFile) -> dict[str, Stretches]:
+    """Stretches by talker from the activity file; a name in it that no talker bears is an error."""
+    file = path.parent / str(content.activity)
+    spoken = read_rttm(file)
+    names = {(t.name or f"talker-{i + 1}").replace(" ", "_") for i, t in enumerate(content.talker)}
+    strange = sorted(set(spoken) - names)
+    if strange and names:
+        raise InputError(f"{file}: speaks of {strange[0]!r}, whom {path} does not name; make the names agree")
+    return spoken
 
 
-def read_rttm(path: Path) -> dict[str, Stretches]:
-    """Stretches of speech per talker from an RTTM file (NIST Rich Transcription 2009: SPEAKER lines)."""
-    try:
-        lines = path.read_text(encoding="utf-8").splitlines()
-    except FileNotFoundError:
-        raise FileError(f"{path}: no such file; check the path") from None
-    found: dict[str, Stretches] = {}
-    for number, line in enumerate(lines, start=1):
-        words = line.split()
-        if not words or words[0] != "SPEAKER":
-            continue
-        try:
-            start, duration, name = float(words[3]), float(words[4]), words[7]
-        except (IndexError, ValueError):
-            raise InputError(f"{path}: line {number}: not an RTTM SPEAKER line: {line!r}") from None
-        found.setdefault(name, []).append((start, start + duration))
-    return found
-
-
-def write_rttm(path: Path, activity: dict[str, Stretches], *, file_id: str, overwrite: bool = False) -> None:
-    """Write stretches of speech per talker as RTTM SPEAKER lines, ordered by time; spaces in names become `_`."""
-    from unmix.files import write_aside
-
-    rows = sorted((a, b, name.replace(" ", "_")) for name, stretches in activity.items() for a, b in stretches)
-    with write_aside(path, overwrite=overwrite) as aside:
-        aside.write_text(
-            "".join(f"SPEAKER {file_id} 1 {a:.3f} {b - a:.3f} <NA> <NA> {n} <NA> <NA>\n" for a, b, n in rows),
-            encoding="utf-8",
-        )
+def _active(
+    table: TalkerTable, name: str, key: str, path: Path, activity: dict[str, Stretches] | None
+) -> Stretches | None:
+    if table.active_s is None:
+        return None if activity is None else activity.get(name.replace(" ", "_"), [])
+    if activity is not None:
+        raise InputError(f"{path}: key `{key}.active_s`: `activity` is given at the top; keep one")
+    for start, stop in table.active_s:
+        if not 0.0 <= start < stop:
+            raise InputError(f"{path}: key `{key}.active_s`: [{start:g}, {stop:g}] is no stretch; give [start, stop]")
+    return list(table.active_s)

@@ -31,6 +31,9 @@ class Track:
         """Read a CSV file with columns time_s, azimuth_deg and optionally elevation_deg, distance_m."""
         columns = read_columns(Path(path), required=("time_s", "azimuth_deg"), optional=("elevation_deg", "distance_m"))
         time = columns["time_s"]
+        distance = columns.get("distance_m")
+        if distance is not None and np.any(distance <= 0.0):
+            raise InputError(f"{path}: column `distance_m`: {distance.min():g}; give metres above zero")
         return cls(
             time_s=time,
             azimuth=np.radians(columns["azimuth_deg"]),
@@ -78,7 +81,10 @@ class Orientation:
         return cls(columns["time_s"], q / norm[:, None])
 
     def matrices(self, time_s: ArrayLike) -> Floats:
-        """Rotations (array to world) at the given times: (..., 3, 3), interpolated on the sphere, held beyond both ends."""
+        """Rotations (array to world) at the given times: (..., 3, 3).
+
+        Interpolated on the sphere, held beyond both ends.
+        """
         from scipy.spatial.transform import Rotation, Slerp
 
         t = np.clip(np.asarray(time_s, dtype=np.float64), self.time_s[0], self.time_s[-1])
@@ -90,18 +96,19 @@ class Orientation:
 
 
 def read_columns(path: Path, *, required: tuple[str, ...], optional: tuple[str, ...] = ()) -> dict[str, Floats]:
-    """Read named numeric columns of a CSV file whose first column of interest is a strictly increasing `time_s`.
+    """Read named numeric columns of a CSV file; `time_s`, where there is one, must increase strictly.
 
     Raises FileError when the file cannot be read, InputError naming file and line when its content is wrong.
     """
     try:
-        with path.open(newline="", encoding="utf-8") as stream:
-            rows = [row for row in csv.reader(stream) if row and not row[0].startswith("#")]
+        with path.open(newline="", encoding="utf-8-sig") as stream:
+            reader = csv.reader(stream)
+            rows = [(reader.line_num, row) for row in reader if row and not row[0].startswith("#")]
     except FileNotFoundError:
         raise FileError(f"{path}: no such file; check the path") from None
     except (OSError, UnicodeDecodeError) as error:
         raise FileError(f"{path}: cannot be read as text ({error})") from None
-    header = [name.strip() for name in rows[0]] if rows else []
+    header = [name.strip() for name in rows[0][1]] if rows else []
     missing = [name for name in required if name not in header]
     if missing:
         raise InputError(f"{path}: column `{missing[0]}` is missing; the first line must name {', '.join(required)}")
@@ -111,15 +118,21 @@ def read_columns(path: Path, *, required: tuple[str, ...], optional: tuple[str, 
     if len(rows) < 2:
         raise InputError(f"{path}: no rows below the header")
     values = np.empty((len(rows) - 1, len(header)))
-    for line, row in enumerate(rows[1:], start=2):
+    for index, (line, row) in enumerate(rows[1:]):
         try:
-            values[line - 2] = [float(cell) for cell in row]
+            values[index] = _numbers(row, len(header))
         except ValueError:
-            raise InputError(f"{path}: row {line}: expected {len(header)} numbers, got {','.join(row)!r}") from None
-        if not np.all(np.isfinite(values[line - 2])):
-            raise InputError(f"{path}: row {line}: values must be finite numbers")
+            raise InputError(f"{path}: line {line}: expected {len(header)} numbers, got {','.join(row)!r}") from None
+        if not np.all(np.isfinite(values[index])):
+            raise InputError(f"{path}: line {line}: values must be finite numbers")
     columns = {name: values[:, i].copy() for i, name in enumerate(header)}
     if "time_s" in columns and np.any(np.diff(columns["time_s"]) <= 0):
-        line = int(np.argmax(np.diff(columns["time_s"]) <= 0)) + 3
-        raise InputError(f"{path}: row {line}: time_s does not increase; sort the rows and remove repeats")
+        line = rows[int(np.argmax(np.diff(columns["time_s"]) <= 0)) + 2][0]
+        raise InputError(f"{path}: line {line}: time_s does not increase; sort the rows and remove repeats")
     return columns
+
+
+def _numbers(row: list[str], count: int) -> list[float]:
+    if len(row) != count:
+        raise ValueError
+    return [float(cell) for cell in row]

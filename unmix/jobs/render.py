@@ -18,7 +18,15 @@ from unmix.files import folder_aside, refuse_to_replace, safe_names, write_json,
 from unmix.render.activity import quiet_stretches, speech_stretches
 from unmix.render.compose import RenderedScene, render_scene
 from unmix.render.spec import RenderSpec
-from unmix.scene import ArrayTable, OrientationTable, RecordingTable, ReferencesTable, RoomTable, SceneFile, TalkerTable
+from unmix.scene_file import (
+    ArrayTable,
+    OrientationTable,
+    RecordingTable,
+    ReferencesTable,
+    RoomTable,
+    SceneFile,
+    TalkerTable,
+)
 from unmix.track import Orientation
 
 __all__ = ["Rendered", "render"]

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from unmix.audio_open import open_audio
 from unmix.errors import FileError, InputError
 from unmix.files import write_aside
 
@@ -24,20 +25,6 @@ Floats = NDArray[np.float64]
 LOWEST_RATE_HZ = 8_000
 HIGHEST_RATE_HZ = 192_000
 CHUNK_S = 2.0
-
-
-def _open(path: Path) -> soundfile.SoundFile:
-    import soundfile
-
-    if not path.exists():
-        raise FileError(f"{path}: no such file; check the path")
-    if path.is_dir():
-        raise FileError(f"{path}: is a folder; name an audio file")
-    try:
-        return soundfile.SoundFile(path)
-    except soundfile.LibsndfileError as error:
-        reason = str(error).rsplit(":", 1)[-1].strip(" .")
-        raise FileError(f"{path}: not readable audio ({reason}); give WAV, RF64, W64, FLAC or AIFF") from None
 
 
 @dataclass(frozen=True)
@@ -69,7 +56,7 @@ class Recording:
         paths = tuple(Path(f) for f in files)
         counts, rates, lengths = [], [], []
         for path in paths:
-            with _open(path) as stream:
+            with open_audio(path) as stream:
                 counts.append(stream.channels)
                 rates.append(stream.samplerate)
                 lengths.append(stream.frames)
@@ -115,11 +102,12 @@ class Recording:
     def chunks(self, size: int | None = None) -> Iterator[Floats]:
         """Yield (channels, size) arrays from start to stop, the last one shorter.
 
-        Raises FileError when a file is cut short, InputError naming channel and second when a sample is NaN or infinite.
+        Raises FileError when a file is cut short, InputError naming channel and second when a sample is NaN or
+        infinite.
         """
         size = size or round(CHUNK_S * self.sample_rate)
         with contextlib.ExitStack() as stack:
-            streams = [stack.enter_context(_open(path)) for path in self.files]
+            streams = [stack.enter_context(open_audio(path)) for path in self.files]
             for stream in streams:
                 stream.seek(self.start)
             for at in range(self.start, self.stop, size):
@@ -164,9 +152,16 @@ class Samples:
     sample_rate: int
 
     def __post_init__(self) -> None:
-        signals = np.asarray(self.signals, dtype=np.float64)
-        if signals.ndim != 2 or signals.shape[1] == 0:
-            raise InputError(f"recording: expected (channels, samples), got shape {signals.shape}")
+        given = np.asarray(self.signals)
+        if given.ndim != 2 or given.shape[1] == 0:
+            raise InputError(f"recording: expected (channels, samples), got shape {given.shape}")
+        if not np.issubdtype(given.dtype, np.floating):
+            raise InputError(f"recording: samples of type {given.dtype}; give floating point with full scale 1.0")
+        if not LOWEST_RATE_HZ <= self.sample_rate <= HIGHEST_RATE_HZ:
+            raise InputError(
+                f"recording: sample rate {self.sample_rate} Hz; {LOWEST_RATE_HZ} to {HIGHEST_RATE_HZ} Hz are supported"
+            )
+        signals = np.asarray(given, dtype=np.float64)
         bad = ~np.isfinite(signals)
         if bad.any():
             channel, sample = np.argwhere(bad)[0]
@@ -217,11 +212,22 @@ def resample(signals: Floats, rate_in: int, rate_out: int) -> Floats:
 class AudioWriter:
     """Write (channels, n) chunks to a file in the order they come; a context manager.
 
-    The format follows the suffix; WAV beyond 4 GB becomes RF64 (EBU Tech 3306). `peak` is the largest magnitude written.
+    The format follows the suffix; `subtype` is libsndfile's name of the sample format, by default 32-bit float, or
+    24 bits where the format has no float (FLAC). WAV that `expect` samples carry beyond 4 GB becomes RF64 (EBU Tech 3306).
+
+    peak     largest magnitude written
+    clipped  samples beyond full scale, which an integer format cannot hold
+
+    Raises FileError when the place cannot be written.
     """
 
-    def __init__(self, path: Path, sample_rate: int, channels: int, *, subtype: str = "FLOAT", expect: int = 0) -> None:
+    def __init__(
+        self, path: Path, sample_rate: int, channels: int, *, subtype: str | None = None, expect: int = 0
+    ) -> None:
         import soundfile
+
+        if subtype is None:
+            subtype = "PCM_24" if path.suffix.lower() == ".flac" else "FLOAT"
 
         large = expect * channels * 4 > 2**32 - 2**20
         options: dict[str, Any] = {"format": "RF64"} if large and path.suffix.lower() == ".wav" else {}
@@ -231,6 +237,9 @@ class AudioWriter:
             )
         except (soundfile.LibsndfileError, OSError) as error:
             raise FileError(f"{path}: cannot be written ({error})") from None
+        except (TypeError, ValueError) as error:
+            raise InputError(f"{path}: {error}; use the suffix .wav or .flac") from None
+        self._path = path
         self._integer = subtype.startswith("PCM")
         self.peak = 0.0
         self.clipped = 0
@@ -241,13 +250,22 @@ class AudioWriter:
         self.peak = max(self.peak, float(magnitude.max(initial=0.0)))
         if self._integer:
             self.clipped += int(np.count_nonzero(magnitude > 1.0))
-        self._stream.write(np.ascontiguousarray(chunk.T))
+        import soundfile
+
+        try:
+            self._stream.write(np.ascontiguousarray(chunk.T))
+        except soundfile.LibsndfileError as error:
+            raise FileError(f"{self._path}: cannot be written ({error}); is the disk full?") from None
+
+    def close(self) -> None:
+        """Finish the file."""
+        self._stream.close()
 
     def __enter__(self) -> AudioWriter:
         return self
 
     def __exit__(self, *_: object) -> None:
-        self._stream.close()
+        self.close()
 
 
 def write_audio(
@@ -255,10 +273,10 @@ def write_audio(
     signals: NDArray[np.floating[Any]],
     sample_rate: int,
     *,
-    subtype: str = "FLOAT",
+    subtype: str | None = None,
     overwrite: bool = False,
 ) -> int:
-    """Write (channels, samples) aside and rename; returns how many samples clipped (integer subtypes only)."""
+    """Write (channels, samples) aside and rename; returns how many samples clipped (integer formats only)."""
     path = Path(path)
     with write_aside(path, overwrite=overwrite) as aside:
         with AudioWriter(aside, sample_rate, len(signals), subtype=subtype, expect=signals.shape[1]) as writer:

@@ -51,7 +51,7 @@ def read_toml(path: Path, kind: type[T]) -> T:
 def decode_toml(text: bytes | str, kind: type[T], *, where: str) -> T:
     """Decode TOML text into the struct `kind`; `where` names its source in errors."""
     try:
-        tree = tomllib.loads(text.decode("utf-8") if isinstance(text, bytes) else text)
+        tree = tomllib.loads(text.decode("utf-8-sig") if isinstance(text, bytes) else text)
     except UnicodeDecodeError:
         raise InputError(f"{where}: not UTF-8 text; is this a TOML file?") from None
     except tomllib.TOMLDecodeError as error:
@@ -177,16 +177,21 @@ def _without_none(tree: Any) -> Any:
 
 
 @contextlib.contextmanager
-def folder_aside(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
-    """Yield a temporary folder beside `path` and move its files into `path` when the block ends well.
+def folder_aside(path: Path, *, overwrite: bool = False, expect: Iterable[str] = ()) -> Iterator[Path]:
+    """Yield a temporary folder inside `path` and move its files into `path` when the block ends well.
 
     Files already in `path` under the same names are replaced only with `overwrite`; others there are left alone.
-    Nothing is moved before every name has been checked.
+    Nothing is moved before every name has been checked; the names in `expect` are checked before the work begins. When
+    the block raises, nothing stays behind, folders made for it included.
     """
+    for expected in expect:
+        refuse_to_replace(path / expected, overwrite=overwrite)
+    made_here = _missing_folders(path)
     try:
         path.mkdir(parents=True, exist_ok=True)
         aside = Path(tempfile.mkdtemp(prefix=".unfinished-", dir=path))
     except OSError as error:
+        _remove_empty(made_here)
         raise FileError(f"{path}: cannot be written ({error.strerror}); choose another folder") from None
     try:
         yield aside
@@ -202,3 +207,18 @@ def folder_aside(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
         raise FileError(f"{path}: cannot be written ({error.strerror}); is the disk full?") from None
     finally:
         shutil.rmtree(aside, ignore_errors=True)
+        _remove_empty(made_here)
+
+
+def _missing_folders(path: Path) -> list[Path]:
+    """`path` and those of its parents that do not exist yet, the deepest first."""
+    return [folder for folder in (path, *path.parents) if not folder.exists()]
+
+
+def _remove_empty(folders: Iterable[Path]) -> None:
+    """Remove folders that are still empty, the deepest first; the others are in use."""
+    for folder in folders:
+        try:
+            folder.rmdir()
+        except OSError:
+            return

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import html
-import re
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -13,11 +12,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from unmix.audio import AudioWriter, Recording
+from unmix.files import safe_names
 from unmix.scene import Scene
 from unmix.solvers.assemble import Assembly
 from unmix.variant import Variant
 
-__all__ = ["Memory", "Sink", "Solution", "SolvedTalker", "TalkerFiles", "describe", "safe_names"]
+__all__ = ["Memory", "Sink", "Solution", "SolvedTalker", "TalkerFiles", "describe"]
 
 Floats = NDArray[np.float64]
 
@@ -115,8 +115,8 @@ class Solution:
         seconds = self.samples / self.sample_rate
         return (
             "<table><thead><tr><th>talker</th><th>azimuth, deg</th><th>peak, dB re full scale</th></tr></thead>"
-            f"<tbody>{rows}</tbody></table><p>{html.escape(self.variant.name)}: {seconds:.1f} s at {self.sample_rate} Hz "
-            f"in {self.wall_time_s:.1f} s</p>"
+            f"<tbody>{rows}</tbody></table><p>{html.escape(self.variant.name)}: {seconds:.1f} s at "
+            f"{self.sample_rate} Hz in {self.wall_time_s:.1f} s</p>"
         )
 
 
@@ -188,7 +188,7 @@ class TalkerFiles:
         """Close the files; rewrite those that go beyond full scale."""
         scales = []
         for file, writer in zip(self._files, self._writers, strict=True):
-            writer.__exit__()
+            writer.close()
             scale = 1.0 if writer.peak <= 1.0 else 1.0 / writer.peak
             if scale < 1.0:
                 self._rescale(self._folder / file, scale)
@@ -202,20 +202,6 @@ class TalkerFiles:
             for chunk in Recording.open([loud]).chunks():
                 writer.write(chunk * scale)
         loud.unlink()
-
-
-def safe_names(names: Sequence[str]) -> list[str]:
-    """File names of letters, digits, `-` and `_`, unique regardless of case."""
-    taken: set[str] = set()
-    safe = []
-    for name in names:
-        stem = re.sub(r"[^A-Za-z0-9_-]+", "-", name).strip("-") or "talker"
-        candidate, number = stem, 2
-        while candidate.lower() in taken:
-            candidate, number = f"{stem}-{number}", number + 1
-        taken.add(candidate.lower())
-        safe.append(candidate)
-    return safe
 
 
 def describe(

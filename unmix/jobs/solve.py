@@ -62,7 +62,7 @@ def solve_to_folder(
     """
     out = Path(out)
     chosen = load_variant(variant)
-    with folder_aside(out, overwrite=overwrite) as aside:
+    with folder_aside(out, overwrite=overwrite, expect=["solution.json"]) as aside:
         solution = _solve(scene, chosen, TalkerFiles(aside), progress)
         write_json(aside / "solution.json", solution.to_dict())
     return solution

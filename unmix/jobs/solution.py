@@ -49,7 +49,7 @@ class Solution:
     method            how the blocks were solved
     fallbacks         what was done instead of what was asked for, and why
     warnings          everything the user should know, fallbacks included
-    conditioning      lowest usable frequency, worst condition, worst noise gain; None for baselines
+    conditioning      lowest usable frequency, condition and noise gain, in thirds of an octave too; None for baselines
     margin_s          time from the ends within which the answer differs from one long solve
     latency_ms        algorithmic latency: the future that an output needs
     real_time_factor  wall time over duration
@@ -63,7 +63,7 @@ class Solution:
     signals: Floats | None = None
     fallbacks: tuple[str, ...] = ()
     warnings: tuple[str, ...] = ()
-    conditioning: dict[str, float | None] | None = None
+    conditioning: dict[str, Any] | None = None
     margin_s: float = 0.0
     latency_ms: float = 0.0
     wall_time_s: float = 0.0

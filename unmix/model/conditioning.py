@@ -8,6 +8,7 @@ with omega times the differences of the delays. The noise gain of talker k is [(
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -42,12 +43,17 @@ class Conditioning:
     lowest_usable_hz: float | None
     worst_condition: float
 
-    def to_dict(self) -> dict[str, float | None]:
-        """The figures that stand in `solution.json`."""
+    def to_dict(self) -> dict[str, Any]:
+        """The figures that stand in `solution.json`; over frequency, the worst of each third of an octave."""
+        bands = np.floor(3.0 * np.log2(self.frequencies_hz / 1000.0) + 0.5)
+        groups = [bands == band for band in np.unique(bands)]
         return {
             "lowest_usable_hz": self.lowest_usable_hz,
             "worst_condition": self.worst_condition,
             "worst_noise_gain_db": float(self.noise_gain_db.max()),
+            "band_hz": [float(1000.0 * 2.0 ** (bands[at][0] / 3.0)) for at in groups],
+            "condition": [float((self.singular_values[at, 0] / self.singular_values[at, -1]).max()) for at in groups],
+            "noise_gain_db": [self.noise_gain_db[at].max(axis=0).tolist() for at in groups],
         }
 
 
@@ -75,7 +81,7 @@ def condition(
     usable = first < points
     return Conditioning(
         np.asarray(frequencies, np.float64),
-        s,
+        np.asarray(s, np.float64),
         10.0 * np.log10(np.maximum(with_prior, 1e-30)),
         unprimed,
         float(frequencies[first]) if usable else None,

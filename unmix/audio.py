@@ -213,7 +213,8 @@ class AudioWriter:
     """Write (channels, n) chunks to a file in the order they come; a context manager.
 
     The format follows the suffix; `subtype` is libsndfile's name of the sample format, by default 32-bit float, or
-    24 bits where the format has no float (FLAC). WAV that `expect` samples carry beyond 4 GB becomes RF64 (EBU Tech 3306).
+    24 bits where the format has no float (FLAC). WAV becomes RF64 (EBU Tech 3306) when `expect` samples per channel
+    carry it beyond 4 GB.
 
     peak     largest magnitude written
     clipped  samples beyond full scale, which an integer format cannot hold
@@ -276,7 +277,11 @@ def write_audio(
     subtype: str | None = None,
     overwrite: bool = False,
 ) -> int:
-    """Write (channels, samples) aside and rename; returns how many samples clipped (integer formats only)."""
+    """Write (channels, samples), full scale 1.0, aside and rename; `subtype` as of `AudioWriter`.
+
+    Returns how many samples clipped (integer formats only). Raises FileError when the file exists and `overwrite` is not
+    given, or the place cannot be written; InputError for a suffix or format that does not exist.
+    """
     path = Path(path)
     with write_aside(path, overwrite=overwrite) as aside:
         with AudioWriter(aside, sample_rate, len(signals), subtype=subtype, expect=signals.shape[1]) as writer:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import contextlib
 import signal
 import sys
+import threading
 import warnings
 from collections.abc import Iterator, Sequence
 from types import FrameType
@@ -91,6 +92,9 @@ def _orderly_termination() -> Iterator[None]:
     def leave(signum: int, frame: FrameType | None) -> NoReturn:
         raise SystemExit(TERMINATED)
 
+    if threading.current_thread() is not threading.main_thread():
+        yield  # handlers can be set in the main thread only
+        return
     before = signal.signal(signal.SIGTERM, leave)
     try:
         yield

@@ -25,9 +25,8 @@ class LazyGroup(click.Group):
         """The command, imported now."""
         if cmd_name not in COMMANDS:
             return None
-        found = importlib.import_module(f"unmix.cli.{cmd_name}").command
-        assert isinstance(found, click.Command)
-        return found
+        command: click.Command = importlib.import_module(f"unmix.cli.{cmd_name}").command
+        return command
 
     def resolve_command(self, ctx: click.Context, args: list[str]) -> tuple[Any, Any, list[str]]:
         """As usual; an unknown name is told the nearest known one."""

@@ -17,7 +17,7 @@ from unmix.cli.common import (
     progress_bar,
     scene_argument,
 )
-from unmix.cli.presets import VariantName
+from unmix.cli.presets import complete_variant
 from unmix.variant import DEFAULT
 
 if TYPE_CHECKING:
@@ -33,7 +33,7 @@ __all__ = ["command", "print_solution"]
     "--variant",
     default=DEFAULT,
     show_default=True,
-    type=VariantName(),
+    shell_complete=complete_variant,
     metavar="NAME_OR_FILE",
     help="A preset (see `unmix variants`) or a variant file.",
 )

@@ -7,13 +7,13 @@ from typing import Any
 import click
 
 from unmix.cli.common import console, json_option, print_json
-from unmix.cli.presets import VariantName
+from unmix.cli.presets import complete_variant
 
 __all__ = ["command"]
 
 
 @click.command("variants")
-@click.argument("name", metavar="[NAME_OR_FILE]", type=VariantName(), required=False)
+@click.argument("name", metavar="[NAME_OR_FILE]", shell_complete=complete_variant, required=False)
 @json_option
 def command(name: str | None, as_json: bool) -> None:
     """List the presets and every field of a variant, or show one variant.

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from unmix.bearings.count import TalkerCount
 from unmix.errors import InputError
-from unmix.files import refuse_to_replace
+from unmix.files import refuse_to_replace, safe_names
 from unmix.scene import Scene, Talker
 from unmix.scene_file import SceneFile, TalkerTable
 from unmix.track import Track

@@ -57,8 +57,8 @@ def solve_to_folder(
 ) -> Solution:
     """Separate the talkers of a scene into a folder: one 32-bit float WAV file per talker and `solution.json`.
 
-    Memory does not grow with the recording. Files are written aside and appear together when all is done; nothing is
-    replaced without `overwrite`.
+    Memory does not grow with the recording. Files are written aside and appear together when all is done. Raises as
+    `solve` does, and FileError when the folder cannot be written or a file in it would be replaced without `overwrite`.
     """
     out = Path(out)
     chosen = load_variant(variant)

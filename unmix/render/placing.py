@@ -24,6 +24,7 @@ Floats = NDArray[np.float64]
 
 
 def spec_array(spec: RenderSpec, base: Path) -> Array:
+    """The array that the spec names or holds. Raises InputError or FileError naming the key or the file."""
     table = spec.array
     if (table.file is None) == (table.positions_m is None):
         raise InputError("[array] needs `file` or `positions_m`, one of the two")
@@ -37,6 +38,7 @@ def spec_array(spec: RenderSpec, base: Path) -> Array:
 
 
 def check_names(spec: RenderSpec, given: Mapping[str, object]) -> None:
+    """Raise InputError when talkers share a name, or a clip is given for somebody who is not in the spec."""
     names = [talker.name for talker in spec.talker]
     for index, name in enumerate(names):
         if name in names[:index]:
@@ -47,6 +49,7 @@ def check_names(spec: RenderSpec, given: Mapping[str, object]) -> None:
 
 
 def check_channels(spec: RenderSpec, materials: list[Material], array: Array, faults: Faults) -> None:
+    """Raise InputError when takes, responses or faults have another number of channels than the array."""
     for index, material in enumerate(materials):
         for key, rows in (("take", material.sound if material.take else None), ("responses", material.responses)):
             if rows is None:
@@ -122,6 +125,7 @@ def _check_place(seat: Seat, spec: RenderSpec, key: str, name: str) -> None:
 
 
 def spec_room(spec: RenderSpec, seats: list[Seat | None], reference: int, duration_s: float) -> Room | None:
+    """The room around the seats, its walls set for the reverberation time asked for; None without one."""
     seated = [(k, seat) for k, seat in enumerate(seats) if seat is not None]
     if spec.room is None or not seated:
         return None

@@ -59,8 +59,10 @@ DRIFT_STRETCH_S, DRIFT_REACH_S, MOST_DRIFT_STRETCHES = 1.0, 0.05, 120
 DRIFT_PPM, DRIFT_SLIP = 2.0, 0.5
 """Drift is worth a warning beyond 2 ppm, when it adds up to half a sample and chance is an unlikely cause (0.1 %)."""
 
-HALF_WIDTH, KAISER_BETA = 64, 8.0
-"""Of the windowed-sinc fractional delay: error under -80 dB up to 0.95 of the Nyquist frequency."""
+HALF_WIDTH, KAISER_BETA = 512, 8.0
+"""Of the windowed-sinc fractional delay: error under -80 dB up to 0.99 of the Nyquist frequency."""
+PEAK_HALF_WIDTH = 64
+"""Samples to either side of a peak that locate it."""
 
 
 @dataclass(frozen=True)
@@ -219,11 +221,11 @@ def _transform_length(length: int, reach: int) -> int:
 
 def _between_samples(c: Floats, peak: int) -> float:
     """Where |c| peaks within one sample of index `peak`, by band-limited interpolation."""
-    first, last = max(0, peak - HALF_WIDTH), min(c.size, peak + HALF_WIDTH + 1)
+    first, last = max(0, peak - PEAK_HALF_WIDTH), min(c.size, peak + PEAK_HALF_WIDTH + 1)
     points, values = np.arange(first, last, dtype=np.float64), np.sign(c[peak]) * c[first:last]
 
     def negative(at: float) -> float:
-        return -float(values @ _interpolator(np.asarray(at - points)))
+        return -float(values @ _interpolator(np.asarray(at - points), PEAK_HALF_WIDTH))
 
     found = scipy.optimize.minimize_scalar(
         negative, bounds=(peak - 1.0, peak + 1.0), method="bounded", options={"xatol": 1e-4}
@@ -231,9 +233,9 @@ def _between_samples(c: Floats, peak: int) -> float:
     return float(found.x)
 
 
-def _interpolator(distance: Floats) -> Floats:
+def _interpolator(distance: Floats, half_width: int) -> Floats:
     """The windowed sinc at `distance` samples from its centre."""
-    inside = np.clip(1.0 - np.square(distance / (HALF_WIDTH + 1)), 0.0, None)
+    inside = np.clip(1.0 - np.square(distance / (half_width + 1)), 0.0, None)
     return np.asarray(
         np.sinc(distance) * scipy.special.i0(KAISER_BETA * np.sqrt(inside)) / scipy.special.i0(KAISER_BETA)
     )
@@ -251,7 +253,7 @@ def advance(signal: Signals, samples: float, *, length: int | None = None) -> Fl
     margin = 0
     if abs(fraction) > 1e-6:
         margin = HALF_WIDTH
-        taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1, dtype=np.float64) + fraction)
+        taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1, dtype=np.float64) + fraction, HALF_WIDTH)
         x = scipy.signal.oaconvolve(x, taps)
     moved = np.zeros(length)
     low, high = max(0, -whole - margin), min(length, x.size - whole - margin)

@@ -20,6 +20,8 @@ __all__ = ["Matched", "Span", "Timebase", "clarity"]
 Floats = NDArray[np.float64]
 Signals = NDArray[np.floating[Any]]
 Matched = list[int | None]
+GRID_S = 0.064
+"""Stretches start on this grid, five frames of STOI long, whose figures change with where frames begin."""
 Offsets = dict[tuple[int, int], Offset]
 
 
@@ -65,6 +67,7 @@ class Timebase:
         max_offset_s: float,
     ) -> None:
         self.guard = guard
+        self._grid = GRID_S * sample_rate
         self.finders = [OffsetFinder(s, sample_rate, max_offset_s=max_offset_s) for s in references]
         self.heard = None if unprocessed is None else [finder.find(unprocessed) for finder in self.finders]
 
@@ -104,7 +107,8 @@ class Timebase:
 
     def _span(self, bases: tuple[float, ...], latencies: Floats, samples: int) -> Span:
         moves = [-base for base in bases] + [float(latency) for latency in latencies]
-        start = max([0] + [int(np.ceil(-move)) for move in moves if move < -self.guard])
+        first = max([0.0] + [-move for move in moves if move < -self.guard])
+        start = round(np.ceil(first / self._grid) * self._grid)
         stop = min([samples] + [int(np.floor(samples - move)) for move in moves if move > self.guard])
         return Span(bases, start, stop) if start < stop else Span(bases, 0, samples)
 

@@ -279,8 +279,8 @@ def write_audio(
 ) -> int:
     """Write (channels, samples), full scale 1.0, aside and rename; `subtype` as of `AudioWriter`.
 
-    Returns how many samples clipped (integer formats only). Raises FileError when the file exists and `overwrite` is not
-    given, or the place cannot be written; InputError for a suffix or format that does not exist.
+    Returns how many samples clipped (integer formats only). Raises FileError when the file exists and `overwrite` is
+    not given, or the place cannot be written; InputError for a suffix or format that does not exist.
     """
     path = Path(path)
     with write_aside(path, overwrite=overwrite) as aside:

@@ -137,7 +137,6 @@ class Located:
         path = Path(path)
         if self.scene is None or self.scene.content is None or self.scene.path is None:
             raise InputError("these talkers were not located from a scene file; there is none to fill in")
-        from unmix.files import safe_names
 
         stems = dict(zip(self.names, safe_names(self.names), strict=True))
         tracks = {t.name: f"{path.stem}-{stems[t.name]}.csv" for t in self.talkers if t.moving}

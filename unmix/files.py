@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import difflib
 import json
 import os
 import re
@@ -18,6 +17,7 @@ from typing import Any, TypeVar
 import msgspec
 
 from unmix.errors import FileError, InputError
+from unmix.toml_errors import explain_error
 
 __all__ = [
     "convert_tree",
@@ -64,41 +64,7 @@ def convert_tree(tree: dict[str, Any], kind: type[T], *, where: str = "") -> T:
     try:
         return msgspec.convert(tree, kind, strict=True)
     except msgspec.ValidationError as error:
-        raise InputError((f"{where}: " if where else "") + _explain(str(error), tree, kind)) from None
-
-
-def _explain(message: str, tree: dict[str, Any], kind: type) -> str:
-    """Turn msgspec's message into one that names the key and, for an unknown key, the nearest known one."""
-    what, _, at = message.partition(" - at ")
-    key = at.strip("`").removeprefix("$").removeprefix(".")
-    unknown = re.search(r"unknown field `(.+?)`", what)
-    if unknown is None:
-        return f"key `{key}`: {what[:1].lower()}{what[1:]}" if key else what
-    name = unknown.group(1)
-    table = re.sub(r"\[\.\.\.\]|\[\d+\]", "", key)
-    known = _fields_at(kind, table)
-    near = difflib.get_close_matches(name, known, n=1)
-    remedy = f"did you mean `{near[0]}`?" if near else f"known keys: {', '.join(known)}"
-    return f"unknown key `{name}` in {f'[{table}]' if table else 'the top level'}; {remedy}"
-
-
-def _fields_at(kind: Any, table: str) -> list[str]:
-    """Names of the keys of the struct that stands at the dotted path `table`."""
-    info = msgspec.inspect.type_info(kind)
-    for part in filter(None, table.split(".")):
-        fields = {f.encode_name: f.type for f in getattr(_struct_in(info), "fields", ())}
-        if part not in fields:
-            return []
-        info = fields[part]
-    return [f.encode_name for f in getattr(_struct_in(info), "fields", ())]
-
-
-def _struct_in(info: Any) -> Any:
-    """The struct inside an optional, a list or itself; None when there is none."""
-    if isinstance(info, msgspec.inspect.StructType):
-        return info
-    inner = list(getattr(info, "types", ())) or [getattr(info, n) for n in ("item_type", "type") if hasattr(info, n)]
-    return next((found for found in map(_struct_in, inner) if found is not None), None)
+        raise InputError((f"{where}: " if where else "") + explain_error(str(error), kind)) from None
 
 
 def safe_names(names: Iterable[str]) -> list[str]:

@@ -20,11 +20,11 @@ def written(folder: Path, text: str) -> Path:
     [
         (
             "[array]\n[[talker]]\nname = 'a'\nazimut_deg = 3",
-            r"unknown key `azimut_deg` in \[talker\]; did you mean `azimuth_deg`\?",
+            r"unknown key `azimut_deg` in talker\[0\]; did you mean `azimuth_deg`\?",
         ),
         (
             "[array]\n[[talker]]\nname = 'a'\nazimuth_deg = 700",
-            r"key `talker\[0\]\.azimuth_deg`: expected `float` <= 360",
+            r"key `talker\[0\]\.azimuth_deg`: expected a number <= 360",
         ),
         ("[array]\n[[talker]]\nname = ''", r"key `talker\[0\]\.name`"),
         ("talker = []\n[array]", "key `talker`"),

@@ -90,10 +90,11 @@ class SearchSpace:
     def local(self, x: Floats, step: float) -> LocalFrame:
         """The stencil of differences around the projection x (rank,), along the directions in which it may move."""
         if self.region == "ring":
-            u = self.lift(x)
-            tangent = np.array([-u[1], u[0], 0.0])
-            axes = (tangent / max(float(np.linalg.norm(tangent)), 1e-12) @ self.basis)[:, None]
+            azimuth, _ = direction_angles(self.lift(x))
+            x = self.project(unit_vector(azimuth))
+            axes = (unit_vector(azimuth + 0.5 * np.pi) @ self.basis)[:, None]
         elif self.rank == 3:
+            x = x / np.linalg.norm(x)
             axes = np.linalg.svd(x[None])[2][1:].T
         else:
             axes = np.eye(self.rank)

@@ -116,11 +116,11 @@ class ReferenceSet:
         scale = r[np.arange(K), np.arange(K), 0]
         self._scale = np.sqrt(scale)
         r = r / (self._scale[:, None, None] * self._scale[None, :, None])
-        G = np.empty((K * L, K * L))
+        self._lags = np.concatenate([r, np.zeros((K, K, 1)), r.transpose(1, 0, 2)[..., :0:-1]], axis=2)
+        G = np.empty((K * L, K * L), order="F")
         for i in range(K):
-            for j in range(K):
-                G[i * L : (i + 1) * L, j * L : (j + 1) * L] = scipy.linalg.toeplitz(r[j, i], r[i, j])
-        self._G = G
+            for j in range(i + 1):
+                G[i * L : (i + 1) * L, j * L : (j + 1) * L] = _toeplitz(r[j, i], r[i, j])
         own = [slice(k * L, (k + 1) * L) for k in range(K)]
         self._own_factors = [self._cholesky(G[s, s]) for s in own]
         self._factor_all = self._own_factors[0] if K == 1 else self._cholesky(G)
@@ -129,8 +129,8 @@ class ReferenceSet:
         self.dependent = bool(np.min(np.diag(self._factor_all) / given_own) ** 2 < DEPENDENT)
 
     def _cholesky(self, G: Floats) -> Floats:
-        """Lower Cholesky factor of the symmetric G, with a ridge when G is singular to working precision."""
-        factor, failed = scipy.linalg.lapack.dpotrf(G.T, lower=1, clean=0)
+        """Lower Cholesky factor of G, of which the lower triangle counts, ridged when singular to working precision."""
+        factor, failed = scipy.linalg.lapack.dpotrf(G, lower=1, clean=0)
         if not failed:
             pivots = np.diag(factor) ** 2
             if pivots.min() > SINGULAR * pivots.max():
@@ -191,8 +191,7 @@ class ReferenceSet:
         L = self.filter_length
         c = self._joint_filters(self._scaled_correlations(estimates[good]))
         for i, k in enumerate(self._usable):
-            own = slice(i * L, (i + 1) * L)
-            energies[good, k] = _quadratic(self._G[own, own], c[own])
+            energies[good, k] = self._quadratic(c[i * L : (i + 1) * L].T[:, None], self._lags[i : i + 1, i : i + 1])
         return energies
 
     def _joint_filters(self, D: Floats) -> Floats:
@@ -212,9 +211,22 @@ class ReferenceSet:
             c_j = scipy.linalg.cho_solve((self._own_factors[j], True), D[:, j].T, check_finite=False)
             target[:, j] = np.einsum("le,el->e", c_j, D[:, j])
             differences[own, j] -= c_j
-        interference = _quadratic(self._G, differences.reshape(K * L, K * E)).reshape(K, E).T
+        interference = self._quadratic(differences.reshape(K, L, K, E).transpose(3, 2, 0, 1), self._lags)
         filters = c.T.reshape(E, K, L) / self._scale[:, None]
         return target, interference, self._residual_energy(estimates, filters)
+
+    def _quadratic(self, c: Floats, lags: Floats) -> Floats:
+        """c' G c of filters c (..., references, L) through the transform of G's correlations `lags`: (...).
+
+        G being Toeplitz block by block, sum over i, j, l, l' of c_i[l] c_j[l'] r_ij[l' - l] is a sum over bins of
+        C_i conj(C_j) R_ij. Rounding below zero counts as zero.
+        """
+        R = scipy.fft.rfft(lags, axis=-1)
+        R[..., 1:-1] *= 2.0
+        C = scipy.fft.rfft(c, n=lags.shape[-1], axis=-1)
+        filtered = np.einsum("ijf,...jf->...if", R.conj(), C)
+        energy = np.einsum("...if,...if->...", C.conj(), filtered).real / lags.shape[-1]
+        return np.asarray(np.maximum(energy, 0.0))
 
     def _scaled_correlations(self, estimates: Signals) -> Floats:
         return np.asarray(self._correlate(estimates) / self._scale[:, None])
@@ -279,9 +291,10 @@ def _stretch(signals: Signals, start: int, stop: int) -> Floats:
     return stretch
 
 
-def _quadratic(G: Floats, c: Floats) -> Floats:
-    """c' G c for each column of c; rounding below zero counts as zero."""
-    return np.asarray(np.maximum(np.einsum("ie,ie->e", c, G @ c), 0.0))
+def _toeplitz(column: Floats, row: Floats) -> Floats:
+    """The Toeplitz matrix with this first column and row, a view."""
+    lags = np.concatenate([column[:0:-1], row])
+    return np.lib.stride_tricks.sliding_window_view(lags, row.size)[::-1]
 
 
 def _ratio_db(numerator: Floats, denominator: Floats) -> Floats:

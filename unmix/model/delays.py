@@ -58,11 +58,11 @@ class Paths:
         mixed = [value[left] * (1.0 - share) + value[right] * share for value in (self.delay_s, self.gain)]
         return mixed[0], mixed[1]
 
-    def still(self) -> Paths:
-        """The paths at the middle of the recording, as if nothing moved."""
+    def still(self, time_s: float | None = None) -> Paths:
+        """The paths at one instant (default: the middle of the recording), as if nothing moved."""
         if self.time_s is None:
             return self
-        delay, gain = self.at(0.5 * (self.time_s[0] + self.time_s[-1]))
+        delay, gain = self.at(0.5 * (self.time_s[0] + self.time_s[-1]) if time_s is None else time_s)
         return Paths(delay[0], gain[0])
 
 

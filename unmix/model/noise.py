@@ -53,6 +53,13 @@ class Noise:
         """Samples that whitening reaches to either side."""
         return 0 if self.taps is None else self.taps.shape[-1] // 2
 
+    def response(self, omega: Floats) -> Complexes | None:
+        """Response of the whitening filter (frequencies, channels, channels); None for white."""
+        if self.taps is None:
+            return None
+        basis = np.exp(1j * np.outer(omega, np.arange(-self.half_width, self.half_width + 1)))
+        return np.asarray(np.einsum("cmj,fj->fcm", self.taps, basis, optimize=True))
+
     def whiten(self, recording: Floats) -> Floats:
         """Whiten (channels, samples), zero outside; same shape."""
         if self.taps is None:

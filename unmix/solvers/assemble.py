@@ -34,7 +34,7 @@ from unmix.solvers.stationary import FilterBank, design, filter_bank_from_respon
 from unmix.solvers.streaming import BlockSeparator, FilterBankSeparator, Separator, SnapshotSeparator
 from unmix.variant import SolverSettings, Variant
 
-__all__ = ["Assembly", "assemble", "paths_collide"]
+__all__ = ["Assembly", "Posed", "assemble", "paths_collide", "pose"]
 
 Floats = NDArray[np.float64]
 
@@ -88,26 +88,50 @@ def assemble(
     settings = variant.solver
     if settings.constraint == "free":
         return _free(variant, paths, sample_rate)
-    differentiators = choose_differentiators(
-        variant.model.order,
-        family=variant.model.differentiator,
-        error_db=variant.model.moving_error_db if paths.moving else variant.model.error_db,
-        band_edge=variant.model.moving_band_edge if paths.moving else variant.model.band_edge,
-        half_width=variant.model.half_width,
-    )
-    at_rest = mixing_from_paths(paths.still(), differentiators, sample_rate, anchor=variant.model.anchor)
-    noise, fallbacks = _noise(settings, at_rest, paths, array, sample_rate, temperature_c, spectra)
-    prior = make_prior(settings.prior, settings.prior_weight, noise.whiten_mixing(at_rest), sample_rate)
-    build = _Builder(variant, paths, differentiators, noise, prior, sample_rate)
-    made = build.tied(at_rest) if settings.constraint == "tied" else build.propagated()
-    problem = Problem.of(at_rest, noise, prior)
+    posed = pose(variant, paths, array, sample_rate=sample_rate, temperature_c=temperature_c, spectra=spectra)
+    build = _Builder(variant, paths, posed, sample_rate)
+    made = build.tied() if settings.constraint == "tied" else build.propagated()
+    problem = posed.problem
     return replace(
         made,
-        mixing=at_rest,
-        conditioning=condition(problem.whitened, prior, sample_rate),
-        differentiators=differentiators,
-        fallbacks=(*fallbacks, *made.fallbacks),
+        mixing=problem.mixing,
+        conditioning=condition(problem.whitened, problem.prior, sample_rate),
+        differentiators=posed.differentiators,
+        fallbacks=(*posed.fallbacks, *made.fallbacks),
     )
+
+
+@dataclass(frozen=True)
+class Posed:
+    """The least-squares problem of a variant at rest, with the choices made on the way."""
+
+    problem: Problem
+    differentiators: Differentiators
+    fallbacks: tuple[str, ...] = ()
+
+
+def pose(
+    variant: Variant,
+    paths: Paths,
+    array: Array,
+    *,
+    sample_rate: int,
+    temperature_c: float = 20.0,
+    spectra: Spectra | None = None,
+) -> Posed:
+    """Pose the problem of a variant; when something moves, as it stands in the middle of the recording."""
+    settings, model = variant.solver, variant.model
+    differentiators = choose_differentiators(
+        model.order,
+        family=model.differentiator,
+        error_db=model.moving_error_db if paths.moving else model.error_db,
+        band_edge=model.moving_band_edge if paths.moving else model.band_edge,
+        half_width=model.half_width,
+    )
+    mixing = mixing_from_paths(paths.still(), differentiators, sample_rate, anchor=model.anchor)
+    noise, fallbacks = _noise(settings, mixing, paths, array, sample_rate, temperature_c, spectra)
+    prior = make_prior(settings.prior, settings.prior_weight, noise.whiten_mixing(mixing), sample_rate)
+    return Posed(Problem.of(mixing, noise, prior), differentiators, fallbacks)
 
 
 def _check_solvable(paths: Paths) -> None:
@@ -191,10 +215,24 @@ def _noise(
 class _Builder:
     variant: Variant
     paths: Paths
-    differentiators: Differentiators
-    noise: Noise
-    prior: Prior
+    posed: Posed
     sample_rate: int
+
+    @property
+    def problem(self) -> Problem:
+        return self.posed.problem
+
+    @property
+    def noise(self) -> Noise:
+        return self.problem.noise
+
+    @property
+    def prior(self) -> Prior:
+        return self.problem.prior
+
+    @property
+    def differentiators(self) -> Differentiators:
+        return self.posed.differentiators
 
     @property
     def settings(self) -> SolverSettings:
@@ -204,8 +242,8 @@ class _Builder:
     def hold(self) -> int:
         return max(1, round(self.settings.hold_s * self.sample_rate))
 
-    def tied(self, at_rest: Mixing) -> Assembly:
-        problem = Problem.of(at_rest, self.noise, self.prior)
+    def tied(self) -> Assembly:
+        problem = self.problem
         method, fallbacks = self._method()
         if method != "stationary" and self.prior.weight == 0.0 and self.paths.talkers > 1:
             raise UnsolvableError(
@@ -323,11 +361,7 @@ class _Builder:
         return replace(made, trusted_hz=trusted)
 
     def _propagated_response(self, omega: Floats, weight: Floats) -> NDArray[np.complex128]:
-        w = None
-        if self.noise.taps is not None:
-            reach = self.noise.half_width
-            basis = np.exp(1j * np.outer(omega, np.arange(-reach, reach + 1)))
-            w = np.einsum("cmj,fj->fcm", self.noise.taps, basis, optimize=True)
+        w = self.noise.response(omega)
         response = propagated.stationary_response(
             self.paths.still(), self.variant.model.order, self.prior, weight, omega,
             sample_rate=self.sample_rate, anchor=self.variant.model.anchor, whitening=w,

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from unmix.errors import UnsolvableError
 from unmix.solvers.problem import Problem
 
-__all__ = ["FilterBank", "design", "filter_bank_from_response"]
+__all__ = ["FilterBank", "design", "filter_bank_from_response", "solution_response"]
 
 Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -68,23 +68,21 @@ def design(problem: Problem, *, tail: float = 1e-7) -> FilterBank:
     """
     if problem.mixing.taps.ndim == 4:
         raise UnsolvableError('method `stationary` needs talkers and array at rest; use method = "reduced"')
-
-    def response(omega: Floats) -> Complexes:
-        h = problem.whitened.response(omega)
-        adjoint = h.conj().transpose(0, 2, 1)
-        if problem.prior.weight == 0.0:
-            inverse = np.asarray(np.linalg.pinv(h, rcond=MINIMUM_NORM_RCOND), np.complex128)
-        else:
-            q = problem.prior.precision(omega)[:, None, None] * np.eye(h.shape[2])
-            inverse = np.asarray(np.linalg.solve(adjoint @ h + q, adjoint), np.complex128)
-        if problem.noise.taps is None:
-            return inverse
-        w = problem.noise.half_width
-        basis = np.exp(1j * np.outer(omega, np.arange(-w, w + 1)))
-        return np.asarray(inverse @ np.einsum("cmj,fj->fcm", problem.noise.taps, basis, optimize=True))
-
     note = "minimum-norm" if problem.prior.weight == 0.0 and problem.mixing.talkers > 1 else ""
-    return filter_bank_from_response(response, tail=tail, note=note)
+    return filter_bank_from_response(lambda omega: solution_response(problem, omega), tail=tail, note=note)
+
+
+def solution_response(problem: Problem, omega: Floats) -> Complexes:
+    """B(omega) of a problem at rest, whitening included: (frequencies, talkers, channels)."""
+    h = problem.whitened.response(omega)
+    adjoint = h.conj().transpose(0, 2, 1)
+    if problem.prior.weight == 0.0:
+        inverse = np.asarray(np.linalg.pinv(h, rcond=MINIMUM_NORM_RCOND), np.complex128)
+    else:
+        q = problem.prior.precision(omega)[:, None, None] * np.eye(h.shape[2])
+        inverse = np.asarray(np.linalg.solve(adjoint @ h + q, adjoint), np.complex128)
+    whitening = problem.noise.response(omega)
+    return inverse if whitening is None else np.asarray(inverse @ whitening)
 
 
 def filter_bank_from_response(

@@ -11,6 +11,7 @@ from msgspec import Meta
 from unmix.errors import FileError, InputError
 from unmix.explain import FieldInfo, explain_fields
 from unmix.files import read_toml
+from unmix.room.settings import RoomSettings
 
 __all__ = ["PRESETS", "ModelSettings", "SolverSettings", "Variant", "describe_fields", "load_variant"]
 
@@ -108,6 +109,7 @@ class Variant(_Strict, kw_only=True, frozen=True):
     ] = "model"
     model: ModelSettings = ModelSettings()
     solver: SolverSettings = SolverSettings()
+    room: Annotated[RoomSettings | None, Meta(description="the room stage; left out: the model alone")] = None
 
     def to_dict(self) -> dict[str, Any]:
         """The variant as plain values, the form in which it stands in results."""
@@ -138,7 +140,22 @@ PRESETS: dict[str, Variant] = {
             separator="linear-constraint",
             summary="each talker kept, the others cancelled, the diffuse field minimised",
         ),
-        Variant(name="model", summary="the delay model alone: anechoic or nearly so, and the least latency of thought"),
+        Variant(name="model", summary="the delay model alone: for recordings without reflections, or outdoors"),
+        Variant(
+            name="dereverb",
+            summary="the model on a recording whose late reverberation has been predicted and subtracted",
+            room=RoomSettings(refinement=None, post=None),
+        ),
+        Variant(
+            name="refined",
+            summary="late reverberation subtracted, the model's separating matrix refined on the recording itself",
+            room=RoomSettings(post=None),
+        ),
+        Variant(
+            name="full",
+            summary="refined, then a filter driven by who speaks when, and each talker's early sound restored",
+            room=RoomSettings(),
+        ),
     )
 }
 """Variants by name; the last ones with the room stage."""
@@ -188,7 +205,7 @@ def _merge(below: dict[str, Any], above: dict[str, Any]) -> dict[str, Any]:
     return merged
 
 
-DEFAULT = "model"
+DEFAULT = "full"
 """Preset used when none is named."""
 
 

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from unmix.audio import AudioWriter, Recording
 from unmix.files import safe_names
+from unmix.room.stage import RoomReport
 from unmix.scene import Scene
 from unmix.solvers.assemble import Assembly
 from unmix.variant import Variant
@@ -205,7 +206,13 @@ class TalkerFiles:
 
 
 def describe(
-    scene: Scene, variant: Variant, assembly: Assembly, stored: Stored, findings: Sequence[str], wall_time_s: float
+    scene: Scene,
+    variant: Variant,
+    assembly: Assembly,
+    room: RoomReport | None,
+    stored: Stored,
+    findings: Sequence[str],
+    wall_time_s: float,
 ) -> Solution:
     """Put together what was done."""
     rate = scene.sample_rate
@@ -235,18 +242,23 @@ def describe(
         details["trusted_hz"] = assembly.trusted_hz
     if assembly.bank is not None:
         details["filter_taps"] = int(assembly.bank.taps.shape[-1])
+    fallbacks = assembly.fallbacks
+    if room is not None:
+        details["room"] = room.to_dict()
+        # What the model alone would have fallen back to does not matter when the room stage answers.
+        fallbacks = () if room.fallback == "none" else (f"room stage: fell back to {room.fallback}",)
     return Solution(
         talkers=talkers,
         sample_rate=rate,
         samples=scene.recording.samples,
         variant=variant,
-        method=assembly.method,
+        method=assembly.method if room is None else "room",
         signals=stored.signals,
-        fallbacks=assembly.fallbacks,
-        warnings=(*assembly.fallbacks, *findings, *_loudness(talkers)),
+        fallbacks=fallbacks,
+        warnings=(*fallbacks, *(room.warnings if room else ()), *findings, *_loudness(talkers)),
         conditioning=assembly.conditioning.to_dict() if assembly.conditioning else None,
         margin_s=assembly.margin / rate,
-        latency_ms=1e3 * assembly.latency_samples / rate,
+        latency_ms=1e3 * assembly.latency_samples / rate if room is None else room.latency_ms,
         wall_time_s=wall_time_s,
         real_time_factor=wall_time_s / scene.recording.duration_s,
         details=details,

@@ -18,11 +18,12 @@ from numpy.typing import NDArray
 from unmix.errors import InputError, UnmixWarning
 from unmix.files import folder_aside, write_json
 from unmix.health import ChannelHealth
+from unmix.jobs.reverberant import room_stage
 from unmix.jobs.solution import Memory, Sink, Solution, TalkerFiles, describe
 from unmix.model.delays import Paths
 from unmix.model.noise import Spectra
 from unmix.scene import Scene, Talker
-from unmix.solvers.assemble import Assembly, assemble
+from unmix.solvers.assemble import assemble
 from unmix.solvers.streaming import run
 from unmix.variant import DEFAULT, Variant, load_variant
 
@@ -82,13 +83,16 @@ def _solve(scene: Scene, variant: Variant, sink: Sink, progress: Progress | None
         temperature_c=scene.temperature_c,
         spectra=spectra,
     )
+    room = room_stage(scene, variant, paths, spectra) if variant.room is not None else None
     health = ChannelHealth(len(scene.recording.channels))
     sink.open([t.name for t in scene.talkers], scene.sample_rate, scene.recording.samples)
-    for talkers in run(assembly.separator, _watched(scene, health, progress)):
+    for talkers in run(room or assembly.separator, _watched(scene, health, progress)):
         sink.write(talkers)
-    files = sink.close()
-    solution = describe(scene, variant, assembly, files, health.findings(), time.perf_counter() - began)
-    _say(assembly, solution)
+    stored = sink.close()
+    report = room.report() if room is not None else None
+    solution = describe(scene, variant, assembly, report, stored, health.findings(), time.perf_counter() - began)
+    for line in solution.warnings:
+        warnings.warn(line, UnmixWarning, stacklevel=3)
     return solution
 
 
@@ -188,11 +192,3 @@ def _watched(scene: Scene, health: ChannelHealth, progress: Progress | None) -> 
         done += chunk.shape[1]
         if progress is not None:
             progress(done / scene.recording.samples)
-
-
-def _say(assembly: Assembly, solution: Solution) -> None:
-    for line in assembly.fallbacks:
-        warnings.warn(line, UnmixWarning, stacklevel=4)
-    for line in solution.warnings:
-        if line not in assembly.fallbacks:
-            warnings.warn(line, UnmixWarning, stacklevel=4)

@@ -21,6 +21,7 @@ from unmix.room.stft import Complexes, Reals, Transform
 
 __all__ = ["Look", "RoomReport", "RoomStage", "SegmentReport"]
 
+Floats = NDArray[np.float64]
 Fallback = Literal["none", "model", "silence"]
 
 SHORTEST_S = 1.0
@@ -131,7 +132,7 @@ class RoomStage:
         self._segments: list[SegmentReport] = []
         self._warnings: list[str] = []
 
-    def push(self, chunk: Reals) -> Reals:
+    def push(self, chunk: Floats) -> Floats:
         """Take (channels, n) samples; return the (talkers, n') samples that are ready."""
         self._held = np.concatenate([self._held, chunk], axis=1)
         ready = []
@@ -139,7 +140,7 @@ class RoomStage:
             ready.append(self._solve(self._length, last=False))
         return np.concatenate(ready, axis=1) if ready else np.zeros((self._talkers, 0))
 
-    def flush(self) -> Reals:
+    def flush(self) -> Floats:
         """The rest, after the last chunk."""
         rest = self._held.shape[1] - self._before
         if rest > 0:
@@ -167,7 +168,7 @@ class RoomStage:
         """Algorithmic latency while streaming: a segment and the half that must follow it."""
         return 1.5 * self._length / self._rate
 
-    def _solve(self, samples: int, *, last: bool) -> Reals:
+    def _solve(self, samples: int, *, last: bool) -> Floats:
         """Process ``samples`` new samples with the context held before them; return what is final.
 
         The previous segment keeps back its last ``fade`` samples; this one's first samples fade in over them.

@@ -41,6 +41,7 @@ Signals = NDArray[np.floating[Any]]
 FILTER_LENGTH = 512
 ROUNDING_DB = 200.0
 """Beyond this ratio what is left is the rounding of double precision, not an error of the estimate."""
+EXACT = "nothing is left but rounding: the estimate is the reference, filtered"
 
 DEPENDENT = 1e-4
 """A reference of whose innovation the others leave less than this (-40 dB) is a filtered copy of them."""
@@ -175,7 +176,7 @@ class ReferenceSet:
         if np.isnan(value):
             return "the estimate is orthogonal to the reference"
         if value > ROUNDING_DB:
-            return "nothing is left but rounding: the estimate is the reference, filtered"
+            return EXACT
         return None
 
     def contributions(self, estimates: Signals) -> Floats:

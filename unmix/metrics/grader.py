@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from unmix.metrics.alignment import DRIFT_PPM, GUARD_S, MAX_OFFSET_S, Offset, advance, guard_samples
 from unmix.metrics.assignment import best_assignment
 from unmix.metrics.bench import Bench, difference_to_mir_eval_db
-from unmix.metrics.distortion import FILTER_LENGTH, Distortion, ReferenceSet, describe_unusable
+from unmix.metrics.distortion import EXACT, FILTER_LENGTH, ROUNDING_DB, Distortion, ReferenceSet, describe_unusable
 from unmix.metrics.grades import Figures, Grades, TalkerGrade
 from unmix.metrics.leakage import leakage_of_outputs_db, projected_leakage_db
 from unmix.metrics.timebase import Matched, Span, Timebase, clarity
@@ -323,7 +323,12 @@ class Grader:
 
 def _scores(distortion: Distortion) -> Floats:
     """SIR of each pair, as the published assignment has it; SDR where nothing interferes."""
-    return distortion.sir_db if np.isfinite(distortion.sir_db).any() else distortion.sdr_db
+    name = "sir_db" if np.isfinite(distortion.sir_db).any() else "sdr_db"
+    scores: Floats = getattr(distortion, name).copy()
+    for (figure, e, k), why in distortion.undefined.items():
+        if figure == name and why == EXACT:
+            scores[e, k] = ROUNDING_DB  # undefined because nothing could fit better
+    return scores
 
 
 def _drop_oldest(kept: dict[Span, Any]) -> None:

@@ -63,22 +63,43 @@ class Track:
 
 @dataclass(frozen=True)
 class Orientation:
-    """How the array is turned: unit quaternions (w, x, y, z) that rotate array coordinates into the world's."""
+    """How the array is turned: unit quaternions (w, x, y, z) that rotate array coordinates into the world's.
+
+    notes  what the user should know about where they come from, one line each
+    """
 
     time_s: Floats
     quaternions: Floats
+    notes: tuple[str, ...] = ()
 
     @classmethod
     def load(cls, path: str | Path) -> Orientation:
-        """Read a CSV file with columns time_s, qw, qx, qy, qz; quaternions are normalised, zero ones refused."""
+        """Read a CSV file of quaternions, or of an inertial sensor's raw readings.
+
+        Quaternions: columns time_s, qw, qx, qy, qz; they are normalised (with a note when off by more than a
+        hundredth), and refused when zero. Raw readings: columns time_s, gx, gy, gz in rad/s and ax, ay, az in m/s^2,
+        along the array's axes; see `unmix.attitude`.
+        """
         path = Path(path)
+        raw = ("gx", "gy", "gz", "ax", "ay", "az")
+        columns = read_columns(path, required=("time_s",), optional=("qw", "qx", "qy", "qz", *raw))
+        if "gx" in columns:
+            from unmix.attitude import integrate_attitude
+
+            columns = read_columns(path, required=("time_s", *raw))
+            rates, forces = (np.stack([columns[n] for n in names], axis=-1) for names in (raw[:3], raw[3:]))
+            attitude = integrate_attitude(columns["time_s"], rates, forces, where=str(path))
+            return cls(columns["time_s"], attitude.quaternions, (attitude.note,))
         columns = read_columns(path, required=("time_s", "qw", "qx", "qy", "qz"))
         q = np.stack([columns[name] for name in ("qw", "qx", "qy", "qz")], axis=-1)
         norm = np.linalg.norm(q, axis=-1)
         if np.any(norm < 1e-6):
             line = int(np.argmax(norm < 1e-6)) + 2
             raise InputError(f"{path}: line {line}: quaternion of length zero; every row needs a rotation")
-        return cls(columns["time_s"], q / norm[:, None])
+        notes: tuple[str, ...] = ()
+        if np.any(np.abs(norm - 1.0) > 0.01):
+            notes = (f"{path}: quaternions are not of unit length ({norm.min():.3g} to {norm.max():.3g}): normalised",)
+        return cls(columns["time_s"], q / norm[:, None], notes)
 
     def matrices(self, time_s: ArrayLike) -> Floats:
         """Rotations (array to world) at the given times: (..., 3, 3).

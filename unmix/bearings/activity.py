@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from unmix.bearings.bins import Steering
 from unmix.bearings.mixture import likelihoods, responses
+from unmix.bearings.peaks import peak_shares
 from unmix.bearings.scan import SLICE_S, Scan
 from unmix.bearings.space import SearchSpace
 
@@ -60,6 +61,10 @@ def talker_shares(
     talkers = x_at(scan.slice_s[:1]).shape[1] if len(scan.slice_s) else 0
     share = np.zeros((len(scan.slice_s), talkers))
     outside, own = np.zeros(talkers), np.zeros(talkers)
+    if scan.peaks is not None and talkers:
+        return Shares(
+            scan.slice_s, peak_shares(scan.peaks.chosen(), x_at(scan.slice_s), scan.slice_s, SLICE_S), outside
+        )
     for bins, rotation in scan.parts:
         index = np.minimum((bins.time_s / SLICE_S).astype(np.intp), len(scan.slice_s) - 1)
         order = np.argsort(index, kind="stable")

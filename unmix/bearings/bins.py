@@ -122,7 +122,9 @@ class Steering:
         return np.asarray(b / np.linalg.norm(b, axis=-1, keepdims=True), dtype=np.complex64)
 
 
-def make_steering(array: Array, sample_rate: int, *, temperature_c: float = 20.0, spacing: float = 0.11) -> Steering:
+def make_steering(
+    array: Array, sample_rate: int, *, temperature_c: float = 20.0, spacing: float = 0.11, whiten: bool = True
+) -> Steering:
     """Steering for an array; ``spacing`` of the search grid limits the highest frequency of wide arrays."""
     speed = speed_of_sound(temperature_c)
     frame = 2 * round(FRAME_S * sample_rate / 2)
@@ -131,8 +133,9 @@ def make_steering(array: Array, sample_rate: int, *, temperature_c: float = 20.0
     highest = min(HIGHEST_HZ, 0.45 * sample_rate, max(1000.0, speed / (2.5 * spacing * array.aperture_m)))
     chosen = np.flatnonzero((all_hz >= LOWEST_HZ) & (all_hz <= highest))
     f: Floats = all_hz[chosen].astype(np.float64)
-    coherence = diffuse_coherence(pairwise_distances(array.positions_m), f, speed)
-    whitening = np.linalg.inv(np.linalg.cholesky(coherence + FLOOR * np.eye(array.channels))).astype(np.complex128)
+    coherence = diffuse_coherence(pairwise_distances(array.positions_m), f, speed) if whiten else np.zeros(())
+    whitening = np.linalg.inv(np.linalg.cholesky(coherence + FLOOR * np.eye(array.channels)))
+    whitening = np.broadcast_to(whitening, (len(f), array.channels, array.channels)).astype(np.complex128)
     gain = array.polarity * 10.0 ** (-array.gain_db / 20.0)
     equaliser = gain * np.exp(2j * np.pi * f[:, None] * array.delay_s)
     return Steering(sample_rate, frame, frame // 2, int(chosen[0]), f, array.positions_m, speed, whitening, equaliser)

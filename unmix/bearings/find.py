@@ -24,6 +24,7 @@ from unmix.bearings.mixture import (
     refine,
     responses,
 )
+from unmix.bearings.peaks import refine_peaks
 from unmix.bearings.scan import FEWEST_BINS, Scan
 from unmix.bearings.space import SearchSpace
 from unmix.bearings.tracks import TrackedTalker, Tracker
@@ -105,13 +106,16 @@ def _at_rest(
     found = sorted((_with_peak(c, scan) for c in merge_sections(scan.sections)), key=talker_margin, reverse=True)
     counted = count_talkers(found, asked)
     bins = scan.kept
-    if bins is None or counted.used == 0:
+    if counted.used == 0 or (bins is None and scan.peaks is None):
         return [], counted
     plain = [c for c in found if c.weight > 0.0][: counted.used]
     if len(plain) < counted.used:
         plain += _faint(scan, space, steering, plain, counted.used - len(plain))
     start = np.array([c.x for c in plain])
-    refined = refine(bins, scan.parts, start, space, steering, distance_m=distance_m)
+    if scan.peaks is not None:
+        refined = refine_peaks(scan.peaks.chosen(), start)
+    elif bins is not None:
+        refined = refine(bins, scan.parts, start, space, steering, distance_m=distance_m)
     talkers = []
     for k, cluster in enumerate(plain):
         doubtful = asked is not None and k >= max(counted.highest, 1)

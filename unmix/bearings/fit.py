@@ -37,7 +37,15 @@ from unmix.bearings.space import LocalFrame, SearchSpace
 from unmix.model.delays import wave_delays
 from unmix.physics import speed_of_sound
 
-__all__ = ["FittedBearings", "FrameCovariance", "fit_bearings", "steering_with_derivatives"]
+__all__ = [
+    "FittedBearings",
+    "FrameCovariance",
+    "NormalEquations",
+    "estimate_covariance",
+    "fit_bearings",
+    "normal_equations",
+    "steering_with_derivatives",
+]
 
 Floats = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -149,12 +157,12 @@ def fit_bearings(
     speed = speed_of_sound(temperature_c)
     scale = float(np.trace(seen.total.sum(axis=0)).real)
 
-    def at(points: Floats) -> tuple[list[LocalFrame], _Normal]:
+    def at(points: Floats) -> tuple[list[LocalFrame], NormalEquations]:
         frames = [space.local(point, 0.01) for point in points]
         a, da = steering_with_derivatives(
             array, seen.frequency_hz, frames, space, speed_m_s=speed, distance_m=distance_m
         )
-        return frames, _normal(seen.total, a, da)
+        return frames, normal_equations(seen.total, a, da)
 
     frames, now = at(x)
     converged, rounds = False, 0
@@ -173,14 +181,14 @@ def fit_bearings(
     m, k = array.channels, len(x)
     bins = seen.frames * len(seen.frequency_hz)
     noise = _REDUNDANCY * now.cost / max(bins * (m - k), 1)
-    covariance = _covariance(seen, now, noise)
+    covariance = _REDUNDANCY * estimate_covariance(now, noise / _REDUNDANCY, seen.frames)
     return FittedBearings(
         x, covariance, np.stack([f.axes for f in frames]), noise, now.cost / max(scale, 1e-300), rounds, converged
     )
 
 
 @dataclass(frozen=True)
-class _Normal:
+class NormalEquations:
     """Cost, gradient (K d,) and curvature (K d, K d), with what the covariance needs: H and the signals' covariance."""
 
     cost: float
@@ -192,7 +200,8 @@ class _Normal:
     d: int
 
 
-def _normal(r: Complexes, a: Complexes, da: Complexes) -> _Normal:
+def normal_equations(r: Complexes, a: Complexes, da: Complexes) -> NormalEquations:
+    """Cost and derivatives for R (frequencies, M, M), A (frequencies, M, K), dA (frequencies, M, K, d)."""
     inverse = np.asarray(np.linalg.pinv(a), np.complex128)
     d = da.shape[-1]
     left = r - a @ (inverse @ r)
@@ -203,19 +212,23 @@ def _normal(r: Complexes, a: Complexes, da: Complexes) -> _Normal:
     h = projected_derivatives(a, da)
     signals = np.asarray(inverse @ r @ np.swapaxes(inverse.conj(), 1, 2), np.complex128)
     curvature = 2.0 * np.real(h * signal_part(signals, d)).sum(axis=0)
-    return _Normal(cost, gradient, curvature, h, signals, inverse, d)
+    return NormalEquations(cost, gradient, curvature, h, signals, inverse, d)
 
 
-def _covariance(seen: FrameCovariance, now: _Normal, noise: float) -> Floats:
-    """Covariance of deterministic maximum likelihood, theorem 4.3 of [2]: H1^(-1) H2 H1^(-1) sigma2 / 2.
+def estimate_covariance(now: NormalEquations, per_bin: float, frames: int, ties: Floats | None = None) -> Floats:
+    """Covariance of deterministic maximum likelihood [2]_: H1^(-1) H2 H1^(-1) sigma2 / 2.
 
     H1 has the signals' own covariance, H2 that plus the noise that the solved-out signals carry.
+
+    per_bin  noise power sigma2 per microphone, frequency and frame
+    ties     (parameters, K d) when columns share parameters; None: each has its own
     """
-    per_bin = noise / _REDUNDANCY
-    noise_in_signals = per_bin * seen.frames * (now.inverse @ np.swapaxes(now.inverse.conj(), 1, 2))
+    noise_in_signals = per_bin * frames * (now.inverse @ np.swapaxes(now.inverse.conj(), 1, 2))
     h1 = np.real(now.h * signal_part(now.signals - noise_in_signals, now.d)).sum(axis=0)
     h2 = np.real(now.h * signal_part(now.signals, now.d)).sum(axis=0)
+    if ties is not None:
+        h1, h2 = ties @ h1 @ ties.T, ties @ h2 @ ties.T
     if np.linalg.eigvalsh(h1)[0] <= 0.0:
         h1 = h2
     inverse = np.linalg.inv(h1)
-    return np.asarray(_REDUNDANCY * per_bin / 2.0 * inverse @ h2 @ inverse)
+    return np.asarray(per_bin / 2.0 * inverse @ h2 @ inverse)

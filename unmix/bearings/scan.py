@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from unmix.bearings.bins import Bins, Singles, Spectra, Steering, bin_segments, join
 from unmix.bearings.mixture import Cluster, clusters, likelihoods, mixture_weights, responses
+from unmix.bearings.peaks import FramePeaks
 from unmix.bearings.space import SearchSpace
 from unmix.bearings.tracks import Detections
 
@@ -46,6 +47,7 @@ class Scan:
     score       (points,) weight of each point of the grid, mean over sections
     slice_s     (slices,) middle of each slice; loud (slices,) share of frames with sound above the noise
     bins        number of bins chosen
+    peaks       best direction of every frame, of methods that work with those
     """
 
     sections: list[list[Cluster]]
@@ -55,6 +57,7 @@ class Scan:
     slice_s: Floats
     loud: Floats
     bins: int
+    peaks: FramePeaks | None = None
 
     @property
     def kept(self) -> Bins | None:

@@ -87,13 +87,16 @@ class SearchSpace:
         u = inside @ self.basis.T + rest * (np.zeros(3) if self.normal is None else self.normal)
         return np.asarray(u / np.linalg.norm(u, axis=-1, keepdims=True))
 
-    def local(self, x: Floats, step: float) -> LocalFrame:
-        """The stencil of differences around the projection x (rank,), along the directions in which it may move."""
+    def local(self, x: Floats, step: float, *, unit: bool = False) -> LocalFrame:
+        """The stencil of differences around the projection x (rank,), along the directions in which it may move.
+
+        ``unit`` holds x at unit length, in the array's plane, where only its direction can be known.
+        """
         if self.region == "ring":
             azimuth, _ = direction_angles(self.lift(x))
             x = self.project(unit_vector(azimuth))
             axes = (unit_vector(azimuth + 0.5 * np.pi) @ self.basis)[:, None]
-        elif self.rank == 3:
+        elif self.rank == 3 or unit:
             x = x / np.linalg.norm(x)
             axes = np.linalg.svd(x[None])[2][1:].T
         else:
@@ -104,7 +107,7 @@ class SearchSpace:
             moves += [step * np.eye(d)[a], -step * np.eye(d)[a]]
         if d == 2:
             moves.append(np.full(2, step))
-        frame = LocalFrame(x, axes, self.rank == 3 or self.region == "ring", np.empty(0))
+        frame = LocalFrame(x, axes, self.rank == 3 or self.region == "ring" or unit, np.empty(0))
         return replace(frame, stencil=np.stack([frame.move(m) for m in moves]))
 
     def mirrors(self, direction: ArrayLike) -> Floats:

@@ -9,7 +9,7 @@ from __future__ import annotations
 import time
 import warnings as warning_system
 from collections.abc import Callable, Iterable, Iterator
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -17,11 +17,15 @@ from numpy.typing import NDArray
 
 from unmix.array import Array
 from unmix.bearings.activity import Shares, active_stretches, talker_shares
-from unmix.bearings.bins import make_steering
+from unmix.bearings.bins import HIGHEST_HZ, make_steering
 from unmix.bearings.count import MOST_TALKERS, TalkerCount
 from unmix.bearings.estimate import bearing_estimate
 from unmix.bearings.find import FoundTalker, find_talkers
-from unmix.bearings.scan import FEWEST_BINS, SLICE_S, Scan, scan
+from unmix.bearings.fit import FrameCovariance
+from unmix.bearings.orientation import estimate_clock_offset, orientation_notes
+from unmix.bearings.polish import polished
+from unmix.bearings.scan import FEWEST_BINS, SLICE_S, Rotations, Scan, scan
+from unmix.bearings.scan_peaks import scan_peaks
 from unmix.bearings.space import Region, SearchSpace, search_space
 from unmix.errors import InputError, UnmixWarning
 from unmix.jobs.located import Located, LocatedTalker, ScoreMap
@@ -29,14 +33,41 @@ from unmix.jobs.naming import name_talkers
 from unmix.scene import Scene, Talker
 from unmix.track import Orientation, Track
 
-__all__ = ["locate", "locate_array"]
+__all__ = ["METHODS", "Method", "locate", "locate_array"]
 
 Floats = NDArray[np.float64]
+Chunks = Callable[[], Iterable[Floats]]
 Progress = Callable[[float], None]
-Method = Literal["mixture"]
+Method = Literal["mixture", "srp", "snapshots", "fit"]
+METHODS: tuple[Method, ...] = ("mixture", "srp", "snapshots", "fit")
 
 SHORTEST_S = 0.1
 _CHUNK_S = 2.0
+
+
+@dataclass(frozen=True)
+class _Task:
+    """What is to be located, and how."""
+
+    chunks: Chunks
+    duration_s: float
+    array: Array
+    sample_rate: int
+    where: str
+    asked: int | None
+    method: Method
+    region: Region
+    orientation: Orientation | None
+    clock_offset_s: float | Literal["estimate"]
+    temperature_c: float
+    distance_m: float | None
+    known: tuple[Talker, ...] = ()
+    progress: Progress | None = None
+
+    def rotations(self, offset_s: float) -> Rotations | None:
+        """Rotations, array to world, at times of the recording; None when the array rests."""
+        orientation = self.orientation
+        return None if orientation is None else lambda time_s: orientation.matrices(time_s + offset_s)
 
 
 def locate(
@@ -50,30 +81,35 @@ def locate(
     """Find the talkers of a scene.
 
     talkers   how many there are; None takes the number the scene lists, and estimates it when it lists none
-    method    how directions are scored
+    method    how directions are scored: "mixture" of onset bins, the default, polished by the fit where there is no
+              room; "srp", steered response power with phase transform; "snapshots", free expansion of single
+              samples; "fit", least squares of all talkers at once started from the mixture: exact without a room, wrong in one
     region    "sphere", or "ring" when all talkers are level with the array
     progress  called with the share done, 0 to 1
 
-    Memory does not grow with the recording. Raises InputError or FileError with one line that says what to do.
+    Memory does not grow with the recording's samples. Raises InputError, UnsolvableError or FileError with one line
+    that says what to do.
     """
-    asked = talkers if talkers is not None else (len(scene.talkers) or None)
     distances = {t.distance_m for t in scene.talkers}
     located = _locate(
-        scene.recording.chunks(),
-        scene.recording.duration_s,
-        scene.array,
-        scene.sample_rate,
-        where=scene.title,
-        asked=asked,
-        region=region,
-        orientation=scene.orientation,
-        clock_offset_s=scene.clock_offset_s if isinstance(scene.clock_offset_s, float) else 0.0,
-        temperature_c=scene.temperature_c,
-        distance_m=distances.pop() if len(distances) == 1 else None,
-        known=scene.talkers,
-        progress=progress,
+        _Task(
+            chunks=scene.recording.chunks,
+            duration_s=scene.recording.duration_s,
+            array=scene.array,
+            sample_rate=scene.sample_rate,
+            where=scene.title,
+            asked=talkers if talkers is not None else (len(scene.talkers) or None),
+            method=method,
+            region=region,
+            orientation=scene.orientation,
+            clock_offset_s=scene.clock_offset_s,
+            temperature_c=scene.temperature_c,
+            distance_m=distances.pop() if len(distances) == 1 else None,
+            known=scene.talkers,
+            progress=progress,
+        )
     )
-    return _with_scene(located, scene)
+    return replace(located, scene=scene)
 
 
 def locate_array(
@@ -85,6 +121,7 @@ def locate_array(
     method: Method = "mixture",
     region: Region = "sphere",
     orientation: Orientation | None = None,
+    clock_offset_s: float | Literal["estimate"] = 0.0,
     temperature_c: float = 20.0,
     distance_m: float | None = None,
     progress: Progress | None = None,
@@ -99,92 +136,133 @@ def locate_array(
         raise InputError(f"recording: channel {channel}, sample {sample} is NaN or infinite; repair or cut it out")
     size = round(_CHUNK_S * sample_rate)
     return _locate(
-        (recording[:, at : at + size] for at in range(0, recording.shape[1], size)),
-        recording.shape[1] / sample_rate,
-        array,
-        sample_rate,
-        where="recording",
-        asked=talkers,
-        region=region,
-        orientation=orientation,
-        temperature_c=temperature_c,
-        distance_m=distance_m,
-        progress=progress,
+        _Task(
+            chunks=lambda: (recording[:, at : at + size] for at in range(0, recording.shape[1], size)),
+            duration_s=recording.shape[1] / sample_rate,
+            array=array,
+            sample_rate=sample_rate,
+            where="recording",
+            asked=talkers,
+            method=method,
+            region=region,
+            orientation=orientation,
+            clock_offset_s=clock_offset_s,
+            temperature_c=temperature_c,
+            distance_m=distance_m,
+            progress=progress,
+        )
     )
 
 
-def _locate(
-    chunks: Iterable[Floats],
-    duration_s: float,
-    array: Array,
-    sample_rate: int,
-    *,
-    where: str,
-    asked: int | None,
-    region: Region,
-    orientation: Orientation | None = None,
-    clock_offset_s: float = 0.0,
-    temperature_c: float = 20.0,
-    distance_m: float | None = None,
-    known: tuple[Talker, ...] = (),
-    progress: Progress | None = None,
-) -> Located:
+def _locate(task: _Task) -> Located:
     began = time.perf_counter()
-    _check(duration_s, asked, where)
-    rotations = None if orientation is None else _rotations(orientation, clock_offset_s)
-    space = _space(array, duration_s, rotations, region, where)
-    steering = make_steering(array, sample_rate, temperature_c=temperature_c, spacing=space.spacing)
-    watched = _watched(chunks, duration_s * sample_rate, progress)
-    seen = scan(watched, space, steering, duration_s, rotations=rotations, distance_m=distance_m)
-    found, count = find_talkers(seen, space, steering, asked=asked, distance_m=distance_m)
-    shares = talker_shares(seen, space, steering, _projections(found, space.rank), distance_m=distance_m)
-    talkers = [_describe(t, k, shares, space, duration_s, distance_m) for k, t in enumerate(found)]
-    named, notes = name_talkers(talkers, known, duration_s)
-    lines = (*_warnings(seen, space, named, count, asked), *notes)
+    _check(task)
+    offset_s, notes = _orient(task)
+    rotations = task.rotations(offset_s)
+    space = _space(task, rotations)
+    seen, found, count, shares = _find(task, space, rotations)
+    talkers = [_describe(t, k, shares, space, task) for k, t in enumerate(found)]
+    named, naming_notes = name_talkers(talkers, task.known, task.duration_s)
+    lines = (*notes, *_warnings(seen, space, named, count, task.asked), *naming_notes)
     for line in lines:
         warning_system.warn(line, UnmixWarning, stacklevel=3)
     return Located(
         talkers=tuple(named),
         count=count,
-        method="mixture",
-        frame="array" if orientation is None else "world",
+        method=task.method,
+        frame="array" if rotations is None else "world",
         ambiguity=space.ambiguity,
         warnings=lines,
-        duration_s=duration_s,
+        duration_s=task.duration_s,
         score=_score_map(seen, space),
         detections=_detected(seen, space),
-        clock_offset_s=None if orientation is None else clock_offset_s,
+        clock_offset_s=None if rotations is None else offset_s,
         wall_time_s=time.perf_counter() - began,
     )
 
 
-def _check(duration_s: float, asked: int | None, where: str) -> None:
-    if duration_s < SHORTEST_S:
+def _check(task: _Task) -> None:
+    if task.method not in METHODS:
+        raise InputError(f"{task.where}: method {task.method!r} is not known; choose one of {', '.join(METHODS)}")
+    if task.duration_s < SHORTEST_S:
         raise InputError(
-            f"{where}: the recording lasts {duration_s * 1e3:.0f} ms; at least {SHORTEST_S * 1e3:.0f} ms are needed"
+            f"{task.where}: the recording lasts {task.duration_s * 1e3:.0f} ms; at least {SHORTEST_S * 1e3:.0f} ms are "
+            "needed"
         )
-    if asked is not None and not 0 <= asked <= MOST_TALKERS:
-        raise InputError(f"{where}: {asked} talkers asked for; 0 to {MOST_TALKERS} can be told apart")
+    if task.asked is not None and not 0 <= task.asked <= MOST_TALKERS:
+        raise InputError(f"{task.where}: {task.asked} talkers asked for; 0 to {MOST_TALKERS} can be told apart")
 
 
-def _rotations(orientation: Orientation, offset_s: float) -> Callable[[Floats], Floats]:
-    return lambda time_s: orientation.matrices(time_s + offset_s)
+def _orient(task: _Task) -> tuple[float, list[str]]:
+    """Clock offset of the orientation, estimated in a pass of its own when asked for, and what is to be said of it."""
+    if task.orientation is None:
+        return 0.0, []
+    notes = []
+    offset_s = task.clock_offset_s
+    if not isinstance(offset_s, float):
+        space = _space(task, None)
+        steering = make_steering(task.array, task.sample_rate, temperature_c=task.temperature_c)
+        seen = scan(task.chunks(), space, steering, task.duration_s, distance_m=task.distance_m)
+        estimate = estimate_clock_offset(task.orientation, seen.detections, space, task.duration_s)
+        notes.append(estimate.note)
+        offset_s = estimate.offset_s or 0.0
+    return offset_s, notes + orientation_notes(task.orientation, offset_s, task.duration_s)
 
 
-def _space(
-    array: Array, duration_s: float, rotations: Callable[[Floats], Floats] | None, region: Region, where: str
-) -> SearchSpace:
-    turns = None if rotations is None else rotations(np.linspace(0.0, duration_s, 61))
-    return search_space(array.positions_m, turns, region=region, where=where)
+def _space(task: _Task, rotations: Rotations | None) -> SearchSpace:
+    turns = None if rotations is None else rotations(np.linspace(0.0, task.duration_s, 61))
+    return search_space(task.array.positions_m, turns, region=task.region, where=task.where)
 
 
-def _watched(chunks: Iterable[Floats], samples: float, progress: Progress | None) -> Iterator[Floats]:
+def _find(
+    task: _Task, space: SearchSpace, rotations: Rotations | None
+) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
+    """The pass over the recording, talkers and their number, and whose bins are whose."""
+    mixture = task.method in ("mixture", "fit")
+    steering = make_steering(
+        task.array, task.sample_rate, temperature_c=task.temperature_c, spacing=space.spacing, whiten=mixture
+    )
+    block = FrameCovariance(task.array.channels, task.sample_rate, highest_hz=HIGHEST_HZ)
+    chunks = _watched(task, block if mixture and rotations is None else None)
+    if task.method in ("srp", "snapshots"):
+        seen = scan_peaks(
+            chunks,
+            task.method,
+            task.array,
+            space,
+            steering,
+            task.duration_s,
+            rotations=rotations,
+            distance_m=task.distance_m,
+            temperature_c=task.temperature_c,
+        )
+    else:
+        seen = scan(chunks, space, steering, task.duration_s, rotations=rotations, distance_m=task.distance_m)
+    found, count = find_talkers(seen, space, steering, asked=task.asked, distance_m=task.distance_m)
+    shares = talker_shares(seen, space, steering, _projections(found, space.rank), distance_m=task.distance_m)
+    found, _ = polished(
+        found,
+        shares.outside,
+        block,
+        task.array,
+        space,
+        temperature_c=task.temperature_c,
+        distance_m=task.distance_m,
+        always=task.method == "fit",
+    )
+    return seen, found, count, shares
+
+
+def _watched(task: _Task, block: FrameCovariance | None) -> Iterator[Floats]:
+    """The recording's chunks, taken into ``block`` on their way and reported as progress."""
     done = 0
-    for chunk in chunks:
+    for chunk in task.chunks():
+        if block is not None:
+            block.add(chunk)
         yield chunk
         done += chunk.shape[1]
-        if progress is not None:
-            progress(min(1.0, done / samples))
+        if task.progress is not None:
+            task.progress(min(1.0, done / (task.duration_s * task.sample_rate)))
 
 
 def _projections(found: list[FoundTalker], rank: int) -> Callable[[Floats], Floats]:
@@ -196,10 +274,9 @@ def _projections(found: list[FoundTalker], rank: int) -> Callable[[Floats], Floa
     return at
 
 
-def _describe(
-    t: FoundTalker, index: int, shares: Shares, space: SearchSpace, duration_s: float, distance_m: float | None
-) -> LocatedTalker:
+def _describe(t: FoundTalker, index: int, shares: Shares, space: SearchSpace, task: _Task) -> LocatedTalker:
     """A found talker as the user sees it."""
+    distance_m = task.distance_m
     outside = float(shares.outside[index])
     middle = bearing_estimate(t.x[len(t.x) // 2], t.covariance, outside, space)
     if t.moving:
@@ -208,7 +285,7 @@ def _describe(
         time_s = t.time_s
     else:
         azimuth, elevation = np.full(2, middle.azimuth), np.full(2, middle.elevation)
-        time_s = np.array([0.0, duration_s])
+        time_s = np.array([0.0, task.duration_s])
     return LocatedTalker(
         name="",
         azimuth=middle.azimuth,
@@ -260,7 +337,3 @@ def _warnings(
         yield count.reason
     if space.ambiguity is not None and talkers:
         yield space.ambiguity
-
-
-def _with_scene(located: Located, scene: Scene) -> Located:
-    return replace(located, scene=scene)

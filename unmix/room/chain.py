@@ -14,7 +14,7 @@ import numpy as np
 
 from unmix.room.bands import Bands
 from unmix.room.linalg import power
-from unmix.room.post import background_level, distortionless, gains, posterior_masks, restore
+from unmix.room.post import background_level, distortionless, frame_weights, gains, posterior_masks, restore
 from unmix.room.prediction import predict
 from unmix.room.refinement import Refined, independent_start, refine, scaled
 from unmix.room.settings import PostSettings, PredictionSettings, RoomSettings
@@ -25,7 +25,8 @@ __all__ = ["STAGES", "ChainResult", "Start", "run_chain"]
 STAGES = ("prediction", "refinement", "filter", "restoration")
 """What changes the model's output, in order."""
 
-_NOISE_IN_MASKS = 4.0
+_NOISE_IN_MASKS = 8.0
+_NOISE_IN_GAIN = 2.0
 """Background power counted in the masks: above one, since doubtful frames had better count as nobody's."""
 
 
@@ -117,9 +118,11 @@ def _post(
     """The filtered talkers, and those with their early sound restored and the gain applied."""
     y, filters = _filtered(z, y, post, reference)
     if prediction is not None and prediction.again:
-        z = predict(x, prediction, variance=power(y).mean(axis=1), iterations=prediction.again)
+        z = predict(
+            x, prediction, variance=power(y).mean(axis=1), iterations=prediction.again, taps=prediction.taps_again
+        )
         y, filters = _filtered(z, rows @ z, post, reference)
-    noise = background_level(z)[:, None] * power(filters).sum(axis=2)
+    noise = _NOISE_IN_GAIN * background_level(z)[:, None] * power(filters).sum(axis=2)
     early = y
     if post.restore_lags:
         early, amplified = restore(y, x[:, reference], lags=post.restore_lags, keep=post.restore_keep)
@@ -134,5 +137,5 @@ def _filtered(z: Complexes, y: Complexes, post: PostSettings, reference: int) ->
     for _ in range(post.passes):
         y, filters = distortionless(z, posterior_masks(y, noise), reference, trade_off=1.0)
         noise = _NOISE_IN_MASKS * (background * power(filters).sum(axis=2)).mean(axis=1)[:, None, None]
-    masks = posterior_masks(y, noise)
-    return distortionless(z, masks, reference, past=post.past, future=post.future, trade_off=1.0)
+    masks, weight = posterior_masks(y, noise), frame_weights(z, post.level_weight)
+    return distortionless(z, masks, reference, past=post.past, future=post.future, trade_off=1.0, weight=weight)

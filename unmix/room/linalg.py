@@ -42,7 +42,7 @@ def safe_solve(a: Complexes, b: Complexes) -> Complexes:
 
 
 def lagged(signals: Complexes, lags: Sequence[int]) -> Complexes:
-    """Copies of (frequencies, channels, frames) delayed by each lag, stacked to (frequencies, lags * channels, frames)."""
+    """Copies of (frequencies, channels, frames) delayed by each lag, as (frequencies, lags * channels, frames)."""
     f, m, t = signals.shape
     out = np.zeros((f, len(lags) * m, t), signals.dtype)
     for i, lag in enumerate(lags):

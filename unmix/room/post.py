@@ -6,7 +6,8 @@ channel z_1, mu the trade-off,
 
     w_k = Phi^-1 r / (mu + lambda),  Phi = sum_t (1 - m_k) z~ z~^H,  r = sum_t m_k z~ z_1^*,  lambda = r^H Phi^-1 r/r_1
 
-is the parametric multichannel Wiener filter [1]_, distortionless at mu = 0, over several frames [2]_.
+is the parametric multichannel Wiener filter [1]_, distortionless at mu = 0, over several frames [2]_. Both sums weight
+frames by (power of all channels)^-level_weight: left alone, the loudest syllables would decide what quiet ones need.
 
 **Restoration.** Blind filters drift from the early sound at the reference microphone: reflections within a few frames
 are lost or coloured. The unprocessed reference channel is fitted by all talkers' outputs over lags of -keep ... lags
@@ -23,17 +24,20 @@ lags are fitted only so that late reverberation does not bias the early ones.
 
 from __future__ import annotations
 
+from typing import cast
+
 import numpy as np
 
 from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve
 from unmix.room.settings import PostSettings
 from unmix.room.stft import Complexes, Reals
 
-__all__ = ["background_level", "distortionless", "gains", "posterior_masks", "restore"]
+__all__ = ["background_level", "distortionless", "frame_weights", "gains", "posterior_masks", "restore"]
 
 _LOADING = 1e-6
 _RESTORE_LOADING = 1e-4
 _QUIET_SHARE = 0.2
+_LEAST_LEVEL = 1e-3
 
 
 def posterior_masks(y: Complexes, noise: Reals | float = 0.0) -> Reals:
@@ -51,27 +55,37 @@ def distortionless(
     past: int = 0,
     future: int = 0,
     trade_off: float = 0.0,
+    weight: Reals | None = None,
 ) -> tuple[Complexes, Complexes]:
     """Talkers (frequencies, K, frames) out of channels (frequencies, M, frames), and the filters used.
 
-    ``past`` and ``future`` frames join the present one in the filter: (frequencies, K, lags * M), future first.
+    ``weight`` (frequencies, 1, frames) of each frame, alike if None. ``past`` and ``future`` frames join the present
+    one in the filter: (frequencies, K, lags * M), future first.
     """
     f, m, frames = z.shape
     lags = range(-future, past + 1)
     s = lagged(z, lags) if len(lags) > 1 else z
     at = future * m + reference
-    share = z.real.dtype.type(1.0 / frames)
+    each = (np.ones((f, 1, frames), z.real.dtype) if weight is None else weight) / z.real.dtype.type(frames)
     filters = np.empty((f, masks.shape[1], s.shape[1]), z.dtype)
     for k in range(masks.shape[1]):
-        mask = masks[:, k : k + 1] * share
-        phi = loaded((s * (share - mask)) @ adjoint(s), _LOADING)
-        r = (s * mask) @ adjoint(z[:, reference : reference + 1])
+        own = masks[:, k : k + 1] * each
+        phi = loaded((s * (each - own)) @ adjoint(s), _LOADING)
+        r = (s * own) @ adjoint(z[:, reference : reference + 1])
         u = safe_solve(phi, r)
         at_reference = r[:, at : at + 1].real
         tiny = np.finfo(at_reference.dtype).tiny
         snr = (adjoint(r) @ u).real / np.maximum(at_reference, tiny)
         filters[:, k] = np.conjugate(u / np.maximum(trade_off + snr, tiny**0.5))[:, :, 0]
     return filters @ s, filters
+
+
+def frame_weights(z: Complexes, exponent: float) -> Reals:
+    """Weights (frequencies, 1, frames) of mean one: power over all channels and three frames, to minus ``exponent``."""
+    level = _over_three_frames(power(z).sum(axis=1, keepdims=True))
+    level += _LEAST_LEVEL * level.mean(axis=2, keepdims=True) + np.finfo(level.dtype).tiny
+    weight = level**-exponent
+    return cast("Reals", weight / weight.mean(axis=2, keepdims=True))
 
 
 def restore(y: Complexes, x_reference: Complexes, *, lags: int, keep: int) -> tuple[Complexes, Reals]:
@@ -102,12 +116,16 @@ def background_level(z: Complexes) -> Reals:
 def gains(d: Complexes, noise: Reals, settings: PostSettings) -> Reals:
     """Real gains (frequencies, K, frames) of the mask; ``noise`` (frequencies, K) is the background in each output."""
     p = power(d)
-    smooth = p.copy()
-    smooth[:, :, 1:] += p[:, :, :-1]
-    smooth[:, :, :-1] += p[:, :, 1:]
-    smooth /= 3.0
+    smooth = _over_three_frames(p)
     unwanted = settings.leak * (smooth.sum(axis=1, keepdims=True) - smooth) + noise[:, :, None]
     wanted = np.maximum(smooth - unwanted, 0.0)
     gain = wanted / (wanted + settings.trade_off * unwanted + np.finfo(p.dtype).tiny)
     floored: Reals = np.maximum(gain, settings.gain_floor)
     return floored
+
+
+def _over_three_frames(p: Reals) -> Reals:
+    smooth = p.copy()
+    smooth[:, :, 1:] += p[:, :, :-1]
+    smooth[:, :, :-1] += p[:, :, 1:]
+    return smooth / 3.0

@@ -26,9 +26,9 @@ __all__ = ["RecursivePrediction", "predict", "usable_taps"]
 _LOADING = 1e-6
 
 
-def usable_taps(settings: PredictionSettings, channels: int, frames: int) -> int:
-    """Taps that so many frames can support: four frames per coefficient, at least one tap."""
-    return max(1, min(settings.taps, frames // (4 * channels)))
+def usable_taps(taps: int, channels: int, frames: int) -> int:
+    """As many of ``taps`` as so many frames can support: four frames per coefficient, at least one tap."""
+    return max(1, min(taps, frames // (4 * channels)))
 
 
 def predict(
@@ -37,14 +37,16 @@ def predict(
     *,
     variance: Reals | None = None,
     iterations: int | None = None,
+    taps: int | None = None,
 ) -> Complexes:
     """Spectra (frequencies, channels, frames) without what the past predicts.
 
     variance    (frequencies, frames) of the talkers, to start from; the channels' mean power when None
     iterations  reweightings, instead of the settings'; the first uses ``variance``
+    taps        instead of the settings'
     """
     channels, frames = x.shape[1:]
-    taps = usable_taps(settings, channels, frames)
+    taps = usable_taps(taps or settings.taps, channels, frames)
     s = lagged(x, range(settings.delay, settings.delay + taps))
     z = x
     floor = 10.0 ** (settings.floor_db / 10.0)

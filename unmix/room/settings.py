@@ -44,6 +44,7 @@ class PredictionSettings(msgspec.Struct, frozen=True, forbid_unknown_fields=True
     again: Annotated[
         int, Meta(ge=0, le=5, description="reweightings after the refinement, by the power of the separated talkers")
     ] = 1
+    taps_again: Annotated[int, Meta(ge=1, le=40, description="frames that predict, after the refinement")] = 8
     floor_db: Annotated[
         float, Meta(ge=-120.0, le=-10.0, description="lowest weight, below the loudest frame of each frequency")
     ] = -50.0
@@ -74,6 +75,9 @@ class PostSettings(msgspec.Struct, frozen=True, forbid_unknown_fields=True, kw_o
     ] = 1
     past: Annotated[int, Meta(ge=0, le=4, description="past frames in the last filter")] = 1
     future: Annotated[int, Meta(ge=0, le=4, description="future frames in the last filter")] = 1
+    level_weight: Annotated[
+        float, Meta(ge=0.0, le=1.0, description="0: loud frames decide the filter; 1: all frames count alike")
+    ] = 0.25
     restore_lags: Annotated[
         int,
         Meta(
@@ -100,7 +104,7 @@ class PostSettings(msgspec.Struct, frozen=True, forbid_unknown_fields=True, kw_o
             le=1.0,
             description="share of the other talkers' power assumed left in a talker's output; 0: no gain",
         ),
-    ] = 0.01
+    ] = 0.005
     gain_floor: Annotated[float, Meta(ge=0.0, le=1.0, description="lowest gain of the mask; 1: no mask")] = 0.2
 
 

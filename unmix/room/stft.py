@@ -84,11 +84,11 @@ class Transform:
         count, lead = self.frames(samples), self.frame - self.hop
         padded = np.zeros((channels, (count - 1) * self.hop + self.frame), self.real)
         padded[:, lead : lead + samples] = signals
-        window = self.window().astype(self.real)
+        taper: Reals = self.window().astype(self.real)
         views = np.lib.stride_tricks.sliding_window_view(padded, self.frame, axis=1)[:, :: self.hop]
         spectra = np.empty((self.frame // 2 + 1, channels, count), self.complex)
         for channel in range(channels):
-            spectra[:, channel] = scipy.fft.rfft(views[channel] * window, axis=-1, workers=workers).T
+            spectra[:, channel] = scipy.fft.rfft(views[channel] * taper, axis=-1, workers=workers).T
         return spectra
 
     def synthesise(self, spectra: Complexes, samples: int, *, workers: int = 1) -> Reals:

@@ -51,7 +51,7 @@ SINGULAR, RIDGE = 1e-14, 1e-13
 
 GROUP = 4
 """Frames transformed at a time: few enough for the processor's cache."""
-KEEP_BYTES = 200e6
+KEEP_BYTES = 100e6
 """Spectra of the references are kept for the next estimates up to this size, else computed anew each time."""
 
 
@@ -261,7 +261,7 @@ class ReferenceSet:
         """Spectra of the usable references' frames, each from L - 1 samples before its hop: (usable, frames, bins)."""
         if group not in self._kept:
             start = group * GROUP * self._hop - (self.filter_length - 1)
-            stretch = _stretch(self.references[self._usable], start, start + GROUP * self._hop + self.filter_length - 1)
+            stretch = _stretch(self.references, start, start + self._frame + (GROUP - 1) * self._hop)[self._usable]
             frames = np.lib.stride_tricks.sliding_window_view(stretch, self._frame, axis=1)[:, :: self._hop]
             spectra = scipy.fft.rfft(frames, axis=-1)
             if self._groups * int(spectra.nbytes) > KEEP_BYTES:

@@ -11,93 +11,12 @@ from msgspec import Meta
 from unmix.errors import FileError, InputError
 from unmix.explain import FieldInfo, explain_fields
 from unmix.files import read_toml
-from unmix.room.settings import RoomSettings
+from unmix.settings import ModelSettings, RoomSettings, SolverSettings
 
-__all__ = ["PRESETS", "ModelSettings", "SolverSettings", "Variant", "describe_fields", "load_variant"]
-
-
-class _Strict(msgspec.Struct, forbid_unknown_fields=True, kw_only=True, frozen=True):
-    pass
+__all__ = ["DEFAULT", "PRESETS", "Variant", "describe_fields", "load_variant"]
 
 
-class ModelSettings(_Strict, kw_only=True, frozen=True):
-    """How a delayed talker is written with its derivatives."""
-
-    anchor: Annotated[Literal["nearest", "own"], Meta(description="sample about which delays are expanded")] = "nearest"
-    order: Annotated[int, Meta(ge=0, le=12, description="highest derivative of the expansion")] = 8
-    differentiator: Annotated[
-        Literal["least-squares", "finite-difference"], Meta(description="family of derivative filters")
-    ] = "least-squares"
-    error_db: Annotated[
-        float,
-        Meta(ge=-120.0, le=0.0, description="error allowed for a delay of half a sample; sets the filters' width"),
-    ] = -60.0
-    band_edge: Annotated[
-        float,
-        Meta(gt=0.0, lt=1.0, description="where that error must still hold, a fraction of the Nyquist frequency"),
-    ] = 0.9
-    moving_error_db: Annotated[
-        float, Meta(ge=-120.0, le=0.0, description="the same while something moves, when width costs time")
-    ] = -45.0
-    moving_band_edge: Annotated[
-        float, Meta(gt=0.0, lt=1.0, description="where that error must still hold, a fraction of the Nyquist frequency")
-    ] = 0.8
-    half_width: Annotated[
-        Annotated[int, Meta(ge=1, le=64)] | None,
-        Meta(description="width of the filters in samples to either side, instead of chosen"),
-    ] = None
-    wave: Annotated[
-        Literal["auto", "plane"], Meta(description="auto: spherical where a distance is given; plane: never")
-    ] = "auto"
-
-
-class SolverSettings(_Strict, kw_only=True, frozen=True):
-    """How each block is solved."""
-
-    constraint: Annotated[
-        Literal["tied", "propagated", "free"], Meta(description="what couples the jets of neighbouring samples")
-    ] = "tied"
-    method: Annotated[
-        Literal["stationary", "reduced", "kkt", "convex"], Meta(description="how the least-squares problem is solved")
-    ] = "stationary"
-    noise: Annotated[
-        Literal["white", "diffuse", "measured", "fitted", "observed"], Meta(description="covariance of the noise")
-    ] = "white"
-    self_noise_db: Annotated[
-        float, Meta(ge=-60.0, le=20.0, description="microphones' own noise relative to the diffuse field")
-    ] = -20.0
-    whitening_half_width: Annotated[
-        int, Meta(ge=4, le=400, description="samples that the whitening filter reaches to either side")
-    ] = 64
-    prior: Annotated[
-        Literal["none", "flat", "speech"], Meta(description="what is believed of a talker before listening")
-    ] = "flat"
-    prior_weight: Annotated[
-        float, Meta(ge=0.0, le=10.0, description="weight of the prior, relative to the mean diagonal of H'R^-1 H")
-    ] = 1e-6
-    tail: Annotated[
-        float, Meta(gt=0.0, le=0.1, description="share of a filter's magnitude that its cut-off tail may hold")
-    ] = 1e-6
-    block_s: Annotated[
-        Annotated[float, Meta(gt=0.0, le=120.0)] | None,
-        Meta(description="seconds kept of each block, instead of four margins"),
-    ] = None
-    hold_s: Annotated[float, Meta(gt=0.0, le=0.1, description="seconds for which moving delays are held")] = 1e-3
-    huber: Annotated[
-        Annotated[float, Meta(gt=0.0)] | None,
-        Meta(description="convex: residual, in noise deviations, beyond which it counts linearly"),
-    ] = None
-    clip_level: Annotated[
-        Annotated[float, Meta(gt=0.0, le=1.0)] | None,
-        Meta(description="convex: magnitude from which a sample counts as clipped"),
-    ] = None
-    peak: Annotated[
-        Annotated[float, Meta(gt=0.0)] | None, Meta(description="convex: bound on the magnitude of each talker")
-    ] = None
-    convex_solver: Annotated[Literal["CLARABEL", "OSQP"], Meta(description="convex: which solver")] = "CLARABEL"
-
-
-class Variant(_Strict, kw_only=True, frozen=True):
+class Variant(msgspec.Struct, forbid_unknown_fields=True, kw_only=True, frozen=True):
     """One complete choice of settings."""
 
     name: Annotated[str, Meta(description="name in tables and reports")] = ""

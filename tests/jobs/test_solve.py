@@ -16,8 +16,9 @@ from unmix.jobs.solve import solve, solve_to_folder
 from unmix.metrics.distortion import ReferenceSet
 from unmix.model.delays import paths_from_bearings
 from unmix.scene import Scene, Talker
+from unmix.settings import SolverSettings
 from unmix.track import Track
-from unmix.variant import PRESETS, SolverSettings, Variant
+from unmix.variant import PRESETS, Variant
 
 RATE = 16000
 MODEL = PRESETS["model"]

@@ -17,8 +17,8 @@ from unmix.room.linalg import power
 from unmix.room.post import background_level, distortionless, frame_weights, gains, posterior_masks, restore
 from unmix.room.prediction import predict
 from unmix.room.refinement import Refined, independent_start, refine, scaled
-from unmix.room.settings import PostSettings, PredictionSettings, RoomSettings
 from unmix.room.stft import Complexes, Reals
+from unmix.settings import PostSettings, PredictionSettings, RoomSettings
 
 __all__ = ["STAGES", "ChainResult", "Start", "run_chain"]
 

@@ -29,8 +29,8 @@ from typing import cast
 import numpy as np
 
 from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve
-from unmix.room.settings import PostSettings
 from unmix.room.stft import Complexes, Reals
+from unmix.settings import PostSettings
 
 __all__ = ["background_level", "distortionless", "frame_weights", "gains", "posterior_masks", "restore"]
 

@@ -18,8 +18,8 @@ from __future__ import annotations
 import numpy as np
 
 from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve
-from unmix.room.settings import PredictionSettings
 from unmix.room.stft import Complexes, Reals
+from unmix.settings import PredictionSettings
 
 __all__ = ["RecursivePrediction", "predict", "usable_taps"]
 

@@ -25,8 +25,8 @@ import numpy as np
 from unmix.room.bands import Bands
 from unmix.room.factors import Factors
 from unmix.room.linalg import adjoint, loaded, power, safe_solve
-from unmix.room.settings import RefinementSettings
 from unmix.room.stft import Complexes, Reals
+from unmix.settings import RefinementSettings
 
 __all__ = ["Refined", "independent_start", "refine", "scaled"]
 

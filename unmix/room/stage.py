@@ -16,8 +16,8 @@ from numpy.typing import NDArray
 
 from unmix.room.bands import Bands
 from unmix.room.chain import STAGES, ChainResult, Start, run_chain
-from unmix.room.settings import RoomSettings
 from unmix.room.stft import Complexes, Reals, Transform
+from unmix.settings import RoomSettings
 
 __all__ = ["Look", "RoomReport", "RoomStage", "SegmentReport"]
 

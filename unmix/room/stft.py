@@ -16,7 +16,7 @@ import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-from unmix.room.settings import TransformSettings
+from unmix.settings import TransformSettings
 
 __all__ = ["Complexes", "Reals", "Transform"]
 

@@ -21,13 +21,14 @@ from unmix.model.mixing import Mixing, mixing_from_paths, model_reach
 from unmix.model.noise import Noise, Spectra
 from unmix.model.prior import Prior
 from unmix.physics import speed_of_sound
+from unmix.settings import SolverSettings
 from unmix.solvers import convex, kkt, propagated, reduced, snapshots
 from unmix.solvers.baselines import baseline_bank
 from unmix.solvers.pose import Posed, check_solvable, pose
 from unmix.solvers.problem import Problem
 from unmix.solvers.stationary import FilterBank, design, filter_bank_from_response
 from unmix.solvers.streaming import BlockSeparator, FilterBankSeparator, Separator, SnapshotSeparator
-from unmix.variant import SolverSettings, Variant
+from unmix.variant import Variant
 
 __all__ = ["Assembly", "assemble"]
 

@@ -15,8 +15,9 @@ from unmix.model.mixing import Mixing, mixing_from_paths
 from unmix.model.noise import Noise, Spectra, diffuse_covariance, fitted_covariance, noise_from_covariance
 from unmix.model.prior import make_prior
 from unmix.physics import speed_of_sound
+from unmix.settings import SolverSettings
 from unmix.solvers.problem import Problem
-from unmix.variant import SolverSettings, Variant
+from unmix.variant import Variant
 
 __all__ = ["Posed", "check_solvable", "paths_collide", "pose"]
 

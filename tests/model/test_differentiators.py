@@ -24,7 +24,7 @@ def test_finite_differences_are_exact_for_polynomials(half_width: int) -> None:
 
 @pytest.mark.parametrize(("half_width", "expected_db"), [(3, (-29, -10, -3)), (6, (-50, -16, -4.5))])
 def test_half_sample_error_of_finite_differences(half_width: int, expected_db: tuple[float, ...]) -> None:
-    # Half a sample at 0.5, 0.75 and 0.9 of the Nyquist frequency, exact finite differences of the highest order they carry.
+    # Half a sample at 0.5, 0.75 and 0.9 of Nyquist; exact finite differences of the highest order they carry.
     weights = finite_differences(2 * half_width, half_width)
     terms = (-0.5) ** np.arange(2 * half_width + 1) / [math.factorial(n) for n in range(2 * half_width + 1)]
     omega = np.pi * np.array([0.5, 0.75, 0.9])

@@ -254,4 +254,4 @@ def test_a_bar_with_time_left_for_what_takes_long(seconds: float, shown: bool) -
     os.close(ours)
     text = re.sub(rb"\x1b\[[0-9;?]*[A-Za-z]", b"", said).decode()
     assert ("working" in text) == shown
-    assert bool(re.search(r"\d\d:\d\d left", text)) == shown
+    assert bool(re.search(r"\d %  0:0\d left", text)) == shown

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import contextlib
 import json
+import shutil
 import sys
-import threading
-import time
+import textwrap
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
@@ -14,25 +14,24 @@ from typing import TYPE_CHECKING, Any, TypeVar
 import click
 
 if TYPE_CHECKING:
-    from rich.console import Console
-    from rich.progress import Progress
+    from rich.table import Table
 
 __all__ = [
     "consent_line",
-    "console",
     "existing_file",
     "json_option",
     "overwrite_option",
     "print_json",
+    "print_table",
     "progress_bar",
+    "say",
     "scene_argument",
 ]
 
 Decorated = TypeVar("Decorated", bound=Callable[..., Any])
 
-PATIENCE_S = 2.0
-"""Anything that takes longer shows a progress bar."""
 PIPE_WIDTH = 160
+PROSE_WIDTH = 100
 
 json_option: Callable[[Decorated], Decorated] = click.option(
     "--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else."
@@ -54,11 +53,26 @@ def print_json(tree: dict[str, Any]) -> None:
     click.echo(json.dumps(tree, indent=2, allow_nan=False, ensure_ascii=False))
 
 
-def console() -> Console:
-    """Standard output for tables; into a pipe or a file it is wide enough that nothing is folded."""
+def print_table(table: Table) -> None:
+    """Print a table on standard output; into a pipe or a file it is wide enough that little is folded."""
     from rich.console import Console
 
-    return Console(highlight=False, width=None if sys.stdout.isatty() else PIPE_WIDTH)
+    if sys.stdout.isatty():
+        Console(highlight=False).print(table)
+        return
+    out = Console(highlight=False, width=PIPE_WIDTH, color_system=None)
+    with out.capture() as captured:
+        out.print(table)
+    click.echo("\n".join(line.rstrip() for line in captured.get().splitlines()))
+
+
+def say(text: str = "") -> None:
+    """Print a sentence on standard output; on a terminal it is folded between words."""
+    if sys.stdout.isatty():
+        width = min(shutil.get_terminal_size().columns, PROSE_WIDTH)
+        indent = text[: len(text) - len(text.lstrip())]
+        text = textwrap.fill(text, width, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False)
+    click.echo(text)
 
 
 def consent_line(loudest: str | None = None) -> str:
@@ -79,59 +93,10 @@ def progress_bar(label: str) -> Iterator[Callable[[float], None]]:
     if not sys.stderr.isatty():
         yield lambda share: None
         return
-    bar = _Bar(label)
+    from unmix.cli.bar import Bar
+
+    bar = Bar(label)
     try:
         yield bar.report
     finally:
         bar.stop()
-
-
-class _Bar:
-    """A progress bar that shows itself only once it is plain that the job takes longer than `PATIENCE_S`."""
-
-    def __init__(self, label: str) -> None:
-        self._label = label
-        self._began = time.monotonic()
-        self._share: float | None = None
-        self._lock = threading.Lock()
-        self._shown: Progress | None = None
-        self._over = False
-        self._timer = threading.Timer(PATIENCE_S, self._show)
-        self._timer.daemon = True
-        self._timer.start()
-
-    def report(self, share: float) -> None:
-        """Take the share done."""
-        self._share = share
-        elapsed = time.monotonic() - self._began
-        if self._shown is None and elapsed > 0.25 * PATIENCE_S and elapsed > PATIENCE_S * share:
-            self._show()
-        if self._shown is not None:
-            self._shown.update(self._shown.task_ids[0], completed=share, total=1.0)
-
-    def stop(self) -> None:
-        """Take the bar away."""
-        self._timer.cancel()
-        with self._lock:
-            self._over = True
-            if self._shown is not None:
-                self._shown.stop()
-
-    def _show(self) -> None:
-        from rich.console import Console
-        from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
-
-        with self._lock:
-            if self._over or self._shown is not None:
-                return
-            self._shown = Progress(
-                TextColumn("{task.description}"),
-                BarColumn(bar_width=32),
-                TaskProgressColumn(),
-                TimeRemainingColumn(compact=True),
-                TextColumn("left"),
-                console=Console(stderr=True),
-                transient=True,
-            )
-            self._shown.add_task(self._label, total=None if self._share is None else 1.0)
-            self._shown.start()

@@ -10,12 +10,13 @@ import click
 
 from unmix.cli.common import (
     consent_line,
-    console,
     existing_file,
     json_option,
     overwrite_option,
     print_json,
+    print_table,
     progress_bar,
+    say,
 )
 
 if TYPE_CHECKING:
@@ -41,13 +42,13 @@ def command(out: Path, overwrite: bool, as_json: bool) -> None:
     them. Needs nothing but this package and takes well under a minute.
     """
     began = time.perf_counter()
-    say = _silent if as_json else click.echo
-    say("1  Rendering the scene")
+    tell = _silent if as_json else say
+    tell("1  Rendering the scene")
     rendered = _render(out, overwrite)
-    say(f"   {_describe(rendered)}")
-    say("2  Separating the talkers")
+    tell(f"   {_describe(rendered)}")
+    tell("2  Separating the talkers")
     solution = _solve(rendered, out, overwrite)
-    say("3  Grading each talker against the clean speech")
+    tell("3  Grading each talker against the clean speech")
     grades = _grade(rendered, out, overwrite)
     seconds = time.perf_counter() - began
     if as_json:
@@ -108,16 +109,16 @@ def _tree(out: Path, rendered: Rendered, solution: Solution, grades: Grades, sec
 def _print(out: Path, rendered: Rendered, solution: Solution, grades: Grades, seconds: float) -> None:
     from unmix.cli.tables import before_and_after, decibels, number
 
-    console().print(before_and_after(grades, brief=True))
-    click.echo("before: the reference microphone as recorded; after: the talker's own file.")
-    click.echo("SIR: how far the other talkers lie below. SDR: the same for everything that is not the talker.")
-    click.echo("STOI: how intelligible, 0 to 1.")
-    click.echo("")
+    print_table(before_and_after(grades, brief=True))
+    say("before: the reference microphone as recorded; after: the talker's own file.")
+    say("SIR: how far the other talkers lie below. SDR: the same for everything that is not the talker.")
+    say("STOI: how intelligible, 0 to 1.")
+    say()
     click.echo(f"Listen, before:  {out / SCENE / 'mix.wav'}")
     for talker in solution.talkers:
         click.echo(f"        after:   {out / TALKERS / str(talker.file)}")
     loudest = max(solution.talkers, key=lambda t: t.peak * t.scale)
-    click.echo(consent_line(f"{loudest.name} ({number(decibels(loudest.peak * loudest.scale), 1)} dB FS peak)"))
-    click.echo(f"Done in {seconds:.0f} s with the variant `{solution.variant.name}`. The same by hand:")
+    say(consent_line(f"{loudest.name} ({number(decibels(loudest.peak * loudest.scale), 1)} dB FS peak)"))
+    say(f"Done in {seconds:.0f} s with the variant `{solution.variant.name}`. The same by hand:")
     click.echo(f"  unmix solve {rendered.scene_path} --out DIR")
     click.echo(f"  unmix grade {rendered.scene_path} --estimates DIR")

@@ -20,13 +20,17 @@ def fields_json(fields: Sequence[FieldInfo]) -> list[dict[str, Any]]:
 
 
 def fields_table(fields: Sequence[FieldInfo]) -> Table:
-    """One row per field: key, what it takes, default, meaning."""
+    """One row per field: its key, then what it means, what it takes, its default."""
     from unmix.cli.tables import plain_table
 
-    columns = [("field", "left"), ("takes", "left"), ("default", "left"), ("meaning", "left")]
-    return plain_table(columns, [[f.key, _takes(f), f.default, f.meaning] for f in fields])
+    columns = [("field", "left"), ("meaning (what it takes; default)", "left")]
+    return plain_table(columns, [[f.key, f"{f.meaning} ({_takes(f)}; {_default(f)})"] for f in fields])
 
 
 def _takes(field: FieldInfo) -> str:
     """Type, range and unit as one text: `number 0 to 10 dB`."""
     return " ".join(filter(None, (field.type.replace("'", ""), field.range, field.unit)))
+
+
+def _default(field: FieldInfo) -> str:
+    return field.default if field.default == "required" else f"default {field.default}"

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from unmix.cli.common import console, existing_file, json_option, overwrite_option, print_json, progress_bar
+from unmix.cli.common import existing_file, json_option, overwrite_option, print_json, print_table, progress_bar, say
 
 if TYPE_CHECKING:
     from unmix.metrics.grades import Grades
@@ -81,7 +81,7 @@ def command(
         return
     print_grades(grades, cross_check=cross_check)
     if out is not None:
-        click.echo(f"Written to {out}: grades.json")
+        say(f"Written to {out}: grades.json")
 
 
 def _check_usage(
@@ -106,9 +106,9 @@ def print_grades(grades: Grades, *, cross_check: bool = False) -> None:
     from unmix.cli.tables import before_and_after, undefined_lines
 
     start, stop = grades.span_s
-    click.echo(f"Against the {grades.against} references, {stop - start:.1f} s at {grades.sample_rate} Hz")
-    console().print(before_and_after(grades))
+    say(f"Against the {grades.against} references, {stop - start:.1f} s at {grades.sample_rate} Hz")
+    print_table(before_and_after(grades))
     for line in (*undefined_lines(grades), *grades.warnings):
-        click.echo(f"Note: {line}")
+        say(f"Note: {line}")
     if cross_check and grades.cross_check_db is not None:
-        click.echo(f"Largest difference to mir_eval: {grades.cross_check_db:.2e} dB")
+        say(f"Largest difference to mir_eval: {grades.cross_check_db:.2e} dB")

@@ -9,12 +9,13 @@ import click
 
 from unmix.cli.common import (
     consent_line,
-    console,
     existing_file,
     json_option,
     overwrite_option,
     print_json,
+    print_table,
     progress_bar,
+    say,
 )
 
 __all__ = ["command"]
@@ -46,8 +47,8 @@ def command(spec: Path | None, out: Path | None, explain: bool, overwrite: bool,
         print_json(tree)
         return
     _print(rendered.truth)
-    click.echo(f"Written to {out}: scene.toml, mix.wav, the references, {len(rendered.files)} files in all")
-    click.echo(consent_line())
+    say(f"Written to {out}: scene.toml, mix.wav, the references, {len(rendered.files)} files in all")
+    say(consent_line())
     click.echo(f"Next: unmix solve {rendered.scene_path} --out DIR")
 
 
@@ -58,8 +59,8 @@ def _print(truth: dict[str, Any]) -> None:
     rows = [
         [t["name"], number(t["level_db"], 1), number(t["t20_s"], 2), number(t["drr_db"], 1)] for t in truth["talkers"]
     ]
-    click.echo(f"{truth['title'] or 'scene'}: {truth['duration_s']:.1f} s at {truth['sample_rate']} Hz")
-    console().print(plain_table(columns, rows))
+    say(f"{truth['title'] or 'scene'}: {truth['duration_s']:.1f} s at {truth['sample_rate']} Hz")
+    print_table(plain_table(columns, rows))
 
 
 def _explain(as_json: bool) -> None:
@@ -71,4 +72,4 @@ def _explain(as_json: bool) -> None:
     if as_json:
         print_json({"fields": fields_json(fields)})
     else:
-        console().print(fields_table(fields))
+        print_table(fields_table(fields))

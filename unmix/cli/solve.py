@@ -9,12 +9,13 @@ import click
 
 from unmix.cli.common import (
     consent_line,
-    console,
     existing_file,
     json_option,
     overwrite_option,
     print_json,
+    print_table,
     progress_bar,
+    say,
     scene_argument,
 )
 from unmix.cli.presets import complete_variant
@@ -63,11 +64,11 @@ def print_solution(solution: Solution, out: Path) -> None:
 
     seconds = solution.samples / solution.sample_rate
     speed = seconds / max(solution.wall_time_s, 1e-9)
-    click.echo(
+    say(
         f"{len(solution.talkers)} talkers, {seconds:.1f} s at {solution.sample_rate} Hz, variant "
         f"{solution.variant.name}, in {solution.wall_time_s:.1f} s ({speed:.0f} times faster than real time)"
     )
-    console().print(solution_table(solution))
+    print_table(solution_table(solution))
     loudest = max(solution.talkers, key=lambda t: t.peak * t.scale)
-    click.echo(f"Written to {out}: the talkers' files and solution.json")
-    click.echo(consent_line(f"{loudest.name} ({number(decibels(loudest.peak * loudest.scale), 1)} dB FS peak)"))
+    say(f"Written to {out}: the talkers' files and solution.json")
+    say(consent_line(f"{loudest.name} ({number(decibels(loudest.peak * loudest.scale), 1)} dB FS peak)"))

@@ -31,8 +31,10 @@ _BRIEF = 3
 def plain_table(columns: Sequence[tuple[str, str]], rows: Sequence[Sequence[str]], *, title: str = "") -> Table:
     """A table from texts; each column is a head and how it is set: "left" or "right"."""
     table = Table(box=box.SIMPLE_HEAD, title=title or None, title_justify="left", title_style="bold", pad_edge=False)
-    for head, side in columns:
-        table.add_column(head, justify="right" if side == "right" else "left", no_wrap=side == "right")
+    for index, (head, side) in enumerate(columns):
+        # Names and numbers stay whole; what is folded is prose.
+        whole = index == 0 or side == "right"
+        table.add_column(head, justify="right" if side == "right" else "left", no_wrap=whole, overflow="fold")
     for row in rows:
         table.add_row(*row)
     return table
@@ -53,10 +55,10 @@ def solution_table(solution: Solution) -> Table:
     ]
     columns = [
         ("talker", "left"),
-        ("azimuth, deg", "right"),
-        ("elevation, deg", "right"),
-        ("distance, m", "right"),
-        ("peak, dB FS", "right"),
+        ("azimuth\ndeg", "right"),
+        ("elevation\ndeg", "right"),
+        ("distance\nm", "right"),
+        ("peak\ndB FS", "right"),
         ("file", "left"),
     ]
     return plain_table(columns, rows)
@@ -68,7 +70,8 @@ def before_and_after(grades: Grades, *, brief: bool = False) -> Table:
     brief  only the figures that a newcomer needs
     """
     figures = _FIGURES[:_BRIEF] if brief else _FIGURES
-    leakage = not brief and any(talker.leakage_db for talker in grades.talkers)
+    # Read off by projection, leakage is a hint at best in rooms: it stays in the JSON, under `leakage_by`.
+    leakage = not brief and grades.leakage_by == "filters"
     columns = [("talker", "left"), ("", "left"), *[(head, "right") for head, _, _ in figures]]
     table = plain_table([*columns, ("leakage\ndB", "right")] if leakage else columns, [])
     for talker in grades.talkers:

@@ -6,7 +6,7 @@ from typing import Any
 
 import click
 
-from unmix.cli.common import console, json_option, print_json
+from unmix.cli.common import json_option, print_json, print_table, say
 from unmix.cli.presets import complete_variant
 
 __all__ = ["command"]
@@ -38,23 +38,24 @@ def command(name: str | None, as_json: bool) -> None:
         print_json({"default": DEFAULT, "presets": presets, "fields": fields_json(fields)})
         return
     rows = [[n + (" (default)" if n == DEFAULT else ""), v.summary] for n, v in PRESETS.items()]
-    console().print(plain_table([("preset", "left"), ("what it does", "left")], rows))
-    console().print(fields_table(fields))
-    click.echo('A variant file holds what differs from a preset, e.g.  base = "model"  and  solver.prior_weight = 1e-4')
+    print_table(plain_table([("preset", "left"), ("what it does", "left")], rows))
+    print_table(fields_table(fields))
+    say('A variant file holds what differs from a preset, e.g.  base = "model"  and  solver.prior_weight = 1e-4')
 
 
 def _print_one(tree: dict[str, Any]) -> None:
-    """One variant as the file that would give it, each field beside its meaning."""
+    """Every field of one variant, with its value and its meaning."""
     from unmix.cli.tables import plain_table
     from unmix.variant import describe_fields
 
     meanings = {field.key: field for field in describe_fields()}
+    say(f"{tree['name']}: {tree['summary']}" if tree["summary"] else tree["name"])
     rows = []
     for key, value in _flat(tree):
-        field = meanings.get(key)
-        rows.append([key, _text(value), field.unit if field else "", field.meaning if field else ""])
-    columns = [("field", "left"), ("value", "left"), ("unit", "left"), ("meaning", "left")]
-    console().print(plain_table(columns, rows))
+        if key in meanings and key not in ("name", "summary", "base"):
+            rows.append([key, _text(value, meanings[key].unit), meanings[key].meaning])
+    columns = [("field", "left"), ("value", "left"), ("meaning", "left")]
+    print_table(plain_table(columns, rows))
 
 
 def _flat(tree: dict[str, Any], prefix: str = "") -> list[tuple[str, Any]]:
@@ -64,7 +65,9 @@ def _flat(tree: dict[str, Any], prefix: str = "") -> list[tuple[str, Any]]:
     return rows
 
 
-def _text(value: Any) -> str:
-    if value is None or value == "":
+def _text(value: Any, unit: str) -> str:
+    if value is None:
         return "–"
-    return f"{value:g}" if isinstance(value, float) else str(value)
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    return f"{value:g} {unit}".strip() if isinstance(value, float | int) else str(value)

@@ -86,8 +86,12 @@ def _solve(scene: Scene, variant: Variant, sink: Sink, progress: Progress | None
     room = room_stage(scene, variant, paths, spectra) if variant.room is not None else None
     health = ChannelHealth(len(scene.recording.channels))
     sink.open([t.name for t in scene.talkers], scene.sample_rate, scene.recording.samples)
-    for talkers in run(room or assembly.separator, _watched(scene, health, progress)):
+    done = 0
+    for talkers in run(room or assembly.separator, _watched(scene, health)):
         sink.write(talkers)
+        done += talkers.shape[1]
+        if progress is not None:
+            progress(done / scene.recording.samples)
     stored = sink.close()
     report = room.report() if room is not None else None
     solution = describe(scene, variant, assembly, report, stored, health.findings(), time.perf_counter() - began)
@@ -183,12 +187,8 @@ def _spectra(scene: Scene, variant: Variant) -> Spectra | None:
     return spectra if kind != "measured" or scene.noise_only_s else None
 
 
-def _watched(scene: Scene, health: ChannelHealth, progress: Progress | None) -> Iterator[Floats]:
-    """The recording's chunks, looked at on their way and reported as progress."""
-    done = 0
+def _watched(scene: Scene, health: ChannelHealth) -> Iterator[Floats]:
+    """The recording's chunks, looked at on their way."""
     for chunk in scene.recording.chunks():
         health.add(chunk)
         yield chunk
-        done += chunk.shape[1]
-        if progress is not None:
-            progress(done / scene.recording.samples)

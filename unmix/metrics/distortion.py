@@ -25,6 +25,7 @@ SI-SDR [2]_ allows one gain instead of a filter: a = <e, s> / |s|^2, SI-SDR = |a
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -105,29 +106,35 @@ class ReferenceSet:
         self._usable = [k for k in range(len(references)) if k not in self.unusable]
         self.ridged = False
         self.dependent = False
+        self._partial_factors: dict[int, Floats] = {}
         self._kept: dict[int, NDArray[np.complex128]] = {}
         self._too_short = references.shape[1] < max(1, len(self._usable)) * filter_length
         if self._usable and not self._too_short:
             self._factor()
 
     def _factor(self) -> None:
-        L, K = self.filter_length, len(self._usable)
-        # r[i, j, d] = sum_n s_i[n] s_j[n - d]
+        K = len(self._usable)
+        # r[i, j, d] = sum_n s_i[n] s_j[n - d]; the delayed copies l of s_i and l' of s_j have the product r at l' - l.
         r = self._correlate(self.references[self._usable])
         scale = r[np.arange(K), np.arange(K), 0]
         self._scale = np.sqrt(scale)
         r = r / (self._scale[:, None, None] * self._scale[None, :, None])
         self._lags = np.concatenate([r, np.zeros((K, K, 1)), r.transpose(1, 0, 2)[..., :0:-1]], axis=2)
-        G = np.empty((K * L, K * L), order="F")
-        for i in range(K):
-            for j in range(i + 1):
-                G[i * L : (i + 1) * L, j * L : (j + 1) * L] = _toeplitz(r[j, i], r[i, j])
-        own = [slice(k * L, (k + 1) * L) for k in range(K)]
-        self._own_factors = [self._cholesky(G[s, s]) for s in own]
-        self._factor_all = self._own_factors[0] if K == 1 else self._cholesky(G)
+        self._own_factors = [self._cholesky(self._gram([k])) for k in range(K)]
+        self._factor_all = self._own_factors[0] if K == 1 else self._cholesky(self._gram(range(K)))
         # Pivots are innovations: of a delayed copy given its reference's later ones, and given all references before.
         given_own = np.concatenate([np.diag(c) for c in self._own_factors])
         self.dependent = bool(np.min(np.diag(self._factor_all) / given_own) ** 2 < DEPENDENT)
+
+    def _gram(self, chosen: Sequence[int]) -> Floats:
+        """Lower triangle of the Gram matrix of the chosen usable references' delayed copies."""
+        L = self.filter_length
+        G = np.empty((len(chosen) * L, len(chosen) * L), order="F")
+        for row, i in enumerate(chosen):
+            for column, j in enumerate(chosen[: row + 1]):
+                block = np.roll(self._lags[i, j], L - 1)[: 2 * L - 1]
+                G[row * L : (row + 1) * L, column * L : (column + 1) * L] = _toeplitz(block)
+        return G
 
     def _cholesky(self, G: Floats) -> Floats:
         """Lower Cholesky factor of G, of which the lower triangle counts, ridged when singular to working precision."""
@@ -179,21 +186,38 @@ class ReferenceSet:
             return EXACT
         return None
 
-    def contributions(self, estimates: Signals) -> Floats:
-        """Energy of each filtered reference in the joint projection of each estimate: (estimates, references).
+    def explained(self, estimates: Signals) -> tuple[Floats, Floats]:
+        """What each reference explains of each estimate, by itself and beyond all others; (estimates, references) each.
 
-        |c_k s_k|^2 for P e = sum_k c_k s_k. Unlike the parts of the split the contributions are not orthogonal; they
-        are what each reference adds. NaN for references and estimates that cannot be used.
+        Energies |P_k e|^2 and |P e - Q_k e|^2, Q_k the projection on all references but s_k. NaN for references and
+        estimates that cannot be used.
         """
-        energies = np.full((len(estimates), len(self.references)), np.nan)
+        by_itself, alone = (np.full((len(estimates), len(self.references)), np.nan) for _ in range(2))
         good = [e for e, signal in enumerate(estimates) if describe_unusable(signal) is None]
         if not good or not self._usable or self._too_short:
-            return energies
-        L = self.filter_length
-        c = self._joint_filters(self._scaled_correlations(estimates[good]))
+            return by_itself, alone
+        D = self._scaled_correlations(estimates[good])
+        c = self._joint_filters(D).T.reshape(D.shape)
         for i, k in enumerate(self._usable):
-            energies[good, k] = self._quadratic(c[i * L : (i + 1) * L].T[:, None], self._lags[i : i + 1, i : i + 1])
-        return energies
+            own = scipy.linalg.cho_solve((self._own_factors[i], True), D[:, i].T, check_finite=False)
+            by_itself[good, k] = np.einsum("le,el->e", own, D[:, i])
+            others = [j for j in range(len(self._usable)) if j != i]
+            difference = c.copy()
+            if others:
+                without = D[:, others].reshape(len(D), -1).T
+                filters = scipy.linalg.cho_solve((self._factor_without(i), True), without, check_finite=False)
+                difference[:, others] -= filters.T.reshape(len(D), len(others), -1)
+            alone[good, k] = self._quadratic(difference, self._lags)
+        return by_itself, alone
+
+    def _factor_without(self, i: int) -> Floats:
+        """Factor of G without the rows and columns of usable reference i."""
+        K = len(self._usable)
+        if K == 2:
+            return self._own_factors[1 - i]
+        if i not in self._partial_factors:
+            self._partial_factors[i] = self._cholesky(self._gram([j for j in range(K) if j != i]))
+        return self._partial_factors[i]
 
     def _joint_filters(self, D: Floats) -> Floats:
         """c with G c = D, one column per estimate: (K L, estimates)."""
@@ -292,10 +316,9 @@ def _stretch(signals: Signals, start: int, stop: int) -> Floats:
     return stretch
 
 
-def _toeplitz(column: Floats, row: Floats) -> Floats:
-    """The Toeplitz matrix with this first column and row, a view."""
-    lags = np.concatenate([column[:0:-1], row])
-    return np.lib.stride_tricks.sliding_window_view(lags, row.size)[::-1]
+def _toeplitz(lags: Floats) -> Floats:
+    """The Toeplitz matrix whose element (l, l') is the correlation at lag l' - l, from -(L - 1) to L - 1; a view."""
+    return np.lib.stride_tricks.sliding_window_view(lags, (lags.size + 1) // 2)[::-1]
 
 
 def _ratio_db(numerator: Floats, denominator: Floats) -> Floats:

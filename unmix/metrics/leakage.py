@@ -5,12 +5,14 @@ them. With o_jk the output for talker k when only talker j speaks,
 
     leakage_kj = 10 log10( |o_jk|^2 / |o_kk|^2 ).
 
-Where only the images are known, the estimate e_k is projected on their delayed copies, P e_k = sum_j c_kj * x_j, and
+Where only the images are known, the estimate e_k is projected on their delayed copies: with P the projection on all
+of them, Q_j on all but talker j's, and P_k on talker k's alone,
 
-    leakage_kj = 10 log10( |c_kj * x_j|^2 / |c_kk * x_k|^2 ).
+    leakage_kj = 10 log10( |P e_k - Q_j e_k|^2 / |P_k e_k|^2 ),
 
-The second follows the first down to the ruler's end: noise in the estimate is fitted by the filters' taps as well,
-which ends it near -(SDR + 10 log10(samples / taps)).
+what only talker j can explain, in terms of what talker k does. With two talkers it is the negative SIR of BSS Eval.
+It follows the first down to the ruler's end: noise in the estimate is fitted by the filters' taps as well, which ends
+it near -(SDR + 10 log10(samples / taps)).
 """
 
 from __future__ import annotations
@@ -62,7 +64,10 @@ def projected_leakage_db(estimates: Signals, images: ReferenceSet, talkers: Sequ
     -------
     (estimates, talkers) array in dB: NaN for the estimate's own talker and where an image or the estimate is silent.
     """
-    return _relative_db(images.contributions(estimates), talkers)
+    by_itself, alone = images.explained(estimates)
+    rows = np.arange(len(alone))
+    alone[rows, talkers] = by_itself[rows, talkers]
+    return _relative_db(alone, talkers)
 
 
 def _relative_db(energy: Floats, own: Sequence[int]) -> Floats:

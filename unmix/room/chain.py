@@ -116,12 +116,14 @@ def _post(
     reference: int,
 ) -> tuple[Complexes, Complexes]:
     """The filtered talkers, and those with their early sound restored and the gain applied."""
-    y, filters = _filtered(z, y, post, reference)
     if prediction is not None and prediction.again:
+        # One pass over single frames is enough to know the talkers' power.
+        y, _ = distortionless(z, posterior_masks(y), reference, trade_off=1.0)
         z = predict(
             x, prediction, variance=power(y).mean(axis=1), iterations=prediction.again, taps=prediction.taps_again
         )
-        y, filters = _filtered(z, rows @ z, post, reference)
+        y = rows @ z
+    y, filters = _filtered(z, y, post, reference)
     noise = _NOISE_IN_GAIN * background_level(z)[:, None] * power(filters).sum(axis=2)
     early = y
     if post.restore_lags:

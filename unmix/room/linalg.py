@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import cast
 
 import numpy as np
 
 from unmix.room.stft import Complexes, Reals
 
-__all__ = ["adjoint", "lagged", "loaded", "power", "safe_solve"]
+__all__ = ["adjoint", "lagged", "loaded", "power", "safe_solve", "weighted_conjugate"]
 
 _TINY = 1e-30
 
@@ -52,6 +53,16 @@ def lagged(signals: Complexes, lags: Sequence[int]) -> Complexes:
         else:
             rows[:, :, : max(t + lag, 0)] = signals[:, :, -lag:]
     return out
+
+
+def weighted_conjugate(s: Complexes, weight: Reals) -> Complexes:
+    """conj(s) * weight for s (frequencies, channels, frames) and real weight (frequencies, 1, frames), in one pass.
+
+    Its transpose is the right factor of sum_t weight s s^H, and the product is the whole cost.
+    """
+    pairs = np.repeat(weight.astype(s.real.dtype), 2, axis=2)
+    pairs[:, :, 1::2] *= -1.0
+    return cast("Complexes", (np.ascontiguousarray(s).view(pairs.dtype) * pairs).view(s.dtype))
 
 
 def power(a: Complexes) -> Reals:

@@ -28,7 +28,7 @@ from typing import cast
 
 import numpy as np
 
-from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve
+from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve, weighted_conjugate
 from unmix.room.stft import Complexes, Reals
 from unmix.settings import PostSettings
 
@@ -70,8 +70,8 @@ def distortionless(
     filters = np.empty((f, masks.shape[1], s.shape[1]), z.dtype)
     for k in range(masks.shape[1]):
         own = masks[:, k : k + 1] * each
-        phi = loaded((s * (each - own)) @ adjoint(s), _LOADING)
-        r = (s * own) @ adjoint(z[:, reference : reference + 1])
+        phi = loaded(s @ np.swapaxes(weighted_conjugate(s, each - own), 1, 2), _LOADING)
+        r = s @ np.swapaxes(weighted_conjugate(z[:, reference : reference + 1], own), 1, 2)
         u = safe_solve(phi, r)
         at_reference = r[:, at : at + 1].real
         tiny = np.finfo(at_reference.dtype).tiny

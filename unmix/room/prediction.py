@@ -17,7 +17,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve
+from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve, weighted_conjugate
 from unmix.room.stft import Complexes, Reals
 from unmix.settings import PredictionSettings
 
@@ -53,8 +53,7 @@ def predict(
     for i in range(settings.iterations if iterations is None else iterations):
         lam = variance if i == 0 and variance is not None else power(z).mean(axis=1)
         lam = np.maximum(lam, floor * lam.max(axis=1, keepdims=True) + np.finfo(lam.dtype).tiny)
-        weighted = s * (lam.mean(axis=1, keepdims=True) / lam)[:, None]
-        sh = adjoint(weighted)
+        sh = np.swapaxes(weighted_conjugate(s, (lam.mean(axis=1, keepdims=True) / lam)[:, None]), 1, 2)
         g = safe_solve(loaded(s @ sh, _LOADING), adjoint(x @ sh))
         z = x - adjoint(g) @ s
     return z

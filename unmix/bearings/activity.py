@@ -61,7 +61,9 @@ def talker_shares(
     talkers = x_at(scan.slice_s[:1]).shape[1] if len(scan.slice_s) else 0
     share = np.zeros((len(scan.slice_s), talkers))
     outside, own = np.zeros(talkers), np.zeros(talkers)
-    if scan.peaks is not None and talkers:
+    if not talkers:
+        return Shares(scan.slice_s, share, outside)
+    if scan.peaks is not None:
         return Shares(
             scan.slice_s, peak_shares(scan.peaks.chosen(), x_at(scan.slice_s), scan.slice_s, SLICE_S), outside
         )

@@ -12,6 +12,7 @@ COMMANDS: dict[str, str] = {
     "demo": "Render, solve and grade a small scene: the whole job at a glance.",
     "solve": "Separate the talkers of a scene: one audio file each.",
     "grade": "Grade talker signals against references, before and after.",
+    "locate": "Find the talkers of a scene: where, how many, who speaks when.",
     "render": "Render a scene with known truth: mixture, references, scene file.",
     "variants": "List the presets and every field of a variant.",
     "completion": "Print the script that completes commands in a shell.",

@@ -83,7 +83,8 @@ def locate(
     talkers   how many there are; None takes the number the scene lists, and estimates it when it lists none
     method    how directions are scored: "mixture" of onset bins, the default, polished by the fit where there is no
               room; "srp", steered response power with phase transform; "snapshots", free expansion of single
-              samples; "fit", least squares of all talkers at once started from the mixture: exact without a room, wrong in one
+              samples; "fit", least squares of all talkers at once, started from the mixture: exact without a room,
+              wrong in one
     region    "sphere", or "ring" when all talkers are level with the array
     progress  called with the share done, 0 to 1
 
@@ -278,9 +279,9 @@ def _describe(t: FoundTalker, index: int, shares: Shares, space: SearchSpace, ta
     """A found talker as the user sees it."""
     distance_m = task.distance_m
     outside = float(shares.outside[index])
-    middle = bearing_estimate(t.x[len(t.x) // 2], t.covariance, outside, space)
+    middle = bearing_estimate(t.x[len(t.x) // 2], t.covariance, outside, space, task.array.channels)
     if t.moving:
-        steps = [bearing_estimate(x, t.covariance, outside, space) for x in t.x]
+        steps = [bearing_estimate(x, t.covariance, outside, space, task.array.channels) for x in t.x]
         azimuth, elevation = (np.array([getattr(s, name) for s in steps]) for name in ("azimuth", "elevation"))
         time_s = t.time_s
     else:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.linalg import convolution_matrix, lstsq
 
 from tests.conftest import speech
 from unmix.metrics.distortion import ReferenceSet
@@ -46,3 +47,24 @@ def test_projection_ends_where_the_docstring_says(rng: np.random.Generator) -> N
     leakage = projected_leakage_db(images[0] + noise, ReferenceSet(images), [0] * 8)
     end_db = -(27.0 + 10.0 * np.log10(80000 / 512))
     assert float(np.mean(leakage[:, 1])) == pytest.approx(end_db, abs=0.3)
+
+
+def test_projection_is_what_only_one_of_three_talkers_can_explain(rng: np.random.Generator) -> None:
+    """The definition written out with explicit delayed copies."""
+    taps, images = 12, rng.standard_normal((3, 900))
+    images[2] += 0.8 * images[1]
+    estimate = images[0] + 0.2 * images[1] - 0.1 * images[2] + 0.05 * rng.standard_normal(900)
+    copies = [convolution_matrix(image, taps, mode="full") for image in images]
+    e = np.concatenate([estimate, np.zeros(taps - 1)])
+
+    def project(*talkers: int) -> np.ndarray:
+        A = np.hstack([copies[j] for j in talkers])
+        return np.asarray(A @ lstsq(A, e)[0])
+
+    whole = project(0, 1, 2)
+    expected = [
+        10.0 * np.log10(np.sum((whole - project(*others)) ** 2) / np.sum(project(0) ** 2))
+        for others in ((0, 2), (0, 1))
+    ]
+    leakage = projected_leakage_db(estimate[None], ReferenceSet(images, filter_length=taps), [0])
+    np.testing.assert_allclose(leakage[0, 1:], expected, atol=1e-9)

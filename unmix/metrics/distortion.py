@@ -34,6 +34,8 @@ import scipy.fft
 import scipy.linalg
 from numpy.typing import NDArray
 
+from unmix.metrics.delayed import DelayedCopies
+
 __all__ = ["FILTER_LENGTH", "Distortion", "ReferenceSet", "describe_unusable", "si_sdr_db"]
 
 Floats = NDArray[np.float64]
@@ -49,11 +51,6 @@ DEPENDENT = 1e-4
 
 SINGULAR, RIDGE = 1e-14, 1e-13
 """Where pivots differ by more than this (a reference lacks energy in part of its band) G gets a ridge."""
-
-GROUP = 4
-"""Frames transformed at a time: few enough for the processor's cache."""
-KEEP_BYTES = 100e6
-"""Spectra of the references are kept for the next estimates up to this size, else computed anew each time."""
 
 
 def describe_unusable(signal: Signals) -> str | None:
@@ -107,7 +104,7 @@ class ReferenceSet:
         self.ridged = False
         self.dependent = False
         self._partial_factors: dict[int, Floats] = {}
-        self._kept: dict[int, NDArray[np.complex128]] = {}
+        self._copies = DelayedCopies(references, self._usable, filter_length)
         self._too_short = references.shape[1] < max(1, len(self._usable)) * filter_length
         if self._usable and not self._too_short:
             self._factor()
@@ -115,7 +112,7 @@ class ReferenceSet:
     def _factor(self) -> None:
         K = len(self._usable)
         # r[i, j, d] = sum_n s_i[n] s_j[n - d]; the delayed copies l of s_i and l' of s_j have the product r at l' - l.
-        r = self._correlate(self.references[self._usable])
+        r = self._copies.correlate(self.references[self._usable])
         scale = r[np.arange(K), np.arange(K), 0]
         self._scale = np.sqrt(scale)
         r = r / (self._scale[:, None, None] * self._scale[None, :, None])
@@ -238,7 +235,7 @@ class ReferenceSet:
             differences[own, j] -= c_j
         interference = self._quadratic(differences.reshape(K, L, K, E).transpose(3, 2, 0, 1), self._lags)
         filters = c.T.reshape(E, K, L) / self._scale[:, None]
-        return target, interference, self._residual_energy(estimates, filters)
+        return target, interference, self._copies.residual_energy(estimates, filters)
 
     def _quadratic(self, c: Floats, lags: Floats) -> Floats:
         """c' G c of filters c (..., references, L) through the transform of G's correlations `lags`: (...).
@@ -254,66 +251,7 @@ class ReferenceSet:
         return np.asarray(np.maximum(energy, 0.0))
 
     def _scaled_correlations(self, estimates: Signals) -> Floats:
-        return np.asarray(self._correlate(estimates) / self._scale[:, None])
-
-    def _correlate(self, signals: Signals) -> Floats:
-        """D[e, k, l] = sum_n signals[e, n] s_k[n - l], l = 0..L-1: (signals, usable references, L)."""
-        total = 0.0
-        for group in range(self._groups):
-            spectra = np.conj(scipy.fft.rfft(self._own_frames(signals, group), n=self._frame, axis=-1))
-            total = total + np.einsum("etf,ktf->ekf", spectra, self._spectra(group))
-        # The references' frames start L - 1 samples before the signals', so lag L - 1 comes first.
-        return np.asarray(scipy.fft.irfft(total, n=self._frame, axis=-1)[..., self.filter_length - 1 :: -1])
-
-    def _residual_energy(self, estimates: Signals, filters: Floats) -> Floats:
-        """|e - sum_k c_k * s_k|^2 per estimate; `filters` (estimates, usable references, L)."""
-        transfer = scipy.fft.rfft(filters, n=self._frame, axis=-1)
-        energy = np.zeros(len(estimates))
-        for group in range(self._groups):
-            spectra = np.einsum("ekf,ktf->etf", transfer, self._spectra(group))
-            filtered = scipy.fft.irfft(spectra, n=self._frame, axis=-1)[..., self.filter_length - 1 :]
-            rest = self._own_frames(estimates, group) - filtered
-            energy += np.einsum("etn,etn->e", rest, rest)
-        return energy
-
-    def _own_frames(self, signals: Signals, group: int) -> Floats:
-        """A group of frames of `signals` side by side: (signals, frames, hop)."""
-        size = GROUP * self._hop
-        return _stretch(signals, group * size, (group + 1) * size).reshape(len(signals), GROUP, self._hop)
-
-    def _spectra(self, group: int) -> NDArray[np.complex128]:
-        """Spectra of the usable references' frames, each from L - 1 samples before its hop: (usable, frames, bins)."""
-        if group not in self._kept:
-            start = group * GROUP * self._hop - (self.filter_length - 1)
-            stretch = _stretch(self.references, start, start + self._frame + (GROUP - 1) * self._hop)[self._usable]
-            frames = np.lib.stride_tricks.sliding_window_view(stretch, self._frame, axis=1)[:, :: self._hop]
-            spectra = scipy.fft.rfft(frames, axis=-1)
-            if self._groups * int(spectra.nbytes) > KEEP_BYTES:
-                return np.asarray(spectra)
-            self._kept[group] = spectra
-        return self._kept[group]
-
-    @property
-    def _frame(self) -> int:
-        return int(scipy.fft.next_fast_len(16 * self.filter_length, real=True))
-
-    @property
-    def _hop(self) -> int:
-        return self._frame - self.filter_length + 1
-
-    @property
-    def _groups(self) -> int:
-        """Groups of frames that cover the references and the tails of their filtered copies."""
-        return int(np.ceil((self.references.shape[1] + self.filter_length - 1) / (GROUP * self._hop)))
-
-
-def _stretch(signals: Signals, start: int, stop: int) -> Floats:
-    """`signals[:, start:stop]` with zeros outside the samples there are."""
-    stretch = np.zeros((len(signals), stop - start))
-    low, high = max(0, start), min(signals.shape[1], stop)
-    if low < high:
-        stretch[:, low - start : high - start] = signals[:, low:high]
-    return stretch
+        return np.asarray(self._copies.correlate(estimates) / self._scale[:, None])
 
 
 def _toeplitz(lags: Floats) -> Floats:

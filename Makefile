@@ -24,7 +24,7 @@ lint: $(VENV)/.installed-dev
 	$(BIN)/mypy
 
 tables: $(VENV)/.installed-dev
-	$(THREADS) $(BIN)/python -m benchmarks.tables $(ARGS)
+	$(THREADS) $(BIN)/python benchmarks/tables.py $(ARGS)
 
 clean:
 	rm -rf $(VENV) demo_out build dist *.egg-info .pytest_cache .mypy_cache .ruff_cache .hypothesis

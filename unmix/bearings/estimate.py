@@ -31,7 +31,7 @@ PULL_FEW = 0.36
 CLEAN = 0.13
 _PULL_SCATTER = 0.07
 _ROOM_ERROR = 0.06
-_HORIZON_STD = 2.0
+_HORIZON_STD = 1.5
 _DRAWS = 400
 
 
@@ -56,7 +56,7 @@ def bearing_estimate(
 ) -> BearingEstimate:
     """Bearing of a projection ``x`` (rank,) with covariance (rank, rank); ``outside`` is the mean of 1 - q.
 
-    A flat array's elevation is taken as horizontal unless it differs from that by two standard deviations of |x|.
+    A flat array's elevation is taken as horizontal unless it differs from that by `_HORIZON_STD` standard deviations of |x|.
     """
     excess = max(0.0, outside * channels / (channels - 1) - CLEAN)
     spread = covariance + (_ROOM_ERROR * excess) ** 2 * np.eye(len(x))

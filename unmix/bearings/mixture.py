@@ -116,12 +116,13 @@ def mixture_weights(density: Singles, *, rounds: int = 80) -> tuple[Floats, floa
 def clusters(weights: Floats, space: SearchSpace, *, limit: int = 8) -> list[Cluster]:
     """Clusters of grid weights, heaviest first: nearest to the heaviest point within `SAME_TALKER` joins it."""
     left = weights.copy()
-    near = np.linalg.norm(space.grid[:, None] - space.grid[None], axis=-1)
-    close = near < 0.5 * SAME_TALKER
+    near = space.apart
     found: list[Cluster] = []
     while len(found) < limit and left.max(initial=0.0) > 1e-6:
-        peak = int(np.argmax(close @ left))
-        peak = int(np.argmax(np.where(close[peak], left, -1.0)))
+        alive = np.flatnonzero(left > 1e-6)
+        close = near[np.ix_(alive, alive)] < 0.5 * SAME_TALKER
+        peak = int(np.argmax(close @ left[alive]))
+        peak = int(alive[np.argmax(np.where(close[peak], left[alive], -1.0))])
         mine = (near[peak] < SAME_TALKER) & (left > 0.0)
         x = np.asarray(left[mine] @ space.grid[mine] / left[mine].sum())
         found.append(Cluster(x, float(left[mine].sum())))

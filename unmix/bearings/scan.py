@@ -95,12 +95,18 @@ class Scanner:
         self._per_slice = (max(1, round(SECTION_BINS / per_section)), max(1, round(kept)))
         self._rng = np.random.default_rng(0)
 
-    def add(self, bins: Bins, middle_s: float) -> None:
-        """One slice."""
+    def table(self, bins: Bins, rotation: Floats | None = None) -> Singles:
+        """p(z | x) of bins at the grid's directions: (bins, points)."""
+        waves = self._waves(np.eye(3) if rotation is None else rotation)
+        return likelihoods(responses(bins, waves), self.steering.channels)
+
+    def add(self, bins: Bins, middle_s: float, table: Singles | None = None) -> None:
+        """One slice; ``table`` of its bins when it is at hand already."""
         if middle_s > self._section_end:
             self._close_section()
         rotation = np.eye(3) if self.rotations is None else self.rotations(np.array([middle_s]))[0]
-        table = likelihoods(responses(bins, self._waves(rotation)), self.steering.channels)
+        if table is None:
+            table = self.table(bins, rotation)
         self._bins += len(bins)
         self._slices.append((middle_s, float(np.mean(bins.loud)) if len(bins.loud) else 0.0))
         if self._previous is not None:
@@ -179,10 +185,12 @@ def _feed(scanner: Scanner, held: Bins, at: int, until: int) -> tuple[int, Bins]
     """Hand slices ``at`` to ``until`` on; returns the next slice and the bins left over."""
     index = np.floor(held.time_s / SLICE_S).astype(np.intp)
     frames = np.floor(held.frame_s / SLICE_S).astype(np.intp)
+    # An array at rest steers alike in all slices: one product for all is several times as fast.
+    table = scanner.table(held) if scanner.rotations is None else None
     for number in range(at, until):
         chosen, now = index == number, frames == number
         slice_ = Bins(held.z[chosen], held.frequency[chosen], held.time_s[chosen], held.frame_s[now], held.loud[now])
-        scanner.add(slice_, (number + 0.5) * SLICE_S)
+        scanner.add(slice_, (number + 0.5) * SLICE_S, None if table is None else table[chosen])
     rest, later = index >= until, frames >= until
     left = Bins(held.z[rest], held.frequency[rest], held.time_s[rest], held.frame_s[later], held.loud[later])
     return max(at, until), left

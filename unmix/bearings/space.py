@@ -14,6 +14,7 @@ the span is then that of its positions in all orientations.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Literal
 
 import numpy as np
@@ -71,6 +72,11 @@ class SearchSpace:
     grid: Floats
     directions: Floats
     spacing: float
+
+    @cached_property
+    def apart(self) -> Floats:
+        """Distances between the grid's projections: (points, points)."""
+        return np.asarray(np.linalg.norm(self.grid[:, None] - self.grid[None], axis=-1))
 
     def project(self, directions: ArrayLike) -> Floats:
         """Projections x (..., rank) of unit vectors (..., 3)."""

@@ -125,12 +125,13 @@ def test_files_that_do_not_belong_together(tmp_path: Path) -> None:
             Recording.open([tmp_path / "a.wav", tmp_path / other])
 
 
-@pytest.mark.parametrize("suffix", [".wav", ".flac", ".aiff", ".rf64"])
+@pytest.mark.parametrize("suffix", [".wav", ".flac", ".aiff", ".rf64", ".w64"])
 @pytest.mark.parametrize("kept", [0.97, 0.4])
 def test_a_file_cut_short_is_an_error(tmp_path: Path, suffix: str, kept: float) -> None:
     whole = tmp_path / f"whole{suffix}"
     kind = {".rf64": "RF64"}.get(suffix)
     soundfile.write(whole, noise(3, 5 * RATE).T, RATE, subtype="PCM_24", format=kind)
+    assert read_audio(whole)[0].shape == (3, 5 * RATE)
     cut = tmp_path / f"cut{suffix}"
     content = whole.read_bytes()
     cut.write_bytes(content[: int(kept * len(content))])

@@ -54,10 +54,12 @@ def open_audio(path: Path) -> soundfile.SoundFile:
 def missing_share(path: Path) -> float:
     """Share of the sound data that the header promises and the file lacks, 0 to 1; 0 where the header does not say.
 
-    Looks at WAV, RF64 and BW64 (EBU Tech 3306: the true length stands in `ds64`) and AIFF.
+    Looks at WAV, RF64 and BW64 (EBU Tech 3306: the true length stands in `ds64`), W64 and AIFF.
     """
     with path.open("rb") as stream:
-        promised, available = _data_length(stream, path.stat().st_size)
+        head, size = stream.read(16), path.stat().st_size
+        stream.seek(0)
+        promised, available = _data_length_w64(stream, size) if head[:4] == b"riff" else _data_length(stream, size)
     return 0.0 if promised <= available else (promised - available) / promised
 
 
@@ -77,4 +79,15 @@ def _data_length(stream: BinaryIO, file_size: int) -> tuple[int, int]:
             return (available if length in _UNKNOWN_LENGTHS else length), available
         else:
             stream.seek(length + length % 2, 1)
+    return 0, 0
+
+
+def _data_length_w64(stream: BinaryIO, file_size: int) -> tuple[int, int]:
+    """The same for W64: chunks are named by 16 bytes, their 64-bit lengths count the head of 24 and round up to 8."""
+    stream.seek(40)
+    while len(header := stream.read(24)) == 24:
+        length = int.from_bytes(header[16:], "little") - 24
+        if header[:4] == b"data":
+            return length, file_size - stream.tell()
+        stream.seek(max(length + -length % 8, 0), 1)
     return 0, 0

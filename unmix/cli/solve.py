@@ -64,9 +64,10 @@ def print_solution(solution: Solution, out: Path) -> None:
 
     seconds = solution.samples / solution.sample_rate
     speed = seconds / max(solution.wall_time_s, 1e-9)
+    times = number(speed, 0 if speed >= 10.0 else 1)
     say(
         f"{len(solution.talkers)} talkers, {seconds:.1f} s at {solution.sample_rate} Hz, variant "
-        f"{solution.variant.name}, in {solution.wall_time_s:.1f} s ({number(speed, 0 if speed >= 10.0 else 1)} times faster than real time)"
+        f"{solution.variant.name}, in {solution.wall_time_s:.1f} s ({times} times faster than real time)"
     )
     print_table(solution_table(solution))
     loudest = max(solution.talkers, key=lambda t: t.peak * t.scale)

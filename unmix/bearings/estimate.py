@@ -56,7 +56,7 @@ def bearing_estimate(
 ) -> BearingEstimate:
     """Bearing of a projection ``x`` (rank,) with covariance (rank, rank); ``outside`` is the mean of 1 - q.
 
-    A flat array's elevation is taken as horizontal unless it differs from that by `_HORIZON_STD` standard deviations of |x|.
+    A flat array's elevation is taken as horizontal unless |x| says otherwise by `_HORIZON_STD` standard deviations.
     """
     excess = max(0.0, outside * channels / (channels - 1) - CLEAN)
     spread = covariance + (_ROOM_ERROR * excess) ** 2 * np.eye(len(x))

@@ -47,8 +47,7 @@ class Transform:
     @property
     def frequencies_hz(self) -> NDArray[np.float64]:
         """Centre of each frequency bin."""
-        frequencies: NDArray[np.float64] = np.arange(self.frame // 2 + 1) * (self.sample_rate / self.frame)
-        return frequencies
+        return np.asarray(np.arange(self.frame // 2 + 1) * (self.sample_rate / self.frame), dtype=np.float64)
 
     @property
     def real(self) -> type[np.floating[Any]]:

@@ -43,7 +43,8 @@ def allowed_db(rendered: RenderedScene, scene: Scene) -> tuple[Floats, Floats]:
     """SDR and SIR that the singular values allow each talker.
 
     Noise at the output is the microphones' noise times the filters' gain; the SDR ends there. The ruler allows
-    `FILTER_LENGTH` taps of each other reference, so noise alone gives an SIR of SDR + 10 log10(samples / (taps (K - 1))).
+    `FILTER_LENGTH` taps of each other reference, so noise alone gives an SIR of
+    SDR + 10 log10(samples / (taps (K - 1))).
     """
     paths: Paths = paths_of(scene, PRESETS["model"])
     bank = assemble(PRESETS["model"], paths, scene.array, sample_rate=scene.sample_rate).bank
@@ -58,7 +59,9 @@ def leakage_db(rendered: RenderedScene, scene: Scene) -> float:
     """The worst talker's: what comes out for it when another one speaks alone, relative to its own."""
     worst = -np.inf
     outputs = [
-        solve(Scene.from_arrays(image + 1e-9, scene.array, scene.talkers, sample_rate=scene.sample_rate), "model").signals
+        solve(
+            Scene.from_arrays(image + 1e-9, scene.array, scene.talkers, sample_rate=scene.sample_rate), "model"
+        ).signals
         for image in rendered.images
     ]
     for k, wanted in enumerate(outputs):
@@ -79,8 +82,8 @@ def main() -> None:
         for name in VARIANTS:
             signals = solve(scene, name).signals
             assert signals is not None
-            rows.append([case.label, name, *_figures(signals, truth, case.sample_rate),
-                         *((sdr.min(), sir.min(), leakage_db(rendered, scene)) if name == "model" else (None,) * 3)])  # fmt: skip
+            allowed = (sdr.min(), sir.min(), leakage_db(rendered, scene)) if name == "model" else (None,) * 3
+            rows.append([case.label, name, *_figures(signals, truth, case.sample_rate), *allowed])
         knowing = {
             "knowing the truth: ratio mask": ratio_mask(rendered.mixture[rendered.array.reference_channel], truth),
             "knowing the truth: Wiener": multichannel_wiener(rendered.mixture, truth),

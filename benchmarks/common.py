@@ -147,6 +147,8 @@ def print_table(title: str, columns: Sequence[str], rows: Sequence[Sequence[obje
 def _cell(value: object) -> str:
     if value is None:
         return "-"
-    return f"{value:.2f}" if isinstance(value, float) and abs(value) < 2 else (
-        f"{value:.1f}" if isinstance(value, float) else str(value)
+    return (
+        f"{value:.2f}"
+        if isinstance(value, float) and abs(value) < 2
+        else (f"{value:.1f}" if isinstance(value, float) else str(value))
     )

@@ -1,7 +1,7 @@
 """Two marks that know the truth, to stand beside every result and be beaten.
 
-    ratio mask          sqrt(|s|^2 / (|s|^2 + |y - s|^2)) on the reference microphone, frames of 1,024 / 256
-    multichannel Wiener the time-invariant filter per frequency that comes nearest to the truth in the mean square
+ratio mask          sqrt(|s|^2 / (|s|^2 + |y - s|^2)) on the reference microphone, frames of 1,024 / 256
+multichannel Wiener the time-invariant filter per frequency that comes nearest to the truth in the mean square
 """
 
 from __future__ import annotations

@@ -63,7 +63,9 @@ def figures(signals: Floats, rendered: RenderedScene) -> np.ndarray:
     return np.array([[t.sir_db, t.stoi, t.sdr_db, t.estoi] for t in grades.talkers], dtype=float)
 
 
-def one_scene(case: Case, variants: Sequence[str], *, marks: bool = True) -> tuple[dict[str, np.ndarray], RenderedScene]:
+def one_scene(
+    case: Case, variants: Sequence[str], *, marks: bool = True
+) -> tuple[dict[str, np.ndarray], RenderedScene]:
     """Figures of every variant on one scene."""
     rendered = case.render()
     scene = case.scene(rendered)

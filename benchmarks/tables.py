@@ -1,7 +1,7 @@
 """Every quality and speed table in one run; `README.md` beside this file keeps the last one.
 
-    python benchmarks/tables.py                     # everything, about twenty minutes on two cores
-    python benchmarks/tables.py --only anechoic     # one of the names below
+python benchmarks/tables.py                     # everything, about twenty minutes on two cores
+python benchmarks/tables.py --only anechoic     # one of the names below
 """
 
 from __future__ import annotations

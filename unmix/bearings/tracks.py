@@ -47,7 +47,7 @@ class Motion:
     """
 
     speed_rms: float = 0.10
-    turning_s: float = 2.0
+    turning_s: float = 10.0
     pause_std: float = 0.12
     detection_std: float = 0.08
     detection: float = 0.9

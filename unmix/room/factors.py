@@ -11,11 +11,14 @@ from __future__ import annotations
 
 import numpy as np
 
+from unmix.room.bands import Bands
 from unmix.room.stft import Reals
 
 __all__ = ["Factors"]
 
 _FLOOR = 1e-4
+_TINY = 1e-9
+_ROUNDS = 2
 
 
 class Factors:
@@ -27,8 +30,11 @@ class Factors:
         self._gains = np.zeros((talkers, components, frames), np.float32)
         self._rng = rng
 
-    def inverse_variance(self, p: Reals) -> Reals:
-        """Update on powers (frequencies, K, frames); return 1 / lambda, each talker's powers scaled to mean one."""
+    def inverse_variance(self, p: Reals, bands: Bands) -> Reals:
+        """Update on powers (frequencies, K, frames); return 1 / lambda, each talker's powers scaled to mean one.
+
+        Bases are updated band by band; the activations take the sums over all bands.
+        """
         p = p.transpose(1, 0, 2)
         p = p / (p.mean(axis=2, keepdims=True) + np.finfo(p.dtype).tiny)
         p = np.maximum(p, _FLOOR)
@@ -36,12 +42,29 @@ class Factors:
             # The frame model is the start: every component follows the mean over frequency, with some spread.
             spread = self._rng.uniform(0.7, 1.3, self._gains.shape).astype(np.float32)
             self._gains = p.mean(axis=1)[:, None] * spread / self._gains.shape[1]
-        for _ in range(2):
-            lam = self._bases @ self._gains
+
+        def update(b: slice) -> tuple[Reals, Reals]:
+            inverse, weighted = self._ratios(p[:, b], b)
             back = np.swapaxes(self._gains, 1, 2)
-            self._bases = self._bases * np.sqrt(((p / np.square(lam)) @ back) / ((1.0 / lam) @ back + 1e-12)) + 1e-9
-            lam = self._bases @ self._gains
-            back = np.swapaxes(self._bases, 1, 2)
-            self._gains = self._gains * np.sqrt((back @ (p / np.square(lam))) / (back @ (1.0 / lam) + 1e-12)) + 1e-9
-        lam = np.maximum(self._bases @ self._gains, _FLOOR)
-        return np.ascontiguousarray((1.0 / lam).transpose(1, 0, 2))
+            self._bases[:, b] *= np.sqrt((weighted @ back) / (inverse @ back + _TINY))
+            self._bases[:, b] += _TINY
+            inverse, weighted = self._ratios(p[:, b], b)
+            across = np.swapaxes(self._bases[:, b], 1, 2)
+            return across @ weighted, across @ inverse
+
+        for _ in range(_ROUNDS):
+            sums = bands.each(update)
+            above, below = sum(s[0] for s in sums), sum(s[1] for s in sums)
+            self._gains = self._gains * np.sqrt(above / (below + _TINY)) + _TINY
+        out = np.empty((p.shape[1], p.shape[0], p.shape[2]), p.dtype)
+
+        def invert(b: slice) -> None:
+            out[b] = (1.0 / np.maximum(self._bases[:, b] @ self._gains, _FLOOR)).transpose(1, 0, 2)
+
+        bands.each(invert)
+        return out
+
+    def _ratios(self, p: Reals, b: slice) -> tuple[Reals, Reals]:
+        """1 / lambda and p / lambda^2 of one band."""
+        inverse = 1.0 / (self._bases[:, b] @ self._gains)
+        return inverse, p * np.square(inverse)

@@ -102,7 +102,7 @@ def refine(
         p = np.concatenate(bands.each(lambda b: power(w[b] @ z[b])))
         cost.append(_cost(p, w, covariance))
         if factors is not None:
-            weight = factors.inverse_variance(p)
+            weight = factors.inverse_variance(p, bands)
         else:
             r = p.mean(axis=0)
             r = np.maximum(r, _FLOOR * r.mean(axis=1, keepdims=True) + np.finfo(r.dtype).tiny)

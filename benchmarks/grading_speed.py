@@ -5,8 +5,8 @@
 Two cases: two talkers over 10 s, and 20 variants of a scene with three talkers over 10 s, all at 16 kHz, real speech
 (`tests/data/speech`), noise from seed 11. Times of the first case are the smallest of so many runs of each program in
 turn; the references' part (Gram matrix, factors, spectra) is built anew in every run. The largest difference of any
-SDR, SIR or SAR is printed beside the times. mir_eval tries every assignment by default, as here every pair is graded; its time
-for the pairs that belong together is given too.
+SDR, SIR or SAR is printed beside the times. mir_eval tries every assignment by default, as here every pair is graded;
+its time for the pairs that belong together is given too.
 """
 
 from __future__ import annotations

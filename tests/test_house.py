@@ -22,7 +22,22 @@ ROOT = Path(__file__).parents[1]
 PACKAGE = ROOT / "unmix"
 
 # From the top down; a module may import from its own layer and from those below it.
-LAYERS = ("cli", "report", "batch", "jobs", "render", "room", "bearings", "solvers", "model", "metrics")
+LAYERS = (
+    "cli",
+    "report",
+    "batch",
+    "export",
+    "live",
+    "jobs",
+    "render",
+    "room",
+    "calibration",
+    "limits",
+    "bearings",
+    "solvers",
+    "model",
+    "metrics",
+)
 GROUND = len(LAYERS)
 
 

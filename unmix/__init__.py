@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from unmix.jobs.render import render as render_to_folder
     from unmix.jobs.solution import Solution
     from unmix.jobs.solve import solve, solve_to_folder
+    from unmix.live.separator import LiveSeparator
     from unmix.metrics.grades import Grades
     from unmix.render.compose import RenderedScene, render_scene
     from unmix.render.spec import RenderSpec
@@ -38,6 +39,7 @@ __all__ = [
     "FileError",
     "Grades",
     "InputError",
+    "LiveSeparator",
     "Located",
     "MissingExtraError",
     "Orientation",
@@ -70,6 +72,7 @@ __all__ = [
 _LAZY = {
     "Array": "unmix.array",
     "Grades": "unmix.metrics.grades",
+    "LiveSeparator": "unmix.live.separator",
     "Located": "unmix.jobs.located",
     "Orientation": "unmix.track",
     "Recording": "unmix.audio",

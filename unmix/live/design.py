@@ -1,0 +1,118 @@
+"""From array, talkers and variant to what can run live; and which variants cannot, with the reason."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from unmix.array import Array
+from unmix.audio import Recording
+from unmix.errors import InputError, UnsolvableError
+from unmix.model.delays import Paths, paths_from_bearings
+from unmix.model.noise import Spectra
+from unmix.scene import Scene, Talker
+from unmix.solvers.assemble import assemble
+from unmix.solvers.stationary import FilterBank
+from unmix.variant import Variant
+
+__all__ = ["Designer", "check_runs_live", "noise_spectra"]
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Designer:
+    """Makes filters for talkers; array, variant and rate stay the same.
+
+    spectra  covariance of talker-free stretches, for noise `measured`
+    """
+
+    array: Array
+    variant: Variant
+    sample_rate: int
+    temperature_c: float = 20.0
+    spectra: Spectra | None = None
+
+    def __call__(self, talkers: Sequence[Talker]) -> FilterBank:
+        """The variant's filters. Raises InputError without bearings, UnsolvableError where there is no answer."""
+        assembly = assemble(
+            self.variant,
+            self.paths(talkers),
+            self.array,
+            sample_rate=self.sample_rate,
+            temperature_c=self.temperature_c,
+            spectra=self.spectra,
+        )
+        if assembly.bank is None:
+            raise UnsolvableError(f"variant {self.variant.name!r} is no filter bank; {_USE}")
+        return assembly.bank
+
+    def paths(self, talkers: Sequence[Talker]) -> Paths:
+        """Delays and gains of talkers at rest."""
+        if not talkers:
+            raise InputError("no talkers: give the bearing of each")
+        for talker in talkers:
+            if talker.azimuth is None:
+                raise InputError(f"talker {talker.name!r} has no bearing; give one, or locate the talkers first")
+        plane = self.variant.model.wave == "plane"
+        return paths_from_bearings(
+            self.array,
+            [t.azimuth or 0.0 for t in talkers],
+            [t.elevation for t in talkers],
+            [np.nan if plane or t.distance_m is None else t.distance_m for t in talkers],
+            temperature_c=self.temperature_c,
+        )
+
+
+_USE = "use a variant that is filters alone, such as model or linear-constraint"
+
+
+def check_runs_live(variant: Variant, *, spectra: Spectra | None) -> None:
+    """Raise UnsolvableError, with the reason and the remedy, for a variant that cannot run chunk by chunk."""
+    name = variant.name or "this variant"
+    if variant.room is not None:
+        raise UnsolvableError(
+            f"variant {name!r} cannot run chunk by chunk: its room stage refines each segment of "
+            f"{variant.room.segments.length_s:g} s from all of it, so that a sample would wait that long; {_USE}"
+        )
+    if variant.separator != "model":
+        return
+    solver = variant.solver
+    if solver.constraint == "free":
+        raise UnsolvableError(
+            f'variant {name!r} cannot run chunk by chunk: constraint "free" takes each snapshot alone and separates '
+            f"nobody; {_USE}"
+        )
+    if solver.method != "stationary":
+        raise UnsolvableError(
+            f"variant {name!r} cannot run chunk by chunk: method {solver.method!r} solves whole blocks and some of "
+            'the future with them; set method = "stationary", the same solution as filters'
+        )
+    if solver.noise in ("observed", "fitted"):
+        raise UnsolvableError(
+            f"variant {name!r} cannot run chunk by chunk: noise {solver.noise!r} is computed from the whole recording "
+            "before the first sample leaves; use white, diffuse, or measured with a stretch without talkers"
+        )
+    if solver.noise == "measured" and spectra is None:
+        raise UnsolvableError(
+            f'variant {name!r} needs a stretch without talkers for noise "measured"; pass it as `noise`, or give '
+            "`noise_only_s` in the scene"
+        )
+
+
+def noise_spectra(scene: Scene) -> Spectra | None:
+    """Covariance of a scene's talker-free stretches, as the file job takes it; None where the scene names none."""
+    if not scene.noise_only_s:
+        return None
+    recording = scene.recording
+    stretches = []
+    for start_s, stop_s in scene.noise_only_s:
+        start, stop = round(start_s * scene.sample_rate), min(round(stop_s * scene.sample_rate), recording.samples)
+        if isinstance(recording, Recording):
+            stretches.append(replace(recording, start=recording.start + start, stop=recording.start + stop).read())
+        else:
+            stretches.append(recording.signals[:, start:stop])
+    return Spectra.of(stretches, scene.array.channels)

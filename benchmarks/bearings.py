@@ -127,7 +127,7 @@ def bound(trials: int) -> None:
     """The fit of all talkers at once against the bound, exact delays, no room."""
     table = []
     for azimuths in ((20.0,), (20.0, 75.0)):
-        for snr_db in (20.0, 30.0, 40.0, 50.0, 60.0):
+        for snr_db in (20.0, 30.0, 40.0, 50.0, 60.0, 70.0, 80.0):
             ratio, stated, deviation = bound_trials(np.radians(azimuths), snr_db, trials)
             table.append(
                 [len(azimuths), int(snr_db), f"{deviation:.4f}", float(ratio.min()), float(ratio.max()),

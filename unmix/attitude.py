@@ -32,6 +32,8 @@ Floats = NDArray[np.float64]
 GAIN = 0.05
 REST_RAD_S = 0.06
 _REST_S = 0.5
+_MARGIN_S = 0.2
+_STRAY = 3.0
 _GRAVITY = (8.5, 11.2)
 
 
@@ -93,15 +95,20 @@ def integrate_attitude(time_s: Floats, turning_rad_s: Floats, acceleration_m_s2:
 
 
 def _bias(time_s: Floats, omega: Floats, acceleration: Floats) -> tuple[Floats, Floats | None, NDArray[np.bool_]]:
-    """Mean rate at rest, its standard deviation between stretches of rest (None without rest), and where rest is."""
+    """Mean rate at rest, its standard deviation between stretches of rest (None without rest), and where rest is.
+
+    A motion that begins slowly looks like rest: the ends of each rest are left out, and so are stretches further from
+    the median than `_STRAY` times the usual distance.
+    """
     calm = (np.linalg.norm(omega, axis=1) < REST_RAD_S) & (
         np.abs(np.linalg.norm(acceleration, axis=1) - 9.81) < 0.05 * 9.81
     )
     edges = np.flatnonzero(np.diff(np.r_[0, calm.astype(int), 0]))
     means, lengths = [], []
     rest = np.zeros(len(calm), dtype=bool)
-    for first, stop in zip(edges[::2], edges[1::2], strict=True):
-        length = float(time_s[stop - 1] - time_s[first])
+    for begin, end in zip(edges[::2], edges[1::2], strict=True):
+        first, stop = _inside(time_s, int(begin), int(end))
+        length = float(time_s[stop - 1] - time_s[first]) if stop > first else 0.0
         if length >= _REST_S:
             rest[first:stop] = True
             for part in np.array_split(np.arange(first, stop), max(1, round(length / _REST_S))):
@@ -110,10 +117,20 @@ def _bias(time_s: Floats, omega: Floats, acceleration: Floats) -> tuple[Floats, 
     if not means:
         return np.zeros(3), None, rest
     table, weight = np.array(means), np.array(lengths, dtype=np.float64)
+    far = np.linalg.norm(table - np.median(table, axis=0), axis=1)
+    kept = far <= _STRAY * np.median(far) + 1e-9
+    table, weight = table[kept], weight[kept]
     bias = weight @ table / weight.sum()
     if len(table) < 2:
         return bias, np.full(3, REST_RAD_S / 10.0), rest
     return bias, table.std(axis=0, ddof=1) / np.sqrt(len(table)), rest
+
+
+def _inside(time_s: Floats, begin: int, end: int) -> tuple[int, int]:
+    """A calm stretch without its ends, but for those of the recording."""
+    first = begin if begin == 0 else int(np.searchsorted(time_s, time_s[begin] + _MARGIN_S))
+    stop = end if end == len(time_s) else int(np.searchsorted(time_s, time_s[end - 1] - _MARGIN_S))
+    return first, stop
 
 
 def _upright(acceleration: Floats) -> Floats:

@@ -33,7 +33,7 @@ from unmix.jobs.naming import name_talkers
 from unmix.scene import Scene, Talker
 from unmix.track import Orientation, Track
 
-__all__ = ["METHODS", "Method", "locate", "locate_array"]
+__all__ = ["METHODS", "Method", "clock_offset", "locate", "locate_array", "locate_quietly"]
 
 Floats = NDArray[np.float64]
 Chunks = Callable[[], Iterable[Floats]]
@@ -91,26 +91,58 @@ def locate(
     Memory does not grow with the recording's samples. Raises InputError, UnsolvableError or FileError with one line
     that says what to do.
     """
+    return _warned(locate_quietly(scene, talkers=talkers, method=method, region=region, progress=progress))
+
+
+def locate_quietly(
+    scene: Scene,
+    *,
+    talkers: int | None = None,
+    method: Method = "mixture",
+    region: Region = "sphere",
+    progress: Progress | None = None,
+) -> Located:
+    """As `locate`, for jobs that pass its warnings on in a result of their own: they stand in the result only."""
+    task = _task_of(scene, method=method, region=region, progress=progress)
+    asked = talkers if talkers is not None else (len(scene.talkers) or None)
+    return replace(_locate(replace(task, asked=asked)), scene=scene)
+
+
+def clock_offset(scene: Scene) -> tuple[float, tuple[str, ...]]:
+    """Seconds to add to recording time to get the orientation's, estimated if the scene asks, and what to know of it.
+
+    Raises InputError or FileError as `locate` does.
+    """
+    offset_s, notes = _orient(_task_of(scene))
+    return offset_s, tuple(notes)
+
+
+def _task_of(
+    scene: Scene, *, method: Method = "mixture", region: Region = "sphere", progress: Progress | None = None
+) -> _Task:
     distances = {t.distance_m for t in scene.talkers}
-    located = _locate(
-        _Task(
-            chunks=scene.recording.chunks,
-            duration_s=scene.recording.duration_s,
-            array=scene.array,
-            sample_rate=scene.sample_rate,
-            where=scene.title,
-            asked=talkers if talkers is not None else (len(scene.talkers) or None),
-            method=method,
-            region=region,
-            orientation=scene.orientation,
-            clock_offset_s=scene.clock_offset_s,
-            temperature_c=scene.temperature_c,
-            distance_m=distances.pop() if len(distances) == 1 else None,
-            known=scene.talkers,
-            progress=progress,
-        )
+    return _Task(
+        chunks=scene.recording.chunks,
+        duration_s=scene.recording.duration_s,
+        array=scene.array,
+        sample_rate=scene.sample_rate,
+        where=scene.title,
+        asked=None,
+        method=method,
+        region=region,
+        orientation=scene.orientation,
+        clock_offset_s=scene.clock_offset_s,
+        temperature_c=scene.temperature_c,
+        distance_m=distances.pop() if len(distances) == 1 else None,
+        known=scene.talkers,
+        progress=progress,
     )
-    return replace(located, scene=scene)
+
+
+def _warned(located: Located) -> Located:
+    for line in located.warnings:
+        warning_system.warn(line, UnmixWarning, stacklevel=3)
+    return located
 
 
 def locate_array(
@@ -136,23 +168,22 @@ def locate_array(
         channel, sample = np.argwhere(~np.isfinite(recording))[0]
         raise InputError(f"recording: channel {channel}, sample {sample} is NaN or infinite; repair or cut it out")
     size = round(_CHUNK_S * sample_rate)
-    return _locate(
-        _Task(
-            chunks=lambda: (recording[:, at : at + size] for at in range(0, recording.shape[1], size)),
-            duration_s=recording.shape[1] / sample_rate,
-            array=array,
-            sample_rate=sample_rate,
-            where="recording",
-            asked=talkers,
-            method=method,
-            region=region,
-            orientation=orientation,
-            clock_offset_s=clock_offset_s,
-            temperature_c=temperature_c,
-            distance_m=distance_m,
-            progress=progress,
-        )
+    task = _Task(
+        chunks=lambda: (recording[:, at : at + size] for at in range(0, recording.shape[1], size)),
+        duration_s=recording.shape[1] / sample_rate,
+        array=array,
+        sample_rate=sample_rate,
+        where="recording",
+        asked=talkers,
+        method=method,
+        region=region,
+        orientation=orientation,
+        clock_offset_s=clock_offset_s,
+        temperature_c=temperature_c,
+        distance_m=distance_m,
+        progress=progress,
     )
+    return _warned(_locate(task))
 
 
 def _locate(task: _Task) -> Located:
@@ -165,8 +196,6 @@ def _locate(task: _Task) -> Located:
     talkers = [_describe(t, k, shares, space, task) for k, t in enumerate(found)]
     named, naming_notes = name_talkers(talkers, task.known, task.duration_s)
     lines = (*notes, *_warnings(seen, space, named, count, task.asked), *naming_notes)
-    for line in lines:
-        warning_system.warn(line, UnmixWarning, stacklevel=3)
     return Located(
         talkers=tuple(named),
         count=count,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import html
 import os
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -116,14 +117,13 @@ class Located:
         }
 
     def scene_with_bearings(self) -> Scene:
-        """The scene with the bearings found; talkers on the move carry their track.
+        """The scene with the bearings found; talkers on the move carry their track, those not found are as they were.
 
         Its `content` can be written as a scene file beside the original one; `save` also writes elsewhere, with tracks.
         """
         if self.scene is None:
             raise InputError("these talkers were not located from a scene; there is none to fill in")
-        known = {t.name: t for t in self.scene.talkers}
-        talkers = tuple(_filled(known.get(t.name), t) for t in self.talkers)
+        talkers = tuple(_in_order(self.scene.talkers, {t.name: t for t in self.talkers}))
         content = None if self.scene.content is None else self._content(self.scene.content, {})
         offset = self.clock_offset_s if self.clock_offset_s is not None else self.scene.clock_offset_s
         return replace(self.scene, talkers=talkers, content=content, clock_offset_s=offset)
@@ -150,8 +150,12 @@ class Located:
         return [path, *files]
 
     def _content(self, content: SceneFile, tracks: dict[str, str]) -> SceneFile:
-        known = {(t.name or f"talker-{i + 1}"): t for i, t in enumerate(content.talker)}
-        tables = [_filled_table(known.get(t.name), t, tracks.get(t.name)) for t in self.talkers]
+        found = {t.name: t for t in self.talkers}
+        named = {(t.name or f"talker-{i + 1}"): t for i, t in enumerate(content.talker)}
+        tables = [
+            t if name not in found else _filled_table(t, found[name], tracks.get(name)) for name, t in named.items()
+        ]
+        tables += [_filled_table(None, t, tracks.get(t.name)) for t in self.talkers if t.name not in named]
         orientation = content.orientation
         if orientation is not None and self.clock_offset_s is not None:
             orientation = msgspec.structs.replace(orientation, clock_offset_s=round(self.clock_offset_s, 4))
@@ -199,8 +203,17 @@ def _deg(angle: float) -> float:
     return round(float(np.degrees(angle)), 3)
 
 
-def _filled(known: Talker | None, found: LocatedTalker) -> Talker:
-    base = known or Talker(name=found.name)
+def _in_order(known: Sequence[Talker], found: dict[str, LocatedTalker]) -> Iterator[Talker]:
+    """The scene's talkers, then those it did not list."""
+    names = {t.name for t in known}
+    for talker in known:
+        yield talker if talker.name not in found else _filled(talker, found[talker.name])
+    for name, talker_found in found.items():
+        if name not in names:
+            yield _filled(Talker(name=name), talker_found)
+
+
+def _filled(base: Talker, found: LocatedTalker) -> Talker:
     if base.located:
         return base
     if found.moving:

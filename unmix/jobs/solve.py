@@ -10,6 +10,7 @@ from __future__ import annotations
 import time
 import warnings
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -72,7 +73,7 @@ def solve_to_folder(
 def _solve(scene: Scene, variant: Variant, sink: Sink, progress: Progress | None) -> Solution:
     began = time.perf_counter()
     _check_length(scene)
-    scene = _located(scene)
+    scene, found = _located(scene)
     paths = paths_of(scene, variant)
     spectra = _spectra(scene, variant)
     assembly = assemble(
@@ -94,7 +95,8 @@ def _solve(scene: Scene, variant: Variant, sink: Sink, progress: Progress | None
             progress(done / scene.recording.samples)
     stored = sink.close()
     report = room.report() if room is not None else None
-    solution = describe(scene, variant, assembly, report, stored, health.findings(), time.perf_counter() - began)
+    findings = [*found, *health.findings()]
+    solution = describe(scene, variant, assembly, report, stored, findings, time.perf_counter() - began)
     for line in solution.warnings:
         warnings.warn(line, UnmixWarning, stacklevel=3)
     return solution
@@ -108,13 +110,30 @@ def _check_length(scene: Scene) -> None:
         )
 
 
-def _located(scene: Scene) -> Scene:
-    """The scene with a bearing for every talker; located from the recording where the scene does not say."""
-    if scene.talkers and all(t.located for t in scene.talkers):
-        return scene
-    from unmix.jobs.locate import locate
+def _located(scene: Scene) -> tuple[Scene, tuple[str, ...]]:
+    """The scene with a bearing for every talker and the orientation on its clock, and what is to be known of both.
 
-    return locate(scene).scene_with_bearings()
+    Located from the recording where the scene does not say. A talker who cannot be found is left out, by name.
+    """
+    if scene.talkers and all(t.located for t in scene.talkers):
+        return _on_one_clock(scene)
+    from unmix.jobs.locate import locate_quietly
+
+    located = locate_quietly(scene)
+    filled = located.scene_with_bearings()
+    placed = tuple(t for t in filled.talkers if t.located)
+    if not placed:
+        raise InputError(f"{scene.title}: no talker was found in the recording; check it, or give `azimuth_deg`")
+    return replace(filled, talkers=placed), located.warnings
+
+
+def _on_one_clock(scene: Scene) -> tuple[Scene, tuple[str, ...]]:
+    if scene.orientation is None:
+        return scene, ()
+    from unmix.jobs.locate import clock_offset
+
+    offset_s, notes = clock_offset(scene)
+    return replace(scene, clock_offset_s=offset_s), notes
 
 
 def paths_of(scene: Scene, variant: Variant) -> Paths:

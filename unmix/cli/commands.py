@@ -13,6 +13,7 @@ COMMANDS: dict[str, str] = {
     "solve": "Separate the talkers of a scene: one audio file each.",
     "grade": "Grade talker signals against references, before and after.",
     "locate": "Find the talkers of a scene: where, how many, who speaks when.",
+    "limits": "What an array can achieve at best, before anything is built.",
     "render": "Render a scene with known truth: mixture, references, scene file.",
     "variants": "List the presets and every field of a variant.",
     "completion": "Print the script that completes commands in a shell.",

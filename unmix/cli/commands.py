@@ -15,6 +15,8 @@ COMMANDS: dict[str, str] = {
     "locate": "Find the talkers of a scene: where, how many, who speaks when.",
     "limits": "What an array can achieve at best, before anything is built.",
     "render": "Render a scene with known truth: mixture, references, scene file.",
+    "live": "Separate talkers while they speak, from a pipe into a pipe.",
+    "batch": "Run scenes x variants, grade them, and rank the variants.",
     "variants": "List the presets and every field of a variant.",
     "completion": "Print the script that completes commands in a shell.",
 }

@@ -50,14 +50,15 @@ class Bar:
         self._timer.daemon = True
         self._timer.start()
 
-    def report(self, share: float) -> None:
-        """Take the share done, 0 to 1."""
+    def report(self, share: float, label: str | None = None) -> None:
+        """Take the share done, 0 to 1, and what to write before the bar from now on."""
         self._share = share
+        self._label = self._label if label is None else label
         elapsed = time.monotonic() - self._began
         if self._shown is None and elapsed > 0.25 * PATIENCE_S and elapsed > PATIENCE_S * share:
             self._show()
         if self._shown is not None:
-            self._shown.update(self._shown.task_ids[0], completed=share, total=1.0)
+            self._shown.update(self._shown.task_ids[0], completed=share, total=1.0, description=self._label)
 
     def stop(self) -> None:
         """Take the bar away."""

@@ -17,6 +17,7 @@ COMMANDS: dict[str, str] = {
     "render": "Render a scene with known truth: mixture, references, scene file.",
     "live": "Separate talkers while they speak, from a pipe into a pipe.",
     "batch": "Run scenes x variants, grade them, and rank the variants.",
+    "report": "Turn the folder of a job into one HTML file to look at and listen to.",
     "variants": "List the presets and every field of a variant.",
     "completion": "Print the script that completes commands in a shell.",
 }

@@ -85,13 +85,15 @@ def consent_line(loudest: str | None = None) -> str:
 
 
 @contextlib.contextmanager
-def progress_bar(label: str) -> Iterator[Callable[[float], None]]:
+def progress_bar(label: str) -> Iterator[Callable[..., None]]:
     """A function that takes the share done, 0 to 1, and shows it with the time left on standard error.
+
+    It takes another label, too, as a second argument.
 
     Nothing is shown when standard error is no terminal, nor for anything that takes under two seconds.
     """
     if not sys.stderr.isatty():
-        yield lambda share: None
+        yield lambda share, label=None: None
         return
     from unmix.cli.bar import Bar
 

@@ -100,7 +100,7 @@ def number(value: float | None, digits: int, *, signed: bool = False) -> str:
     """A figure as text; a dash when there is none."""
     if value is None or not math.isfinite(value):
         return UNDEFINED
-    return f"{value:{'+' if signed else ''}.{digits}f}"
+    return f"{round(value, digits) + 0.0:{'+' if signed else ''}.{digits}f}"  # no "-0.0"
 
 
 def decibels(magnitude: float) -> float | None:

@@ -152,6 +152,16 @@ class Grader:
             warnings=(*self.notes, *notes, *self._warnings(time, offsets, matched, aligned, why_not)),
         )
 
+    def aligned(self, estimates: Signals, matched: Matched) -> tuple[Floats, Floats, Floats | None]:
+        """What is graded, for figures of one's own: references, estimates, and the unprocessed microphone.
+
+        Moved to one time and cut as `grade` does it: (references, n), (estimates, n) and (n,), which is None when the
+        recording was not given. `matched` says which estimate is each reference's.
+        """
+        time, moved = self._clock.align(estimates, self._clock.offsets(estimates, matched), matched)
+        before = None if self.unprocessed is None else np.asarray(self.unprocessed[time.start : time.stop], float)
+        return self._bench(time).references, moved, before
+
     def _bench(self, time: Span) -> Bench:
         if time not in self._benches:
             length = time.stop - time.start

@@ -1,0 +1,1 @@
+"""Batches: many scenes, many variants, run and graded; killed and resumed, here or on a cluster."""

@@ -23,6 +23,7 @@ __all__ = [
     "convert_tree",
     "decode_toml",
     "folder_aside",
+    "path_from",
     "read_toml",
     "refuse_to_replace",
     "safe_names",
@@ -78,6 +79,16 @@ def safe_names(names: Iterable[str]) -> list[str]:
             candidate, count = f"{stem}-{count}", count + 1
         chosen.append(candidate)
     return chosen
+
+
+def path_from(folder: Path, path: Path | None) -> str | None:
+    """`path` as it is seen from `folder`, for files that name each other; absolute where there is no way from there."""
+    if path is None:
+        return None
+    try:
+        return Path(os.path.relpath(path.resolve(), folder.resolve())).as_posix()
+    except ValueError:  # another drive
+        return str(path.resolve())
 
 
 def refuse_to_replace(path: Path, *, overwrite: bool) -> None:

@@ -22,7 +22,7 @@ def files(folder: Path) -> list[str]:
 def test_one_file_per_talker_and_who_is_who(run: Run, scene: Path, tmp_path: Path) -> None:
     ran = run("solve", scene, "--out", tmp_path / "out", "--variant", "model")
     assert ran.status == 0
-    assert files(tmp_path / "out") == ["Chief-Pilot.wav", "mate.wav", "solution.json"]
+    assert files(tmp_path / "out") == ["Chief-Pilot.wav", "mate.wav", "report.html", "solution.json"]
     for name in ("mate", "Chief-Pilot"):
         read, rate = read_audio(tmp_path / "out" / f"{name}.wav")
         assert (read.shape, rate) == ((1, round(SECONDS * RATE)), RATE)

@@ -8,9 +8,12 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from unmix.cli.common import existing_file, json_option, overwrite_option, print_json, print_table, progress_bar, say
+from unmix.cli.reporting import REPORT, no_report_option, refuse_report, write_report
 
 if TYPE_CHECKING:
     from unmix.metrics.grades import Grades
+    from unmix.report.material import SceneMaterial
+    from unmix.scene import Scene
 
 __all__ = ["command", "print_grades"]
 
@@ -34,7 +37,8 @@ __all__ = ["command", "print_grades"]
 )
 @click.option("--filter-length", type=int, default=512, show_default=True, help="Taps of BSS Eval's allowed filter.")
 @click.option("--cross-check", is_flag=True, help="Recompute with mir_eval and print the largest difference.")
-@click.option("--out", type=existing_file, metavar="DIR", help="Folder for grades.json.")
+@click.option("--out", type=existing_file, metavar="DIR", help="Folder for grades.json and the report.")
+@no_report_option
 @overwrite_option
 @json_option
 def command(
@@ -49,16 +53,19 @@ def command(
     filter_length: int,
     cross_check: bool,
     out: Path | None,
+    no_report: bool,
     overwrite: bool,
     as_json: bool,
 ) -> None:
     """Grade talker signals against references, before and after.
 
     Either a SCENE with references and --estimates DIR, or files: --reference and --estimate once per talker, and
-    --unprocessed for the recording.
+    --unprocessed for the recording. A report that `solve` left in the --out folder is renewed with the figures.
     """
     _check_usage(scene, estimates, references, given)
-    from unmix.jobs.grade import grade_files, grade_scene
+    from unmix.files import refuse_to_replace
+    from unmix.jobs.grade import grade_files, grade_scene, grades_tree
+    from unmix.scene import Scene
 
     options: dict[str, Any] = {
         "match": match,
@@ -67,21 +74,60 @@ def command(
         "out_dir": out,
         "overwrite": overwrite,
     }
+    if out is not None and not no_report:
+        refuse_to_replace(out / "grades.json", overwrite=overwrite)
+        refuse_report(out, overwrite=overwrite, renew=True)
+    loaded = None if scene is None else Scene.load(scene)
     with progress_bar("grading"):
-        if scene is not None and estimates is not None:
-            from unmix.scene import Scene
-
-            grades = grade_scene(Scene.load(scene), estimates, against=against, **options)
+        if loaded is not None and estimates is not None:
+            grades = grade_scene(loaded, estimates, against=against, **options)
         else:
             grades = grade_files(
                 given, references, unprocessed=unprocessed, unprocessed_channel=unprocessed_channel, **options
             )
+    reported = None
+    if out is not None and not no_report:
+
+        def material() -> SceneMaterial:
+            if loaded is not None and estimates is not None:
+                return _graded_scene(loaded, estimates, grades)
+            return _graded_files(grades, given, references, unprocessed, unprocessed_channel)
+
+        reported = write_report(material, out, overwrite=True)
     if as_json:
-        print_json(grades.to_dict())
+        source = None if loaded is None else loaded.path
+        print_json(grades_tree(grades, out, scene=source, estimates=estimates))
         return
     print_grades(grades, cross_check=cross_check)
     if out is not None:
-        say(f"Written to {out}: grades.json")
+        say(f"Written to {out}: grades.json{f' and {REPORT}' if reported else ''}")
+
+
+def _graded_scene(scene: Scene, estimates: Path, grades: Grades) -> SceneMaterial:
+    """What the report on a graded scene is made of."""
+    from unmix.report.material import material_of_scene, read_solution
+
+    solution = read_solution(estimates / "solution.json")
+    return material_of_scene(scene, estimates, solution=solution, grades=grades)
+
+
+def _graded_files(
+    grades: Grades, given: tuple[Path, ...], references: tuple[Path, ...], unprocessed: Path | None, channel: int
+) -> SceneMaterial:
+    """The same for files without a scene."""
+    from unmix.audio import Recording
+    from unmix.report.material import SceneMaterial
+
+    names = tuple(t.name for t in grades.talkers)
+    return SceneMaterial(
+        title="Graded: " + ", ".join(names),
+        names=names,
+        recording=None if unprocessed is None else Recording.open([unprocessed]),
+        reference_channel=channel,
+        outputs={t.name: given[t.estimate] for t in grades.talkers if t.estimate is not None},
+        references=dict(zip(names, references, strict=True)),
+        grades=grades,
+    )
 
 
 def _check_usage(

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from unmix.audio import read_audio
 from unmix.errors import FileError, InputError
-from unmix.files import refuse_to_replace, write_json
+from unmix.files import path_from, refuse_to_replace, write_json
 from unmix.jobs.grade_inputs import (
     PLAIN,
     check_options,
@@ -37,6 +37,7 @@ __all__ = [
     "grade_files",
     "grade_scene",
     "grader_of_scene",
+    "grades_tree",
     "read_grades",
     "write_grades",
 ]
@@ -214,7 +215,7 @@ def grade_scene(
         estimates.signals, match=match, matched=matched, cross_check=cross_check, notes=(*estimates.notes, *notes)
     )
     if out_dir is not None:
-        write_grades(grades, out_dir, overwrite=overwrite)
+        write_grades(grades, out_dir, overwrite=overwrite, scene=scene.path, estimates=Path(estimates_dir))
     return grades
 
 
@@ -302,14 +303,34 @@ def _match(
     return None, "best", [f"no signal is called {missing[0]!r}: talkers were matched by best assignment"]
 
 
-def write_grades(grades: Grades, out_dir: str | Path, *, overwrite: bool = False) -> Path:
+def write_grades(
+    grades: Grades,
+    out_dir: str | Path,
+    *,
+    overwrite: bool = False,
+    scene: Path | None = None,
+    estimates: Path | None = None,
+) -> Path:
     """Write ``grades.json`` into a folder, aside first and then renamed; returns its path.
+
+    scene, estimates  what was graded, for those who read the file: kept as seen from the folder
 
     Raises FileError when it exists and `overwrite` is not given, or the folder cannot be written.
     """
     path = Path(out_dir) / "grades.json"
-    write_json(path, grades.to_dict(), overwrite=overwrite)
+    write_json(path, grades_tree(grades, out_dir, scene=scene, estimates=estimates), overwrite=overwrite)
     return path
+
+
+def grades_tree(
+    grades: Grades, out_dir: str | Path | None, *, scene: Path | None = None, estimates: Path | None = None
+) -> dict[str, Any]:
+    """The content of ``grades.json`` in a folder: the figures, and which scene and estimates they are of."""
+    tree = grades.to_dict()
+    if out_dir is None:
+        return tree
+    folder = Path(out_dir)
+    return tree | {"scene": path_from(folder, scene), "estimates": path_from(folder, estimates)}
 
 
 def read_grades(path: str | Path) -> Grades:

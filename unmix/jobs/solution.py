@@ -54,6 +54,7 @@ class Solution:
     margin_s          time from the ends within which the answer differs from one long solve
     latency_ms        algorithmic latency: the future that an output needs
     real_time_factor  wall time over duration
+    scene             the scene's file, as seen from the folder with the signals; None when they stayed in memory
     """
 
     talkers: tuple[SolvedTalker, ...]
@@ -70,6 +71,7 @@ class Solution:
     wall_time_s: float = 0.0
     real_time_factor: float = 0.0
     details: dict[str, Any] = field(default_factory=dict)
+    scene: str | None = None
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -92,6 +94,7 @@ class Solution:
                 }
                 for t in self.talkers
             ],
+            "scene": self.scene,
             "variant": self.variant.name,
             "settings": self.variant.to_dict(),
             "method": self.method,

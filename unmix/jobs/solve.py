@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from unmix.errors import InputError, UnmixWarning
-from unmix.files import folder_aside, write_json
+from unmix.files import folder_aside, path_from, write_json
 from unmix.health import ChannelHealth
 from unmix.jobs.reverberant import room_stage
 from unmix.jobs.solution import Memory, Sink, Solution, TalkerFiles, describe
@@ -65,7 +65,7 @@ def solve_to_folder(
     out = Path(out)
     chosen = load_variant(variant)
     with folder_aside(out, overwrite=overwrite, expect=["solution.json"]) as aside:
-        solution = _solve(scene, chosen, TalkerFiles(aside), progress)
+        solution = replace(_solve(scene, chosen, TalkerFiles(aside), progress), scene=path_from(out, scene.path))
         write_json(aside / "solution.json", solution.to_dict())
     return solution
 

@@ -1,10 +1,18 @@
 """Pictures: one small style, colours that colour-blind readers tell apart, matplotlib imported only when drawn.
 
-Colours are those of Okabe and Ito; what colour says, a line style or a mark says too.
+Colours are those of Okabe and Ito; what colour says, a line style or a mark says too. Every picture is a function that
+hands back a figure: `save_figure` writes it to a file, `embedded_svg` puts it into a page, where its colours follow the
+page's light or dark scheme.
 """
 
 from __future__ import annotations
 
+import contextlib
+import html
+import io
+import re
+import warnings
+from collections.abc import Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -19,31 +27,70 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
     from matplotlib.projections.polar import PolarAxes
 
-__all__ = ["COLOURS", "MARKS", "STYLE", "bearing_figure", "new_figure", "save_figure"]
+__all__ = [
+    "COLOURS",
+    "INK",
+    "MARKS",
+    "PAPER",
+    "QUIET",
+    "STYLE",
+    "bearing_figure",
+    "embedded_svg",
+    "new_figure",
+    "plain_label",
+    "save_figure",
+    "styled",
+]
 
 COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
 """M. Okabe and K. Ito, "Color universal design", 2008."""
 MARKS = ("o", "s", "^", "D", "v", "P", "X")
+INK = "#1d1f21"
+QUIET = "#6b7077"
+PAPER = "#fcfbf8"
 STYLE: Any = {
     "font.size": 9.0,
+    "text.color": INK,
+    "axes.labelcolor": INK,
+    "axes.edgecolor": QUIET,
+    "xtick.color": INK,
+    "ytick.color": INK,
+    "grid.color": QUIET,
     "axes.spines.top": False,
     "axes.spines.right": False,
     "axes.grid": True,
-    "grid.alpha": 0.3,
+    "grid.alpha": 0.25,
     "legend.frameon": False,
     "svg.fonttype": "none",
     "svg.hashsalt": "unmix",
 }
 FORMATS = (".svg", ".png", ".pdf")
-_QUIET = "#777777"
+LONGEST_LABEL = 22
+
+
+@contextlib.contextmanager
+def styled() -> Iterator[None]:
+    """The house style, to be drawn in; glyphs that the measuring font lacks are no matter, the reader's has them."""
+    import matplotlib
+
+    with matplotlib.rc_context(STYLE), warnings.catch_warnings():
+        warnings.filterwarnings("ignore", message=r"Glyph .* missing from")
+        warnings.filterwarnings("ignore", message=r"Matplotlib currently does not support .* natively")
+        yield
+
+
+def plain_label(name: str) -> str:
+    """A name as a label: no mathematics in `$`, no control characters, shortened where it would fill the picture."""
+    text = "".join(c if c.isprintable() else " " for c in name)
+    text = text if len(text) <= LONGEST_LABEL else f"{text[: LONGEST_LABEL - 1]}\u2026"
+    return text.replace("$", r"\$")
 
 
 def new_figure(width_in: float, height_in: float) -> Figure:
     """An empty figure in the house style, drawn without any display."""
-    import matplotlib
     from matplotlib.figure import Figure
 
-    with matplotlib.rc_context(STYLE):
+    with styled():
         return Figure(figsize=(width_in, height_in), layout="constrained")
 
 
@@ -52,13 +99,44 @@ def save_figure(figure: Figure, path: Path, *, overwrite: bool = False) -> None:
 
     Raises InputError for an unknown suffix, FileError when the file exists and ``overwrite`` is not given.
     """
-    import matplotlib
-
     if path.suffix.lower() not in FORMATS:
         raise InputError(f"{path}: pictures are written as {', '.join(FORMATS)}; choose one of these endings")
     dates: dict[str, dict[str, Any]] = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": {}}
-    with matplotlib.rc_context(STYLE), write_aside(path, overwrite=overwrite) as aside:
+    with styled(), write_aside(path, overwrite=overwrite) as aside:
         figure.savefig(aside, format=path.suffix.lower()[1:], dpi=150, metadata=dates[path.suffix.lower()])
+
+
+def embedded_svg(figure: Figure, name: str, title: str, description: str) -> str:
+    """The figure as an `<svg>` element for a page, with a title and a description for those who hear it read.
+
+    name  unique on the page: the element's ids begin with it
+    """
+    stream = io.StringIO()
+    with styled():
+        figure.savefig(stream, format="svg", transparent=True, metadata=dict.fromkeys(("Date", "Creator", "Format")))
+    text = stream.getvalue()
+    body = text[text.index("<svg") :]
+    body = re.sub(r"<metadata>.*?</metadata>\s*", "", body, flags=re.DOTALL)
+    used = set(re.findall(r"(?:url\(#|href=\"#)([^\")]+)", body))
+    body = re.sub(r'\s+id="([^"]*)"', lambda m: f' id="{name}-{m.group(1)}"' if m.group(1) in used else "", body)
+    body = re.sub(r"(url\(#|href=\"#)([^\")]+)", lambda m: f"{m.group(1)}{name}-{m.group(2)}", body)
+    for colour, variable in _page_colours().items():
+        body = re.sub(re.escape(colour), f"var({variable}, {colour})", body, flags=re.IGNORECASE)
+    body = re.sub(r'font: (?:[\w.]+ )?([\d.]+)px [^;"]*', r"font-size: \1px", body)
+    view = re.search(r'viewBox="([^"]+)"', body)
+    label = (
+        f'<svg class="figure" viewBox="{view.group(1) if view else ""}" role="img" '
+        f'aria-labelledby="{name}-title {name}-desc" xmlns="http://www.w3.org/2000/svg" '
+        f'xmlns:xlink="http://www.w3.org/1999/xlink"><title id="{name}-title">{html.escape(title)}</title>'
+        f'<desc id="{name}-desc">{html.escape(description)}</desc>'
+    )
+    return re.sub(r"\n\s*", "\n", label + body[body.index(">") + 1 :])
+
+
+def _page_colours() -> dict[str, str]:
+    """Colours of the pictures, and the page's variables that stand for them."""
+    series = {colour: f"--s{k}" for k, colour in enumerate(COLOURS[:-1])}
+    return {INK: "--ink", QUIET: "--quiet", PAPER: "--paper", **series}
 
 
 def bearing_figure(located: Located) -> Figure:
@@ -67,9 +145,7 @@ def bearing_figure(located: Located) -> Figure:
     Heavy where a talker speaks, thin where not; grey dots are single detections; hollow marks and dotted lines are
     directions the array cannot tell from the talker's.
     """
-    import matplotlib
-
-    with matplotlib.rc_context(STYLE):
+    with styled():
         figure = new_figure(9.0, 3.8)
         # The polar axes say so themselves; `subplot_mosaic` only types the common base.
         axes: Any = figure.subplot_mosaic(
@@ -78,9 +154,7 @@ def bearing_figure(located: Located) -> Figure:
         _over_time(axes["time"], located)
         _ring(axes["ring"], located)
         if located.ambiguity is not None:
-            figure.suptitle(
-                f"Note: {located.ambiguity.split(':')[0]}, so {_short(located)}", fontsize=8.0, color=_QUIET
-            )
+            figure.suptitle(f"Note: {located.ambiguity.split(':')[0]}, so {_short(located)}", fontsize=8.0, color=QUIET)
     return figure
 
 
@@ -106,7 +180,7 @@ def _over_time(axes: Axes, located: Located) -> None:
         speaks = np.zeros(len(time_s), dtype=bool)
         for start, stop in talker.active_s:
             speaks |= (time_s >= start) & (time_s < stop)
-        label = f"{talker.name}: {np.degrees(talker.azimuth):.0f} ± {np.degrees(talker.azimuth_std):.1f}°"
+        label = f"{plain_label(talker.name)}: {np.degrees(talker.azimuth):.0f} ± {np.degrees(talker.azimuth_std):.1f}°"
         axes.plot(time_s, np.where(speaks, azimuth, np.nan), color=colour, linewidth=4.0, zorder=3, label=label)
         every = max(1, len(time_s) // 8)
         axes.plot(time_s[::every], azimuth[::every], MARKS[k % len(MARKS)], color=colour, markersize=5, zorder=4)

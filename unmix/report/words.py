@@ -1,0 +1,105 @@
+"""Figures put into words: what a reader takes along from the first screen.
+
+Share of words right that sentence tests gave at a short-time objective intelligibility d [1]_, by two published fits:
+
+    100 / (1 + exp(a d + b)),    IEEE sentences a = -17.4906, b = 9.6921;  Dantale II a = -14.5435, b = 7.0792
+
+They were fitted to normal-hearing listeners and these sentences. Here they only choose the words of the verdict, which
+claims the lower of the two.
+
+.. [1] C. H. Taal et al., "An algorithm for intelligibility prediction of time-frequency weighted noisy speech",
+   IEEE Transactions on Audio, Speech, and Language Processing 19(7), 2011.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from unmix.metrics.grades import TalkerGrade
+
+__all__ = ["Verdict", "figure_text", "talker_verdict", "understandable", "words_right_percent"]
+
+FITS = {"IEEE sentences": (-17.4906, 9.6921), "Dantale II": (-14.5435, 7.0792)}
+UNDERSTOOD, PARTLY = 95.0, 50.0
+"""Percent of words from which somebody can be understood, or half understood: a choice, not a standard."""
+UNDEFINED = "\u2013"
+
+
+@dataclass(frozen=True)
+class Verdict:
+    """One talker in one sentence.
+
+    level     "good", "fair" or "poor" after separation; "unknown" without figures
+    headline  the finding in three or four words
+    sentence  the figures behind it
+    """
+
+    name: str
+    level: str
+    headline: str
+    sentence: str
+
+
+def words_right_percent(stoi: float) -> tuple[float, float]:
+    """The lower and the higher of the two predictions."""
+    shares = sorted(100.0 / (1.0 + math.exp(a * stoi + b)) for a, b in FITS.values())
+    return shares[0], shares[-1]
+
+
+def figure_text(value: float | None, digits: int, *, signed: bool = False) -> str:
+    """A figure as text with a true minus sign; a dash when there is none."""
+    if value is None or not math.isfinite(value):
+        return UNDEFINED
+    return f"{value:{'+' if signed else ''}.{digits}f}".replace("-", "\u2212")
+
+
+def talker_verdict(grade: TalkerGrade) -> Verdict:
+    """Who can be understood, before and after."""
+    before, after = grade.unprocessed.stoi, grade.stoi
+    if after is None:
+        why = grade.undefined.get("stoi", "no figure")
+        return Verdict(grade.name, "unknown", "cannot be judged", f"Intelligibility undefined: {why}.{_others(grade)}")
+    level, headline = _standing(after)
+    was = "" if before is None else f" (before: {figure_text(before, 2)}, {_share(before)})"
+    if before is not None and after < before - 0.005:
+        headline += ", worse than before"
+    elif before is not None and _standing(before)[0] == level:
+        headline += ", as before"
+    return Verdict(grade.name, level, headline, f"STOI {figure_text(after, 2)}: {_share(after)}{was}.{_others(grade)}")
+
+
+def understandable(stoi: float) -> bool:
+    """Whether somebody with this intelligibility can be understood."""
+    return _standing(stoi)[0] == "good"
+
+
+def _standing(stoi: float) -> tuple[str, str]:
+    words = words_right_percent(stoi)[0]
+    if words >= UNDERSTOOD:
+        return "good", "can be understood"
+    if words >= PARTLY:
+        return "fair", "can be understood in part"
+    return "poor", "cannot be understood"
+
+
+def _share(stoi: float) -> str:
+    low = words_right_percent(stoi)[0]
+    if low > 99.0:
+        return "over 99 % of words"
+    return "under 1 % of words" if low < 1.0 else f"about {low:.0f} % of words"
+
+
+def _others(grade: TalkerGrade) -> str:
+    if grade.sir_db is None:
+        return ""
+    gain = grade.gain.sir_db
+    if grade.sir_db >= 0.0:
+        text = f" The others lie {grade.sir_db:.0f} dB below"
+    else:
+        text = f" The others lie {-grade.sir_db:.0f} dB above"
+    return f"{text}, {_change(gain)}." if gain is not None else f"{text}."
+
+
+def _change(gain_db: float) -> str:
+    return f"{gain_db:.0f} dB further down" if gain_db >= 0.0 else f"{-gain_db:.0f} dB less than before"

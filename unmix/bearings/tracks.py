@@ -30,6 +30,8 @@ __all__ = ["Detections", "Motion", "TrackedTalker", "Tracker"]
 
 Floats = NDArray[np.float64]
 
+_ALONE_S = 1.0
+
 
 @dataclass(frozen=True)
 class Motion:
@@ -46,14 +48,14 @@ class Motion:
     birth                probability that an unexplained detection is a new talker
     """
 
-    speed_rms: float = 0.10
+    speed_rms: float = 0.15
     turning_s: float = 10.0
-    pause_std: float = 0.12
+    pause_std: float = 0.2
     detection_std: float = 0.08
     detection: float = 0.9
     false_per_stretch: float = 0.3
     pause: float = 0.3
-    resume: float = 0.15
+    resume: float = 0.6
     leave: float = 0.003
     birth: float = 0.1
 
@@ -254,7 +256,7 @@ class Tracker:
     def _smooth(self, track: _Track) -> TrackedTalker:
         """Rauch, Tung, Striebel: backwards over the filtered states, cut after the last stretch heard."""
         heard = np.array([s.heard for s in track.steps])
-        steps = track.steps[: int(np.flatnonzero(heard > 0.5)[-1]) + 1] if np.any(heard > 0.5) else track.steps
+        steps = track.steps[: _last_heard(np.array([s.time_s for s in track.steps]), heard) + 1]
         mean = [s.mean for s in steps]
         covariance = [s.covariance for s in steps]
         for t in range(len(steps) - 2, -1, -1):
@@ -274,6 +276,18 @@ class Tracker:
             heard[: len(steps)],
             track.best,
         )
+
+
+def _last_heard(time_s: Floats, heard: Floats) -> int:
+    """Index of the last stretch a talker was heard in, others having been heard within `_ALONE_S` before it.
+
+    A single detection long after the others is likelier a false one than a talker who came back for a moment.
+    """
+    sure = np.flatnonzero(heard > 0.5)
+    if not len(sure):
+        return len(heard) - 1
+    together = sure[1:][np.diff(time_s[sure]) <= _ALONE_S]
+    return int(together[-1] if len(together) else sure[-1])
 
 
 def _held(covariance: Floats, rank: int, std: float) -> Floats:

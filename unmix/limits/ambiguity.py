@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 
 APART, ALIKE = 0.5, 0.99
 BEARINGS = 72
+STEPS = 800
+"""Frequencies tried."""
 
 
 def ambiguity_hz(array: Array, highest_hz: float, temperature_c: float = 20.0) -> float | None:
@@ -28,12 +30,15 @@ def ambiguity_hz(array: Array, highest_hz: float, temperature_c: float = 20.0) -
     delay = _delays(array, temperature_c)
     first, second = np.triu_indices(len(delay), 1)
     difference = delay[first] - delay[second]
-    frequency = np.arange(0.0, highest_hz, max(2.0, highest_hz / 2000.0))
+    step_hz = highest_hz / STEPS
+    turn = np.exp(2j * np.pi * step_hz * difference)
+    phase = np.ones_like(turn)
     apart = np.zeros(len(difference), bool)
-    for f in frequency:
-        likeness = np.abs(np.exp(2j * np.pi * f * difference).mean(axis=1))
-        if np.any(apart & (likeness > ALIKE)):
-            return float(f)
+    for step in range(1, STEPS):
+        phase *= turn
+        likeness = np.abs(phase.mean(axis=1))
+        if np.any(likeness[apart] > ALIKE):
+            return float(step * step_hz)
         apart |= likeness < APART
     return None
 

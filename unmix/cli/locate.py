@@ -70,6 +70,10 @@ def command(
 
     for path in filter(None, (out, plot, rttm)):
         refuse_to_replace(path, overwrite=overwrite)
+    if plot is not None:
+        from unmix.report.figures import check_format
+
+        check_format(plot)
     loaded = Scene.load(scene)
     chosen = METHODS[[str(m) for m in METHODS].index(method)]
     with progress_bar(f"locating {loaded.title}") as report:

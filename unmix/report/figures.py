@@ -35,6 +35,7 @@ __all__ = [
     "QUIET",
     "STYLE",
     "bearing_figure",
+    "check_format",
     "embedded_svg",
     "new_figure",
     "plain_label",
@@ -94,13 +95,18 @@ def new_figure(width_in: float, height_in: float) -> Figure:
         return Figure(figsize=(width_in, height_in), layout="constrained")
 
 
+def check_format(path: Path) -> None:
+    """Raise InputError for a file name whose suffix no picture can be written as; called before work begins."""
+    if path.suffix.lower() not in FORMATS:
+        raise InputError(f"{path}: pictures are written as {', '.join(FORMATS)}; choose one of these endings")
+
+
 def save_figure(figure: Figure, path: Path, *, overwrite: bool = False) -> None:
     """Write a figure in the format of the file's suffix; the same figure gives the same bytes.
 
     Raises InputError for an unknown suffix, FileError when the file exists and ``overwrite`` is not given.
     """
-    if path.suffix.lower() not in FORMATS:
-        raise InputError(f"{path}: pictures are written as {', '.join(FORMATS)}; choose one of these endings")
+    check_format(path)
     dates: dict[str, dict[str, Any]] = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": {}}
     with styled(), write_aside(path, overwrite=overwrite) as aside:
         figure.savefig(aside, format=path.suffix.lower()[1:], dpi=150, metadata=dates[path.suffix.lower()])
@@ -176,12 +182,14 @@ def _over_time(axes: Axes, located: Located) -> None:
         azimuth = _unjumped(np.degrees(talker.track.at(time_s)[0]))
         axes.plot(time_s, azimuth, color=colour, linewidth=0.8, zorder=2)
         for a, _ in talker.candidates if _aside(talker) else ():
-            axes.axhline(float(np.degrees(a)), color=colour, linewidth=0.8, linestyle=":", zorder=2)
+            # Mirrored, what goes to the left goes to the right.
+            other = np.degrees(np.angle(np.exp(1j * (a + talker.azimuth - talker.track.at(time_s)[0]))))
+            axes.plot(time_s, _unjumped(other), color=colour, linewidth=0.9, linestyle=":", zorder=2)
         speaks = np.zeros(len(time_s), dtype=bool)
         for start, stop in talker.active_s:
             speaks |= (time_s >= start) & (time_s < stop)
-        label = f"{plain_label(talker.name)}: {np.degrees(talker.azimuth):.0f} ± {np.degrees(talker.azimuth_std):.1f}°"
-        axes.plot(time_s, np.where(speaks, azimuth, np.nan), color=colour, linewidth=4.0, zorder=3, label=label)
+        speaking = np.where(speaks, azimuth, np.nan)
+        axes.plot(time_s, speaking, color=colour, linewidth=4.0, zorder=3, label=_bearing_label(talker))
         every = max(1, len(time_s) // 8)
         axes.plot(time_s[::every], azimuth[::every], MARKS[k % len(MARKS)], color=colour, markersize=5, zorder=4)
     axes.set(
@@ -193,6 +201,19 @@ def _over_time(axes: Axes, located: Located) -> None:
     )
     if located.talkers:
         axes.legend(loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=min(4, len(located.talkers)), fontsize=8.0)
+    else:
+        axes.text(0.5, 0.5, "no talker found", transform=axes.transAxes, ha="center", va="center", color=QUIET)
+
+
+def _bearing_label(talker: LocatedTalker) -> str:
+    """Name and bearing; of a talker on the move where they began and ended."""
+    name = f"{plain_label(talker.name)}{' (doubtful)' if talker.doubtful else ''}"
+    if talker.moving:
+        first, last = np.degrees(talker.track.azimuth[[0, -1]])
+        return f"{name}: {first:.0f} to {last:.0f}°, moving"
+    deviation = float(np.degrees(talker.azimuth_std))
+    places = 0 if deviation >= 0.1 else 1
+    return f"{name}: {np.degrees(talker.azimuth):.{places}f} ± {deviation:.{places + 1}f}°"
 
 
 def _ring(axes: PolarAxes, located: Located) -> None:
@@ -202,7 +223,11 @@ def _ring(axes: PolarAxes, located: Located) -> None:
     for k, talker in enumerate(located.talkers):
         colour = COLOURS[k % len(COLOURS)]
         axes.plot([talker.azimuth] * 2, [0.0, 1.0], color=colour, linewidth=1.5)
-        axes.plot([talker.azimuth], [1.0], MARKS[k % len(MARKS)], color=colour, markersize=7)
+        if talker.moving:
+            # The way gone, each talker on a ring of their own.
+            way = np.unwrap(talker.track.azimuth)
+            axes.plot(way, np.full(len(way), 1.0 - 0.05 * k), color=colour, linewidth=2.5, alpha=0.6)
+        axes.plot([talker.azimuth], [1.0 - 0.05 * k * talker.moving], MARKS[k % len(MARKS)], color=colour, markersize=7)
         for a, _ in talker.candidates if _aside(talker) else ():
             axes.plot([a], [1.0], MARKS[k % len(MARKS)], color=colour, markersize=7, markerfacecolor="none")
     axes.set(rlim=(0.0, 1.1), yticks=[])

@@ -104,7 +104,7 @@ class ClusterEngine:
         from distributed import wait
         from distributed.client import FIRST_COMPLETED
 
-        with contextlib.suppress(TimeoutError):
+        with contextlib.suppress(TimeoutError), self._client.as_current():
             ended: Any = wait(list(flight.items), timeout=TICK_S, return_when=FIRST_COMPLETED)  # type: ignore[no-untyped-call]
             return list(ended.done)
         if self._client.status not in ("running", "connecting"):

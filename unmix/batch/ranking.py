@@ -21,6 +21,9 @@ Floats = NDArray[np.float64]
 ENOUGH_SCENES = 24
 """From so many scenes on intervals cover what they say; below, what they cover is said with them."""
 
+TRIALS = 1000
+"""Simulated experiments behind that: a standard error of 0.7 %."""
+
 
 @dataclass(frozen=True)
 class Metric:
@@ -94,7 +97,7 @@ def analyse(
     }
     counts = [v.interval.scenes for v in rankings[metrics[0].name].variants if v.group]
     fewest = min(counts, default=0)
-    coverage = coverage_percent(fewest) if 2 <= fewest < ENOUGH_SCENES else None
+    coverage = coverage_percent(fewest, trials=TRIALS) if 2 <= fewest < ENOUGH_SCENES else None
     return Analysis(tuple(metrics), rankings, costs, max(counts, default=0), coverage)
 
 

@@ -39,11 +39,16 @@ class Sound:
 
 
 def matched_levels(signals: Sequence[Floats], sample_rate: int) -> list[float]:
-    """Gain for each (samples,) that makes all equally loud (ITU-R BS.1770-4) without any going beyond full scale."""
+    """Gain for each (samples,) that makes all equally loud (ITU-R BS.1770-4) without any going beyond full scale.
+
+    Loudness is measured at full scale: what the standard counts as silence is far below a programme's level, and a
+    recording may be that quiet as a whole.
+    """
     gains = []
     for signal in signals:
-        found = loudness(signal, sample_rate)
-        gains.append(1.0 if found is None else float(10.0 ** ((TARGET - found) / 20.0)))
+        peak = float(np.abs(signal).max(initial=0.0))
+        found = loudness(signal / peak, sample_rate) if peak > 0.0 else None
+        gains.append(1.0 if found is None else float(10.0 ** ((TARGET - found) / 20.0)) / peak)
     peaks = [g * float(np.abs(s).max(initial=0.0)) for g, s in zip(gains, signals, strict=True)]
     down = min(1.0, PEAK / max(*peaks, 1e-12))
     return [g * down for g in gains]

@@ -1,0 +1,108 @@
+"""`unmix report`, and the report that the other commands write by themselves."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pytest
+
+from tests.cli.conftest import Run
+from unmix.report.page import kind_of_page
+from unmix.report.scene_page import UNGRADED
+
+GRADED = UNGRADED.replace("not graded", "graded")
+
+
+@pytest.fixture
+def solved(run: Run, scene: Path) -> Path:
+    """The folder `solve` wrote beside the scene."""
+    assert run("solve", scene, "--out", scene.parent / "out", "--variant", "model").status == 0
+    return scene.parent / "out"
+
+
+def test_solve_writes_a_report_and_grading_adds_to_it(run: Run, scene: Path, solved: Path) -> None:
+    assert kind_of_page(solved / "report.html") == UNGRADED
+    assert "Not graded yet" in (solved / "report.html").read_text(encoding="utf-8")
+    ran = run("grade", scene, "--estimates", solved, "--out", solved)
+    assert ran.status == 0
+    assert "grades.json and report.html" in ran.out
+    assert kind_of_page(solved / "report.html") == GRADED
+    assert "can be understood" in (solved / "report.html").read_text(encoding="utf-8")
+
+
+def test_no_report_is_written_when_none_is_wanted(run: Run, scene: Path) -> None:
+    out = scene.parent / "out"
+    assert run("solve", scene, "--out", out, "--variant", "model", "--no-report").status == 0
+    assert run("grade", scene, "--estimates", out, "--out", out, "--no-report").status == 0
+    assert not (out / "report.html").exists()
+
+
+def test_a_report_of_other_making_is_left_alone(run: Run, scene: Path, solved: Path) -> None:
+    (solved / "report.html").write_text("mine")
+    ran = run("grade", scene, "--estimates", solved, "--out", solved)
+    assert (ran.status, ran.out) == (1, "")
+    assert "report.html: exists already" in ran.err and "--no-report" in ran.err
+    assert not (solved / "grades.json").exists()
+    assert (solved / "report.html").read_text() == "mine"
+    assert run("grade", scene, "--estimates", solved, "--out", solved, "--overwrite").status == 0
+    assert kind_of_page(solved / "report.html") == GRADED
+
+
+def test_a_report_without_voices_is_not_renewed_with_them(run: Run, scene: Path, solved: Path) -> None:
+    assert run("report", solved, "--no-audio", "--overwrite").status == 0
+    before = (solved / "report.html").read_bytes()
+    assert run("grade", scene, "--estimates", solved, "--out", solved).status == 1
+    assert (solved / "report.html").read_bytes() == before
+
+
+def test_files_without_a_scene_get_a_report(run: Run, scene: Path, solved: Path) -> None:
+    folder = scene.parent
+    pairs = [("--reference", "mate.wav"), ("--reference", "pilot.wav")]
+    options = [part for name, file in pairs for part in (name, folder / file)]
+    estimates = ["--estimate", solved / "mate.wav", "--estimate", solved / "Chief-Pilot.wav"]
+    ran = run("grade", *options, *estimates, "--unprocessed", folder / "mix.wav", "--out", folder / "graded")
+    assert ran.status == 0
+    text = (folder / "graded" / "report.html").read_text(encoding="utf-8")
+    assert "Graded: mate, pilot" in text
+    assert all(f'id="audio-{name}"' in text for name in ("mic", "after-0", "after-1", "reference-0"))
+
+
+def test_a_grading_folder_of_its_own_finds_its_way_back(run: Run, scene: Path, solved: Path) -> None:
+    there = scene.parent / "graded"
+    assert run("grade", scene, "--estimates", solved, "--out", there, "--no-report").status == 0
+    ran = run("report", there, "--json")
+    assert (ran.status, ran.err) == (0, "")
+    assert ran.json == {"file": str(there / "report.html"), "bytes": (there / "report.html").stat().st_size}
+    text = (there / "report.html").read_text(encoding="utf-8")
+    assert 'id="audio-mic"' in text and 'id="audio-after-1"' in text and "Solved by" in text
+
+
+def test_report_hides_what_it_is_told_to(run: Run, solved: Path, tmp_path: Path) -> None:
+    page = tmp_path / "quiet.html"
+    ran = run("report", solved, "--out", page, "--no-audio", "--pseudonyms")
+    assert ran.status == 0
+    text = page.read_text(encoding="utf-8")
+    assert "Talker B" in text and "Chief" not in text and "mate" not in text.replace("estimate", "")
+    assert "audio-" not in text
+
+
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (["nowhere"], "nowhere: no such folder"),
+        (["."], "holds neither solution.json nor grades.json"),
+    ],
+)
+def test_a_folder_that_holds_nothing_is_one_line(
+    run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, arguments: list[str], said: str
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    ran = run("report", *arguments)
+    assert (ran.status, ran.out) == (1, "")
+    assert said in ran.err and ran.err.count("\n") == 1
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_report_is_replaced_only_when_told(run: Run, solved: Path) -> None:
+    assert run("report", solved).status == 1
+    assert run("report", solved, "--overwrite").status == 0

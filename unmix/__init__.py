@@ -19,6 +19,8 @@ from unmix.version import __version__
 if TYPE_CHECKING:
     from unmix.array import Array
     from unmix.audio import Recording, read_audio, write_audio
+    from unmix.export.files import read_bank
+    from unmix.export.job import export_bank
     from unmix.jobs.grade import grade, grade_files, grade_scene
     from unmix.jobs.locate import locate
     from unmix.jobs.located import Located
@@ -56,12 +58,14 @@ __all__ = [
     "UnsolvableError",
     "Variant",
     "__version__",
+    "export_bank",
     "grade",
     "grade_files",
     "grade_scene",
     "load_variant",
     "locate",
     "read_audio",
+    "read_bank",
     "render_scene",
     "render_to_folder",
     "solve",
@@ -84,12 +88,14 @@ _LAZY = {
     "Talker": "unmix.scene",
     "Track": "unmix.track",
     "Variant": "unmix.variant",
+    "export_bank": "unmix.export.job",
     "grade": "unmix.jobs.grade",
     "grade_files": "unmix.jobs.grade",
     "grade_scene": "unmix.jobs.grade",
     "load_variant": "unmix.variant",
     "locate": "unmix.jobs.locate",
     "read_audio": "unmix.audio",
+    "read_bank": "unmix.export.files",
     "render_scene": "unmix.render.compose",
     # `unmix.render` is the folder of that stage; the job goes by the name of what it does.
     "render_to_folder": "unmix.jobs.render:render",

@@ -17,6 +17,7 @@ COMMANDS: dict[str, str] = {
     "limits": "What an array can achieve at best, before anything is built.",
     "render": "Render a scene with known truth: mixture, references, scene file.",
     "live": "Separate talkers while they speak, from a pipe into a pipe.",
+    "export": "Write a variant's filters for a device, with what they cost.",
     "batch": "Run scenes x variants, grade them, and rank the variants.",
     "report": "Turn the folder of a job into one HTML file to look at and listen to.",
     "variants": "List the presets and every field of a variant.",

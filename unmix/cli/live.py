@@ -13,6 +13,7 @@ import click
 
 from unmix.cli.common import consent_line, existing_file, json_option, overwrite_option, print_json
 from unmix.cli.presets import complete_variant
+from unmix.cli.seats import bearing_option, who_and_where
 
 if TYPE_CHECKING:
     from unmix.array import Array
@@ -29,13 +30,7 @@ IN_PART = 3
 
 @click.command("live")
 @click.argument("source", metavar="SCENE_OR_ARRAY", type=existing_file)
-@click.option(
-    "--bearing",
-    "bearings",
-    multiple=True,
-    metavar="AZ[,EL[,M]]",
-    help="One talker's azimuth and elevation in degrees and distance in metres; repeat it. Needed with an array file.",
-)
+@bearing_option
 @click.option(
     "--variant",
     default="model",
@@ -96,7 +91,7 @@ def _run(
 
     if as_json and output is None:
         raise click.UsageError("--json needs --output FILE: standard output cannot carry both")
-    array, talkers, scene = _who_and_where(source, bearings)
+    array, talkers, scene = who_and_where(source, bearings)
     stream = _incoming_stream()
     sound, announced = _incoming(stream, kind, rate, channels, None if scene is None else scene.sample_rate)
     picked = _picked(sound, array, scene)
@@ -123,44 +118,6 @@ def _run(
         _tell(meter)
         _tell_end(reader, writer.clipped)
     return IN_PART if reader.short else None
-
-
-def _who_and_where(path: Path, bearings: Sequence[str]) -> tuple[Array, Sequence[Talker], Scene | None]:
-    """Array and talkers of a scene file, or of an array file and bearings."""
-    from unmix.array import Array
-    from unmix.errors import InputError
-    from unmix.files import read_toml
-    from unmix.scene import Scene
-
-    given = [_talker(text, index) for index, text in enumerate(bearings)]
-    if "recording" not in read_toml(path, dict):
-        array = Array.load(path)
-        if not given:
-            raise InputError(f"{path}: an array file says not where talkers are; give --bearing for each")
-        return array, given, None
-    scene = Scene.load(path)
-    if not given and not (scene.talkers and all(t.located for t in scene.talkers)):
-        raise InputError(
-            f"{path}: there must be a bearing for each talker; run `unmix locate` first, or give --bearing"
-        )
-    return scene.array, given or scene.talkers, scene
-
-
-def _talker(text: str, index: int) -> Talker:
-    from math import isfinite
-
-    from unmix.errors import InputError
-    from unmix.scene import Talker
-
-    try:
-        values = [float(part) for part in text.split(",")]
-    except ValueError:
-        values = []
-    if not 1 <= len(values) <= 3 or not all(map(isfinite, values)) or (len(values) == 3 and values[2] <= 0.0):
-        raise InputError(f"--bearing {text}: give AZ, AZ,EL or AZ,EL,M as numbers, such as 20,0,1.2")
-    elevation = values[1] if len(values) > 1 else 0.0
-    distance = values[2] if len(values) > 2 else None
-    return Talker.at(f"talker-{index + 1}", values[0], elevation_deg=elevation, distance_m=distance)
 
 
 def _incoming(

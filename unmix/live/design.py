@@ -18,7 +18,7 @@ from unmix.solvers.assemble import assemble
 from unmix.solvers.stationary import FilterBank
 from unmix.variant import Variant
 
-__all__ = ["Designer", "check_runs_live", "noise_spectra"]
+__all__ = ["Designer", "check_is_filters", "noise_spectra"]
 
 Floats = NDArray[np.float64]
 
@@ -70,36 +70,36 @@ class Designer:
 _USE = "use a variant that is filters alone, such as model or linear-constraint"
 
 
-def check_runs_live(variant: Variant, *, spectra: Spectra | None) -> None:
-    """Raise UnsolvableError, with the reason and the remedy, for a variant that cannot run chunk by chunk."""
-    name = variant.name or "this variant"
+def check_is_filters(variant: Variant, doing: str, *, spectra: Spectra | None) -> None:
+    """Raise UnsolvableError, with the reason and the remedy, for a variant that is more than filters.
+
+    doing  what it cannot do therefore, such as "run chunk by chunk"
+    """
+    cannot = f"variant {variant.name or 'as given'!r} cannot {doing}"
     if variant.room is not None:
         raise UnsolvableError(
-            f"variant {name!r} cannot run chunk by chunk: its room stage refines each segment of "
-            f"{variant.room.segments.length_s:g} s from all of it, so that a sample would wait that long; {_USE}"
+            f"{cannot}: its room stage refines each segment of {variant.room.segments.length_s:g} s from all of it, so "
+            f"that a sample would wait that long; {_USE}"
         )
     if variant.separator != "model":
         return
     solver = variant.solver
     if solver.constraint == "free":
-        raise UnsolvableError(
-            f'variant {name!r} cannot run chunk by chunk: constraint "free" takes each snapshot alone and separates '
-            f"nobody; {_USE}"
-        )
+        raise UnsolvableError(f'{cannot}: constraint "free" takes each snapshot alone and separates nobody; {_USE}')
     if solver.method != "stationary":
         raise UnsolvableError(
-            f"variant {name!r} cannot run chunk by chunk: method {solver.method!r} solves whole blocks and some of "
-            'the future with them; set method = "stationary", the same solution as filters'
+            f"{cannot}: method {solver.method!r} solves whole blocks and some of the future with them; set "
+            'method = "stationary", the same solution as filters'
         )
     if solver.noise in ("observed", "fitted"):
         raise UnsolvableError(
-            f"variant {name!r} cannot run chunk by chunk: noise {solver.noise!r} is computed from the whole recording "
-            "before the first sample leaves; use white, diffuse, or measured with a stretch without talkers"
+            f"{cannot}: noise {solver.noise!r} is computed from the whole recording before the first sample leaves; "
+            "use white, diffuse, or measured with a stretch without talkers"
         )
     if solver.noise == "measured" and spectra is None:
         raise UnsolvableError(
-            f'variant {name!r} needs a stretch without talkers for noise "measured"; pass it as `noise`, or give '
-            "`noise_only_s` in the scene"
+            f'{cannot}: noise "measured" needs a stretch without talkers; pass it as `noise`, or give `noise_only_s` '
+            "in the scene"
         )
 
 

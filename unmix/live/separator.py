@@ -18,7 +18,7 @@ from unmix.array import Array
 from unmix.audio import HIGHEST_RATE_HZ, LOWEST_RATE_HZ
 from unmix.errors import InputError, UnmixWarning, UnsolvableError
 from unmix.live.bank import BankStage, Change
-from unmix.live.design import Designer, check_runs_live, noise_spectra
+from unmix.live.design import Designer, check_is_filters, noise_spectra
 from unmix.live.latency import measured_latency
 from unmix.live.stage import LiveStage
 from unmix.model.noise import Spectra
@@ -85,7 +85,7 @@ class LiveSeparator:
             raise InputError(f"look-ahead of {lookahead_s:g} s; give seconds from zero up")
         self.variant, self.array, self.sample_rate = load_variant(variant), array, sample_rate
         spectra = noise if noise is None or isinstance(noise, Spectra) else _spectra(noise, array)
-        check_runs_live(self.variant, spectra=spectra)
+        check_is_filters(self.variant, "run chunk by chunk", spectra=spectra)
         self._design = Designer(array, self.variant, sample_rate, temperature_c, spectra)
         self._lookahead = None if lookahead_s is None else round(lookahead_s * sample_rate)
         self._fade = max(1, round(fade_s * sample_rate))

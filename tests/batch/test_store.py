@@ -8,6 +8,7 @@ import threading
 import time
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from tests.batch.conftest import write_plan
@@ -27,6 +28,8 @@ def test_parts_come_back_as_they_went(tmp_path: Path) -> None:
     store.write(KEY, encode_part(part))
     assert store.read(KEY) == part
     assert store.keys() == {KEY}
+    store.write(KEY, encode_part(Part(talkers=[{"stoi": np.float64(0.5), "sdr_db": float("nan")}])))
+    assert store.read(KEY) == Part(talkers=[{"stoi": 0.5, "sdr_db": None}])
 
 
 @pytest.mark.parametrize("share", [0.0, 0.2, 0.5, 0.99])

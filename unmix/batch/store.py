@@ -21,6 +21,7 @@ from pathlib import Path
 from typing import Any
 
 import msgspec
+import numpy as np
 
 from unmix.batch.scenes import SceneSource
 from unmix.errors import FileError
@@ -54,8 +55,15 @@ class Part(msgspec.Struct, kw_only=True):
 
 def encode_part(part: Part) -> bytes:
     """The part as it stands in its file."""
-    body = msgspec.json.encode(part)
+    body = msgspec.json.encode(part, enc_hook=_plain)
     return MAGIC + _checksum(body) + b"\n" + body
+
+
+def _plain(value: Any) -> Any:
+    """NumPy's numbers as Python's."""
+    if isinstance(value, np.generic):
+        return value.item()
+    raise TypeError(f"{type(value).__name__} has no place in a part")
 
 
 _decoder = msgspec.json.Decoder(Part)

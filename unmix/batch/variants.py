@@ -79,7 +79,9 @@ def _labels(fields: list[str]) -> list[str]:
 
 
 def _text(value: Any) -> str:
-    return f"{value:g}" if isinstance(value, float) else str(value).lower() if isinstance(value, bool) else str(value)
+    if isinstance(value, float) and float(f"{value:g}") == value:
+        return f"{value:g}"
+    return str(value).lower() if isinstance(value, bool) else str(value)
 
 
 def _set(tree: dict[str, Any], field: str, value: Any, where: str) -> None:

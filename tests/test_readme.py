@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 
 import unmix
+from unmix.batch.plan import Plan
 from unmix.cli.commands import COMMANDS
 from unmix.files import decode_toml
 from unmix.scene_file import SceneFile
@@ -36,6 +37,12 @@ def test_the_scene_is_a_scene() -> None:
 def test_the_variant_is_a_variant() -> None:
     text = next(block for block in blocks("toml") if "base =" in block)
     assert decode_toml(text, Variant, where="README.md").solver.noise == "measured"
+
+
+def test_the_plan_is_a_plan() -> None:
+    text = next(block for block in blocks("toml") if "[[vary]]" in block)
+    plan = decode_toml(text, Plan, where="README.md")
+    assert len(plan.render) == len(plan.vary) == 1
 
 
 def test_every_preset_and_its_purpose_is_listed() -> None:

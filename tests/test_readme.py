@@ -58,7 +58,7 @@ COMMAND_LINES = [
 
 @pytest.mark.parametrize("line", COMMAND_LINES)
 def test_every_command_shown_can_be_typed(line: str) -> None:
-    _, name, *arguments = shlex.split(line)
+    _, name, *arguments = shlex.split(line, comments=True)
     assert name in COMMANDS
     command = importlib.import_module(f"unmix.cli.{name}").command
     assert isinstance(command, click.Command)

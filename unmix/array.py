@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import msgspec
 import numpy as np
@@ -13,6 +13,9 @@ from numpy.typing import ArrayLike, NDArray
 from unmix.errors import InputError
 from unmix.files import read_toml, write_toml
 from unmix.physics import pairwise_distances
+
+if TYPE_CHECKING:
+    from unmix.sofa import Responses
 
 __all__ = ["Array", "ArrayFile"]
 
@@ -51,6 +54,7 @@ class Array:
     polarity           (channels,), +1 or -1
     *_std_*            (channels,) standard deviations of the corrections, None when unknown
     full_scale_db_spl  sound pressure level of a full-scale sine, None when not calibrated
+    responses          measured responses that replace pure delays in the model; None for microphones in free field
     """
 
     positions_m: Floats
@@ -63,6 +67,7 @@ class Array:
     delay_std_s: Floats | None = None
     position_std_m: Floats | None = None
     full_scale_db_spl: float | None = None
+    responses: Responses | None = field(default=None, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         positions = np.array(self.positions_m, dtype=np.float64)
@@ -74,8 +79,14 @@ class Array:
 
     @classmethod
     def load(cls, path: str | Path) -> Array:
-        """Read an array file (TOML). Raises FileError or InputError naming file, key and remedy."""
+        """Read an array file (TOML, or SOFA). Raises FileError or InputError naming file, key and remedy."""
         path = Path(path)
+        if path.suffix.lower() == ".sofa":
+            from unmix.sofa import read_sofa
+
+            responses = read_sofa(path)
+            content = ArrayFile(positions_m=responses.positions_m.tolist(), title=responses.title)
+            return replace(cls.from_file(content, where=f"{path}: ReceiverPosition"), responses=responses)
         return cls.from_file(read_toml(path, ArrayFile), where=str(path))
 
     @classmethod
@@ -141,7 +152,12 @@ class Array:
         )
 
     def save(self, path: str | Path, *, overwrite: bool = False) -> None:
-        """Write an array file (TOML). Raises FileError when it exists and `overwrite` is not given."""
+        """Write an array file (TOML). Raises FileError when it exists and `overwrite` is not given.
+
+        Measured responses have no place in it: InputError; `unmix.sofa.write_sofa` writes them.
+        """
+        if self.responses is not None:
+            raise InputError(f"{path}: an array file cannot hold measured responses; name the SOFA file itself")
         write_toml(Path(path), msgspec.to_builtins(self.to_file()), overwrite=overwrite)
 
     @property
@@ -162,7 +178,8 @@ class Array:
         columns: dict[str, Any] = {
             name: value[index] for name in per_channel if (value := getattr(self, name)) is not None
         }
-        return replace(self, reference_channel=int(kept[0]) if len(kept) else 0, **columns)
+        responses = None if self.responses is None else self.responses.take(index)
+        return replace(self, reference_channel=int(kept[0]) if len(kept) else 0, responses=responses, **columns)
 
 
 def _checked_positions(content: ArrayFile, where: str) -> Floats:

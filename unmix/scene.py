@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any, Literal
 
@@ -178,7 +178,7 @@ def _array(table: ArrayTable, path: Path) -> Array:
         return array
     content = array.to_file()
     content.reference_channel = table.reference_channel
-    return Array.from_file(content, where=f"{path}: [array]")
+    return replace(Array.from_file(content, where=f"{path}: [array]"), responses=array.responses)
 
 
 def _stretches(given: Stretches | None, recording: Recording, path: Path, key: str) -> Stretches:

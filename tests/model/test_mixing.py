@@ -9,7 +9,7 @@ from tests.conftest import circle, delayed, speech
 from unmix.array import Array
 from unmix.model.delays import Paths, paths_from_bearings
 from unmix.model.differentiators import choose_differentiators
-from unmix.model.mixing import mixing_from_paths, mixing_from_responses, model_reach
+from unmix.model.mixing import Mixing, mixing_from_paths, mixing_from_responses, model_reach
 
 RATE = 16000
 
@@ -91,3 +91,11 @@ def test_far_sphere_is_a_plane_wave() -> None:
     # From the left (azimuth 90 degrees) the leftmost microphone hears first.
     left = paths_from_bearings(array, [np.pi / 2])
     assert left.delay_s[0].argmin() == array.positions_m[:, 1].argmax()
+
+
+def test_a_full_grid_of_frequencies_gives_the_same_response() -> None:
+    rng = np.random.default_rng(3)
+    mixing = Mixing(rng.standard_normal((2, 3, 41)), 20)
+    omega = 2 * np.pi * np.arange(65) / 128
+    apart = np.concatenate([mixing.response(omega[:30]), mixing.response(omega[30:])])
+    assert np.abs(mixing.response(omega) - apart).max() < 1e-12

@@ -126,7 +126,7 @@ class FieldMeter:
         sign, sureness, gain = self._low_frequencies(trusted)
         order = None
         if trusted.all() and m > 2 and sum(map(len, self._bins)) >= 40:
-            order = self._order(self._array.polarity * (np.ones(m) if sign is None else sign), gain)
+            order = self._order(np.asarray(self._array.polarity * (1 if sign is None else sign), np.float64), gain)
         return FieldReading(sign, sureness, gain, order)
 
     def _low_frequencies(self, trusted: NDArray[np.bool_]) -> tuple[NDArray[np.int64] | None, Floats, Floats | None]:

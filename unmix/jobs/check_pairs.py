@@ -110,7 +110,7 @@ def field_findings(field: FieldReading, trusted: NDArray[np.bool_], expected_db:
         moved = [m for m, o in enumerate(order.order) if m != o]
         pairs = ", ".join(f"microphone {m} is channel {order.order[m]}" for m in moved)
         yield Finding(
-            "order", "unfit", f"channels do not fit the geometry as numbered; better, for instance: {pairs}", listed(moved),
+            "order", "unfit", f"channels do not fit the geometry; better, for instance: {pairs}", listed(moved),
             min(0.999, 0.75 + 0.01 * order.deviations),
             "put `channels` in [recording] in the order of the array file's positions", tuple(moved),
             order.fit - order.fit_as_given, "",

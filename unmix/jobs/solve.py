@@ -140,6 +140,8 @@ def paths_of(scene: Scene, variant: Variant) -> Paths:
     """Delays and gains of the scene's talkers, over time when a talker moves or the array turns."""
     from unmix.model.delays import paths_from_bearings
 
+    if scene.array.responses is not None:
+        return _measured_paths(scene)
     plane = variant.model.wave == "plane"
     if all(t.track is None for t in scene.talkers) and scene.orientation is None:
         distance = [np.nan if plane or t.distance_m is None else t.distance_m for t in scene.talkers]
@@ -163,6 +165,20 @@ def paths_of(scene: Scene, variant: Variant) -> Paths:
         rotation=None if scene.orientation is None else scene.orientation.matrices(time_s + offset),
         temperature_c=scene.temperature_c,
     )
+
+
+def _measured_paths(scene: Scene) -> Paths:
+    """Paths from the array's measured responses; everything must be at rest."""
+    from unmix.model.measured import paths_from_responses
+
+    if scene.orientation is not None or any(t.track is not None for t in scene.talkers):
+        raise InputError(
+            f"{scene.title}: measured responses are used for talkers and arrays at rest; give bearings instead of "
+            "tracks, or an array file with positions"
+        )
+    azimuth = np.array([t.azimuth or 0.0 for t in scene.talkers])
+    elevation = np.array([t.elevation for t in scene.talkers])
+    return paths_from_responses(scene.array, azimuth, elevation, sample_rate=scene.sample_rate)
 
 
 KNOT_S = 0.01

@@ -25,11 +25,15 @@ class Paths:
 
     delay_s, gain   (talkers, channels), or (times, talkers, channels) with `time_s` (times,) when something moves;
                     gains carry the channel's polarity
+    taps, centre    measured responses relative to the reference (talkers, channels, taps) with time zero at `centre`;
+                    None where delays and gains say all. Delays and gains are then those nearest to the responses
     """
 
     delay_s: Floats
     gain: Floats
     time_s: Floats | None = None
+    taps: Floats | None = None
+    centre: int = 0
 
     @property
     def moving(self) -> bool:

@@ -55,6 +55,12 @@ class Mixing:
 
     def response(self, omega: Floats) -> Complexes:
         """Frequency response (frequencies, channels, talkers) at `omega` radians per sample; at rest only."""
+        grid = 2 * (len(omega) - 1)
+        if grid >= self.taps.shape[-1] and np.array_equal(omega, 2.0 * np.pi * np.arange(grid // 2 + 1) / grid):
+            # On a full grid the same by FFT: tap j stands at index -j, since the filters look ahead.
+            around = np.zeros((*self.taps.shape[:-1], grid))
+            around[..., -np.arange(-self.reach, self.reach + 1) % grid] = self.taps
+            return np.asarray(np.fft.rfft(around).transpose(2, 1, 0))
         basis = np.exp(1j * np.outer(omega, np.arange(-self.reach, self.reach + 1)))
         return np.asarray(np.einsum("kmj,fj->fmk", self.taps, basis, optimize=True))
 
@@ -97,8 +103,10 @@ def mixing_from_paths(
     """The model's filters for paths at rest, or for `samples` samples from `start` when they move.
 
     Moving delays are held for `hold` samples at their value in the middle of each group. `reach` widens the filters
-    to a common width (blocks of one recording then have one shape).
+    to a common width (blocks of one recording then have one shape). Measured responses take the place of all this.
     """
+    if paths.taps is not None:
+        return mixing_from_responses(paths.taps, paths.centre)
     if not paths.moving:
         return _placed(paths.delay_s, paths.gain, differentiators, sample_rate, anchor, reach, 0, 0)
     groups = -(-samples // hold)

@@ -82,6 +82,10 @@ def assemble(
     if variant.separator != "model":
         return _baseline(variant, paths, array, sample_rate, temperature_c)
     settings = variant.solver
+    if paths.taps is not None and (settings.constraint != "tied" or settings.method == "kkt"):
+        raise UnsolvableError(
+            'measured responses are no expansion of delays; solve with constraint "tied" and another method than kkt'
+        )
     if settings.constraint == "free":
         return _free(variant, paths, sample_rate)
     posed = pose(variant, paths, array, sample_rate=sample_rate, temperature_c=temperature_c, spectra=spectra)

@@ -17,6 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from unmix.model.delays import Paths
+from unmix.model.mixing import mixing_from_responses
 from unmix.model.noise import GRID, diffuse_covariance
 from unmix.solvers.stationary import FilterBank, filter_bank_from_response
 
@@ -33,6 +34,8 @@ _LOADING = 1e-3
 
 def steering(paths: Paths, omega: Floats, sample_rate: float) -> Complexes:
     """Columns a_k: (frequencies, channels, talkers), exact delays."""
+    if paths.taps is not None:
+        return mixing_from_responses(paths.taps, paths.centre).response(omega)
     phase = -1j * omega[:, None, None] * paths.delay_s.T * sample_rate
     return np.asarray(paths.gain.T * np.exp(phase))
 

@@ -72,7 +72,7 @@ def test_clusters_gather_neighbours() -> None:
 def test_two_talkers_off_the_grid() -> None:
     bins = bins_of(recorded([21.0, 96.0], seconds=5.0))
     start = SPACE.project(unit_vector(np.radians([17.0, 101.0])))
-    found = refine(bins, None, start, SPACE, STEERING)
+    found = refine([(bins, np.eye(3))], start, SPACE, STEERING)
     azimuth = np.arctan2(found.x[:, 1], found.x[:, 0])
     assert apart_deg(azimuth, np.radians([21.0, 96.0])).max() < 0.2
     assert found.weight.min() > 0.2
@@ -89,7 +89,7 @@ def test_the_stated_deviation_is_that_of_draws() -> None:
         z = waves[noise.frequency] * np.exp(2j * np.pi * rng.random((1500, 1))) + 0.5 * noise.z
         z = (z / np.linalg.norm(z, axis=1, keepdims=True)).astype(np.complex64)
         bins = Bins(z, noise.frequency, noise.time_s, noise.frame_s, noise.loud)
-        result = refine(bins, None, x[None] + 0.03, SPACE, STEERING)
+        result = refine([(bins, np.eye(3))], x[None] + 0.03, SPACE, STEERING)
         found.append(result.x[0])
         stated.append(np.diag(result.covariance[0]))
     deviation = np.std(found, axis=0)

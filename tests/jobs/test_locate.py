@@ -215,6 +215,53 @@ def test_who_speaks_when() -> None:
     assert located.activity == {t.name: t.active_s for t in located.talkers}
 
 
+def test_snapshots_taken_slowly_tell_the_axis() -> None:
+    """Forty samples a second, kept as they are without any filter: no spectrum, and both ends of the axis given."""
+    signal = np.random.default_rng(8).standard_normal((1, 20 * RATE))
+    from scipy.signal import butter, sosfiltfilt
+
+    signal = 0.05 * sosfiltfilt(butter(4, 1000, fs=RATE, output="sos"), signal)
+    slow = recorded([140.0], signals=signal, seconds=20.0, snr_db=40.0)[:, ::400]
+    located = quietly(slow, PUCK, 40, method="snapshots", talkers=1)
+    (talker,) = located.talkers
+    ends = np.degrees([talker.azimuth, talker.candidates[-1][0]])
+    assert sorted(ends) == [pytest.approx(-40.0, abs=3.0), pytest.approx(140.0, abs=3.0)]
+    assert "not from which end" in str(located.ambiguity) and str(located.ambiguity) in said(located)
+    assert talker.elevation_std > 0.5
+    with pytest.raises(UnsolvableError, match="at 40 Hz there are no spectra of voices to locate by; take the method"):
+        locate_array(slow, PUCK, 40)
+
+
+def test_a_near_talker_taken_as_far_is_owned_up_to() -> None:
+    """Without a distance the deviations cover what bent waves do; with it they need not."""
+    azimuths = np.radians([-75.0, -15.0])
+    paths = paths_from_bearings(PUCK, azimuths, 0.0, 1.0)
+    signals = np.stack([speech(VOICES[k], 4.0) for k in range(2)])
+    mixture = delayed(signals, paths, RATE).sum(axis=0)
+    mixture += 5e-4 * np.random.default_rng(1).standard_normal(mixture.shape)
+    far, near = (quietly(mixture, PUCK, RATE, distance_m=d) for d in (None, 1.0))
+    for located in (far, near):
+        for talker, truth in zip(located.talkers, azimuths, strict=True):
+            assert abs(talker.azimuth - truth) < 3.0 * talker.azimuth_std
+    assert max(t.azimuth_std for t in near.talkers) < max(t.azimuth_std for t in far.talkers)
+
+
+def test_distances_of_the_scene_are_kept_apart() -> None:
+    talkers = [Talker("a", None, distance_m=0.8), Talker("b", None, distance_m=1.6)]
+    scene = Scene.from_arrays(recorded([-50.0, 60.0]), PUCK, talkers, sample_rate=RATE)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", UnmixWarning)
+        located = locate(scene)
+    assert [t.distance_m for t in located.talkers] == [0.8, 1.6]
+
+
+def test_the_ring_holds_the_horizon() -> None:
+    for method in ("mixture", "srp"):
+        located = quietly(recorded([40.0], elevations_deg=20.0), PUCK, RATE, talkers=1, region="ring", method=method)
+        assert located.talkers[0].elevation == pytest.approx(0.0, abs=1e-6)
+        assert apart_deg(located.talkers[0].azimuth, np.radians(40.0)) < 1.5
+
+
 def test_silence_has_no_talker_and_says_why() -> None:
     for samples in (np.zeros((7, 2 * RATE)), 1e-3 * np.random.default_rng(0).standard_normal((7, 4 * RATE))):
         with pytest.warns(UnmixWarning, match="silence or steady noise|too little speech"):

@@ -65,7 +65,7 @@ def bearing_estimate(
         along = x / length
         x = x / (1.0 - (PULL + PULL_FEW / channels) * excess)
         spread = spread + (_PULL_SCATTER * excess * min(length, 1.0)) ** 2 * np.outer(along, along)
-        radial = float(np.sqrt(along @ spread @ along))
+        radial = float(np.sqrt(max(0.0, float(along @ spread @ along))))
         if np.linalg.norm(x) > 1.0 - _HORIZON_STD * radial or space.region == "ring":
             x = along
     u = space.lift(x)

@@ -105,8 +105,7 @@ def _at_rest(
 ) -> tuple[list[FoundTalker], TalkerCount]:
     found = sorted((_with_peak(c, scan) for c in merge_sections(scan.sections)), key=talker_margin, reverse=True)
     counted = count_talkers(found, asked)
-    bins = scan.kept
-    if counted.used == 0 or (bins is None and scan.peaks is None):
+    if counted.used == 0 or (not scan.parts and scan.peaks is None):
         return [], counted
     plain = [c for c in found if c.weight > 0.0][: counted.used]
     if len(plain) < counted.used:
@@ -114,8 +113,8 @@ def _at_rest(
     start = np.array([c.x for c in plain])
     if scan.peaks is not None:
         refined = refine_peaks(scan.peaks.chosen(), start)
-    elif bins is not None:
-        refined = refine(bins, scan.parts, start, space, steering, distance_m=distance_m)
+    else:
+        refined = refine(scan.thinned(), start, space, steering, distance_m=distance_m)
     talkers = []
     for k, cluster in enumerate(plain):
         doubtful = asked is not None and k >= max(counted.highest, 1)

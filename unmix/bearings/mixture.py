@@ -131,8 +131,7 @@ def clusters(weights: Floats, space: SearchSpace, *, limit: int = 8) -> list[Clu
 
 
 def refine(
-    bins: Bins,
-    rotations: list[tuple[Bins, Floats]] | None,
+    parts: list[tuple[Bins, Floats]],
     start: Floats,
     space: SearchSpace,
     steering: Steering,
@@ -142,9 +141,8 @@ def refine(
 ) -> Refined:
     """Move directions ``start`` (talkers, rank) off the grid, all bins shared out among them and nobody.
 
-    rotations  bins by orientation of the array with its rotation (3, 3), when it turns; ``bins`` is then their join
+    parts  bins by orientation of the array, with its rotation (3, 3), array to world
     """
-    parts = rotations if rotations is not None else [(bins, np.eye(3))]
     x = start.copy()
     weight = np.full(len(x), 0.9 / max(len(x), 1))
     bound = 0.15

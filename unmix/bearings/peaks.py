@@ -27,34 +27,43 @@ _PLAINEST = 0.5
 _LOUD_DB = 10.0
 _FEWEST = 4
 _WIDTH = 0.12
+_BATCH = 4096
 
 
 @dataclass(frozen=True)
 class FramePeaks:
-    """time_s (frames,), projections x (frames, rank), how plain (frames,) and the frames' power (frames,)."""
+    """time_s (frames,), projections x (frames, rank), how plain (frames,) and the frames' power (frames,).
+
+    all_count  whether frames are too long for levels to tell speech from pauses
+    """
 
     time_s: Floats
     x: Floats
     plain: Floats
     power: Floats
+    all_count: bool = False
 
     @classmethod
     def join(cls, parts: list[FramePeaks]) -> FramePeaks:
         """Peaks of several stretches as one."""
-        return cls(*(np.concatenate([getattr(p, n) for p in parts]) for n in ("time_s", "x", "plain", "power")))
+        time_s, x, plain, power = (
+            np.concatenate([getattr(p, n) for p in parts]) for n in ("time_s", "x", "plain", "power")
+        )
+        return cls(time_s, x, plain, power)
 
     def chosen(self) -> FramePeaks:
         """The plainest half of the frames that are louder than the noise floor by 10 dB."""
-        if not len(self.power):
+        if self.all_count or not len(self.power):
             return self
         floor = max(float(np.quantile(self.power, 0.05)), 1e-15)
         loud = self.power > floor * 10.0 ** (_LOUD_DB / 10.0)
         if not loud.any():
-            return self._take(loud)
-        return self._take(loud & (self.plain >= np.quantile(self.plain[loud], 1.0 - _PLAINEST)))
+            return self.take(loud)
+        return self.take(loud & (self.plain >= np.quantile(self.plain[loud], 1.0 - _PLAINEST)))
 
-    def _take(self, index: NDArray[np.bool_]) -> FramePeaks:
-        return FramePeaks(self.time_s[index], self.x[index], self.plain[index], self.power[index])
+    def take(self, index: NDArray[np.bool_] | NDArray[np.intp] | slice) -> FramePeaks:
+        """Some of the frames."""
+        return FramePeaks(self.time_s[index], self.x[index], self.plain[index], self.power[index], self.all_count)
 
 
 def peak_clusters(peaks: FramePeaks, space: SearchSpace, *, sharp: float = 0.0) -> tuple[list[Cluster], Floats]:
@@ -64,9 +73,11 @@ def peak_clusters(peaks: FramePeaks, space: SearchSpace, *, sharp: float = 0.0) 
     """
     if not len(peaks.x):
         return [], np.zeros(len(space.grid))
-    apart = np.linalg.norm(peaks.x[:, None] - space.grid[None], axis=-1)
-    kernel = np.exp(-0.5 * (apart / (0.5 * _WIDTH)) ** 2)
-    histogram = (kernel / np.maximum(kernel.sum(axis=1, keepdims=True), 1e-12)).sum(axis=0)
+    histogram = np.zeros(len(space.grid))
+    for first in range(0, len(peaks.x), _BATCH):
+        apart = np.linalg.norm(peaks.x[first : first + _BATCH, None] - space.grid[None], axis=-1)
+        kernel = np.exp(-0.5 * (apart / (0.5 * _WIDTH)) ** 2)
+        histogram += (kernel / np.maximum(kernel.sum(axis=1, keepdims=True), 1e-12)).sum(axis=0)
     histogram = np.maximum(histogram - sharp * histogram.max(), 0.0)
     histogram /= max(float(histogram.sum()), 1e-12)
     return clusters(histogram, space), histogram
@@ -76,9 +87,10 @@ def peak_detections(peaks: FramePeaks, space: SearchSpace, duration_s: float, ho
     """Detections of stretches of half a second."""
     found = []
     for start in np.arange(0.0, max(duration_s - STRETCH_S, 0.0) + 1e-9, hop_s):
-        here = (peaks.time_s >= start) & (peaks.time_s < start + STRETCH_S)
-        group = peak_clusters(peaks._take(here), space)[0] if here.sum() >= _FEWEST else []
-        strong = [c for c in group if c.weight >= 0.15 and c.weight * here.sum() >= _FEWEST - 1]
+        here = slice(*np.searchsorted(peaks.time_s, (start, start + STRETCH_S)))
+        frames = here.stop - here.start
+        group = peak_clusters(peaks.take(here), space)[0] if frames >= _FEWEST else []
+        strong = [c for c in group if c.weight >= 0.15 and c.weight * frames >= _FEWEST - 1]
         x = np.array([c.x for c in strong]).reshape(-1, space.rank)
         found.append(Detections(float(start) + 0.5 * STRETCH_S, x, np.array([c.weight for c in strong])))
     return found
@@ -107,7 +119,8 @@ def peak_shares(peaks: FramePeaks, x: Floats, slice_s: Floats, step_s: float) ->
     """Share of each slice's peaks that lie near each talker: x (slices, talkers, rank) to (slices, talkers)."""
     share = np.zeros(x.shape[:2])
     for i, middle in enumerate(slice_s):
-        here = peaks.x[np.abs(peaks.time_s - middle) <= 0.5 * step_s]
+        first, stop = np.searchsorted(peaks.time_s, (middle - 0.5 * step_s, middle + 0.5 * step_s))
+        here = peaks.x[first:stop]
         if len(here):
             apart = np.linalg.norm(here[:, None] - x[i], axis=-1)
             own = (apart < 0.6 * SAME_TALKER) & (apart == apart.min(axis=1, keepdims=True))

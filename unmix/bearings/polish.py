@@ -3,6 +3,9 @@
 Without reverberation the fit of `fit` is several times as exact as the mixture and comes close to the Cramer-Rao bound.
 In a room it is wrong, as what the room adds is no noise; so it is taken only where the mixture's bins show next to
 nothing outside the talkers' directions, and where both agree.
+
+At such exactness it matters how waves bend. Without a distance they are taken as plane, and what a distance of `NEAR_M`
+would move the bearings by is added to their deviations.
 """
 
 from __future__ import annotations
@@ -22,6 +25,8 @@ __all__ = ["polished"]
 Floats = NDArray[np.float64]
 
 CLEAN_ENOUGH = 0.18
+NEAR_M = 1.0
+"""Nearer than this few talkers sit."""
 _AGREEMENT = 0.05
 
 
@@ -48,4 +53,9 @@ def polished(
     fit = fit_bearings(block, array, start, space, temperature_c=temperature_c, distance_m=distance_m)
     if not always and (not fit.converged or np.linalg.norm(fit.x - start, axis=1).max() > _AGREEMENT):
         return found, None
-    return [replace(t, x=fit.x[[k]], covariance=fit.of_talker(k)) for k, t in enumerate(found)], fit
+    bent = np.zeros_like(fit.x)
+    if distance_m is None:
+        bent = fit_bearings(block, array, fit.x, space, temperature_c=temperature_c, distance_m=NEAR_M).x - fit.x
+    return [
+        replace(t, x=fit.x[[k]], covariance=fit.of_talker(k) + np.outer(bent[k], bent[k])) for k, t in enumerate(found)
+    ], fit

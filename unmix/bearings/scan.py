@@ -29,6 +29,8 @@ SLICE_S = 0.25
 SECTION_S = 30.0
 SECTION_BINS = 8000
 KEPT_BINS = 60_000
+LEAST_PER_SLICE = 40
+"""Bins kept of each slice at least, so that who is active can be told in recordings of any length."""
 FEWEST_BINS = 20
 """A stretch with fewer chosen bins holds nobody; a recording too."""
 DETECTION_SHARE = 0.08
@@ -59,10 +61,10 @@ class Scan:
     bins: int
     peaks: FramePeaks | None = None
 
-    @property
-    def kept(self) -> Bins | None:
-        """All kept bins as one; None when there are none."""
-        return join([b for b, _ in self.parts]) if self.parts else None
+    def thinned(self) -> list[tuple[Bins, Floats]]:
+        """No more than `KEPT_BINS` of the kept bins, evenly over time, by orientation as in `parts`."""
+        step = max(1, -(-sum(len(b) for b, _ in self.parts) // KEPT_BINS))
+        return [(b.take(np.arange(0, len(b), step)), rotation) for b, rotation in self.parts]
 
 
 @dataclass
@@ -92,7 +94,7 @@ class Scanner:
         self._section_end = self._section_s
         per_section = self._section_s / SLICE_S
         kept = min(SECTION_BINS / per_section, KEPT_BINS * SLICE_S / max(self.duration_s, SLICE_S))
-        self._per_slice = (max(1, round(SECTION_BINS / per_section)), max(1, round(kept)))
+        self._per_slice = (max(1, round(SECTION_BINS / per_section)), max(LEAST_PER_SLICE, round(kept)))
         self._rng = np.random.default_rng(0)
 
     def table(self, bins: Bins, rotation: Floats | None = None) -> Singles:
@@ -198,15 +200,16 @@ def _feed(scanner: Scanner, held: Bins, at: int, until: int) -> tuple[int, Bins]
 
 def _grouped(parts: list[tuple[Bins, Floats]]) -> list[tuple[Bins, Floats]]:
     """Bins of slices with the same orientation put together."""
-    groups: list[tuple[list[Bins], Floats]] = []
+    members: list[list[Bins]] = []
+    turns = np.zeros((0, 3, 3))
     for bins, rotation in parts:
-        for members, turn in groups:
-            if _angle(turn, rotation) < _SAME_TURN:
-                members.append(bins)
-                break
+        near = np.flatnonzero(np.linalg.norm(turns - rotation, axis=(1, 2)) < np.sqrt(2.0) * _SAME_TURN)
+        if len(near):
+            members[int(near[0])].append(bins)
         else:
-            groups.append(([bins], rotation))
-    return [(join(members), rotation) for members, rotation in groups]
+            members.append([bins])
+            turns = np.concatenate([turns, rotation[None]])
+    return [(join(group), rotation) for group, rotation in zip(members, turns, strict=True)]
 
 
 def _angle(a: Floats, b: Floats) -> float:

@@ -1,7 +1,8 @@
 """One pass over a recording with a method that finds the best direction of every frame.
 
 `srp` steers, `snapshots` fits the free expansion to the frame's samples; of the two opposite directions that snapshots
-leave, the one nearer to the steered one is taken.
+leave, the one nearer to the steered one is taken. A recording too slow for spectra of voices (`SLOWEST_HZ`) is left to
+snapshots alone, and both directions stay possible.
 """
 
 from __future__ import annotations
@@ -19,11 +20,19 @@ from unmix.bearings.scan import SLICE_S, Rotations, Scan
 from unmix.bearings.snapshots import SnapshotModel, snapshot_bearing, snapshot_model
 from unmix.bearings.space import SearchSpace
 from unmix.bearings.srp import srp_peaks
+from unmix.bearings.tracks import Detections
 
-__all__ = ["PeakMethod", "scan_peaks"]
+__all__ = ["SLOWEST_HZ", "PeakMethod", "scan_peaks", "scan_slowly"]
 
 Floats = NDArray[np.float64]
 PeakMethod = Literal["srp", "snapshots"]
+
+SLOWEST_HZ = 2000
+"""Sample rate below which a recording is a row of snapshots and no sound."""
+_GROUP = 16
+_GROUPS_AT_ONCE = 8
+# Delays count in samples of this rate where the recording's own says nothing about voices.
+_UNIT_HZ = 16000
 
 # Bars of the histogram below this share of the highest are frames scattered about by the room.
 _SCATTERED = 0.15
@@ -61,8 +70,48 @@ def scan_peaks(
     chosen = peaks.chosen()
     section, histogram = peak_clusters(chosen, space, sharp=_SCATTERED)
     detections = peak_detections(chosen, space, duration_s, SLICE_S)
-    loud = np.array([np.any(np.abs(chosen.time_s - s) <= 0.5 * SLICE_S) for s in slices], dtype=np.float64)
+    edges = np.searchsorted(chosen.time_s, [slices - 0.5 * SLICE_S, slices + 0.5 * SLICE_S])
+    loud = (edges[1] > edges[0]).astype(np.float64)
     return Scan([section], detections, [], histogram, slices, loud, len(chosen.x), peaks)
+
+
+def scan_slowly(
+    chunks: Iterable[Floats],
+    array: Array,
+    space: SearchSpace,
+    sample_rate: int,
+    duration_s: float,
+    *,
+    distance_m: float | None = None,
+    temperature_c: float = 20.0,
+) -> Scan:
+    """Look at snapshots taken slowly, sixteen at a time; no spectrum, and nothing said about which end of an axis."""
+    model = snapshot_model(array, space, _UNIT_HZ, temperature_c=temperature_c, distance_m=distance_m)
+    gain = (array.polarity * 10.0 ** (-array.gain_db / 20.0))[:, None]
+    rows = []
+    held = np.zeros((array.channels, 0))
+    at = 0
+    for chunk in chunks:
+        held = np.concatenate([held, gain * chunk], axis=1)
+        while held.shape[1] >= _GROUP:
+            y, held = held[:, :_GROUP], held[:, _GROUP:]
+            found = snapshot_bearing(model, y @ y.T, _GROUP, rounds=4)
+            plain = 1.0 - found.score.min() / max(float(found.score.mean()), 1e-300)
+            rows.append(((at + 0.5 * _GROUP) / sample_rate, found.x, plain, float(np.mean(y**2))))
+            at += _GROUP
+    rows = [row for row in rows if row[3] > 0.0]
+    slices = np.arange(0.5 * SLICE_S, duration_s, SLICE_S)
+    if not rows:
+        return Scan([], [], [], np.zeros(len(space.grid)), slices, np.zeros(len(slices)), 0)
+    time_s, x, plain, power = (np.array(column) for column in zip(*rows, strict=True))
+    peaks = FramePeaks(time_s, x, plain, power, all_count=True)
+    section, histogram = peak_clusters(peaks, space, sharp=_SCATTERED)
+    detections = []
+    for part in np.array_split(np.arange(len(rows)), max(1, len(rows) // _GROUPS_AT_ONCE)):
+        strong = [c for c in peak_clusters(peaks.take(part), space)[0] if c.weight >= 0.3]
+        x = np.array([c.x for c in strong]).reshape(-1, space.rank)
+        detections.append(Detections(float(peaks.time_s[part].mean()), x, np.array([c.weight for c in strong])))
+    return Scan([section], detections, [], histogram, slices, np.ones(len(slices)), len(rows), peaks)
 
 
 def _pieces(chunks: Iterable[Floats], steering: Steering, length_s: float) -> Iterator[tuple[Floats, float]]:

@@ -25,9 +25,9 @@ from unmix.bearings.fit import FrameCovariance
 from unmix.bearings.orientation import estimate_clock_offset, orientation_notes
 from unmix.bearings.polish import polished
 from unmix.bearings.scan import FEWEST_BINS, SLICE_S, Rotations, Scan, scan
-from unmix.bearings.scan_peaks import scan_peaks
+from unmix.bearings.scan_peaks import SLOWEST_HZ, scan_peaks, scan_slowly
 from unmix.bearings.space import Region, SearchSpace, search_space
-from unmix.errors import InputError, UnmixWarning
+from unmix.errors import InputError, UnmixWarning, UnsolvableError
 from unmix.jobs.located import Located, LocatedTalker, ScoreMap
 from unmix.jobs.naming import name_talkers
 from unmix.scene import Scene, Talker
@@ -42,6 +42,12 @@ Method = Literal["mixture", "srp", "snapshots", "fit"]
 METHODS: tuple[Method, ...] = ("mixture", "srp", "snapshots", "fit")
 
 SHORTEST_S = 0.1
+_SLOW = (
+    "snapshots taken slowly: they tell the axis sound came along, not from which end; one is taken, the opposite "
+    "direction is listed as a candidate"
+)
+# Root mean square elevation of directions spread evenly over a hemisphere: sqrt(pi^2/4 - 2).
+_ANY_ELEVATION = 0.684
 _CHUNK_S = 2.0
 
 
@@ -63,6 +69,11 @@ class _Task:
     distance_m: float | None
     known: tuple[Talker, ...] = ()
     progress: Progress | None = None
+
+    @property
+    def slow(self) -> bool:
+        """Whether the recording is a row of snapshots, too slow for spectra of voices."""
+        return self.sample_rate < SLOWEST_HZ
 
     def rotations(self, offset_s: float) -> Rotations | None:
         """Rotations, array to world, at times of the recording; None when the array rests."""
@@ -120,7 +131,9 @@ def clock_offset(scene: Scene) -> tuple[float, tuple[str, ...]]:
 def _task_of(
     scene: Scene, *, method: Method = "mixture", region: Region = "sphere", progress: Progress | None = None
 ) -> _Task:
-    distances = {t.distance_m for t in scene.talkers}
+    distances = [t.distance_m for t in scene.talkers if t.distance_m is not None]
+    # Waves bend by the inverse of the distance: its mean serves for all while nobody is told apart.
+    known = bool(distances) and len(distances) == len(scene.talkers)
     return _Task(
         chunks=scene.recording.chunks,
         duration_s=scene.recording.duration_s,
@@ -133,7 +146,7 @@ def _task_of(
         orientation=scene.orientation,
         clock_offset_s=scene.clock_offset_s,
         temperature_c=scene.temperature_c,
-        distance_m=distances.pop() if len(distances) == 1 else None,
+        distance_m=len(distances) / sum(1.0 / d for d in distances) if known else None,
         known=scene.talkers,
         progress=progress,
     )
@@ -195,13 +208,14 @@ def _locate(task: _Task) -> Located:
     seen, found, count, shares = _find(task, space, rotations)
     talkers = [_describe(t, k, shares, space, task) for k, t in enumerate(found)]
     named, naming_notes = name_talkers(talkers, task.known, task.duration_s)
-    lines = (*notes, *_warnings(seen, space, named, count, task.asked), *naming_notes)
+    lines = (*notes, *_warnings(seen, space, named, count, task), *naming_notes)
+    ambiguity = _SLOW if task.slow else space.ambiguity
     return Located(
         talkers=tuple(named),
         count=count,
         method=task.method,
         frame="array" if rotations is None else "world",
-        ambiguity=space.ambiguity,
+        ambiguity=ambiguity,
         warnings=lines,
         duration_s=task.duration_s,
         score=_score_map(seen, space),
@@ -218,6 +232,11 @@ def _check(task: _Task) -> None:
         raise InputError(
             f"{task.where}: the recording lasts {task.duration_s * 1e3:.0f} ms; at least {SHORTEST_S * 1e3:.0f} ms are "
             "needed"
+        )
+    if task.slow and (task.method != "snapshots" or task.orientation is not None):
+        raise UnsolvableError(
+            f"{task.where}: at {task.sample_rate} Hz there are no spectra of voices to locate by; "
+            + ("record faster to use an orientation" if task.method == "snapshots" else "take the method snapshots")
         )
     if task.asked is not None and not 0 <= task.asked <= MOST_TALKERS:
         raise InputError(f"{task.where}: {task.asked} talkers asked for; 0 to {MOST_TALKERS} can be told apart")
@@ -248,6 +267,8 @@ def _find(
     task: _Task, space: SearchSpace, rotations: Rotations | None
 ) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
     """The pass over the recording, talkers and their number, and whose bins are whose."""
+    if task.slow:
+        return _find_slowly(task, space)
     mixture = task.method in ("mixture", "fit")
     steering = make_steering(
         task.array, task.sample_rate, temperature_c=task.temperature_c, spacing=space.spacing, whiten=mixture
@@ -280,6 +301,24 @@ def _find(
         distance_m=task.distance_m,
         always=task.method == "fit",
     )
+    return seen, found, count, shares
+
+
+def _find_slowly(task: _Task, space: SearchSpace) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
+    """As `_find`, from snapshots alone."""
+    seen = scan_slowly(
+        _watched(task, None),
+        task.array,
+        space,
+        task.sample_rate,
+        task.duration_s,
+        distance_m=task.distance_m,
+        temperature_c=task.temperature_c,
+    )
+    # Nothing is steered: the array's response is never asked for.
+    steering = make_steering(task.array, 16000, temperature_c=task.temperature_c, whiten=False)
+    found, count = find_talkers(seen, space, steering, asked=task.asked)
+    shares = talker_shares(seen, space, steering, _projections(found, space.rank))
     return seen, found, count, shares
 
 
@@ -316,13 +355,18 @@ def _describe(t: FoundTalker, index: int, shares: Shares, space: SearchSpace, ta
     else:
         azimuth, elevation = np.full(2, middle.azimuth), np.full(2, middle.elevation)
         time_s = np.array([0.0, task.duration_s])
+    candidates = middle.candidates
+    if task.slow:
+        candidates += ((float(np.angle(-np.exp(1j * middle.azimuth))), -middle.elevation),)
+    # Scaled delays are no other model to snapshots, and scaled delays are all that a flat array has of elevation.
+    unknown = task.method == "snapshots" and space.rank == 2
     return LocatedTalker(
         name="",
         azimuth=middle.azimuth,
         elevation=middle.elevation,
         azimuth_std=middle.azimuth_std,
-        elevation_std=middle.elevation_std,
-        candidates=middle.candidates,
+        elevation_std=_ANY_ELEVATION if unknown else middle.elevation_std,
+        candidates=candidates,
         track=Track(time_s, azimuth, elevation, np.full(len(time_s), np.nan if distance_m is None else distance_m)),
         moving=t.moving,
         active_s=active_stretches(shares.slice_s, shares.active(index), SLICE_S),
@@ -346,9 +390,10 @@ def _detected(seen: Scan, space: SearchSpace) -> Floats:
 
 
 def _warnings(
-    seen: Scan, space: SearchSpace, talkers: list[LocatedTalker], count: TalkerCount, asked: int | None
+    seen: Scan, space: SearchSpace, talkers: list[LocatedTalker], count: TalkerCount, task: _Task
 ) -> Iterator[str]:
     """What the user should know, one line each."""
+    asked = task.asked
     if not np.any(seen.loud > 0.0):
         yield "nothing but silence or steady noise in the recording: no talker can be found; check channels and levels"
     elif seen.bins < FEWEST_BINS:
@@ -365,5 +410,9 @@ def _warnings(
         yield f"{asked} talkers were asked for, and the recording speaks for {count.estimated}: the plainest were taken"
     if asked is None and count.reason is not None:
         yield count.reason
-    if space.ambiguity is not None and talkers:
-        yield space.ambiguity
+    ambiguity = _SLOW if task.slow else space.ambiguity
+    if ambiguity is not None and talkers:
+        yield ambiguity
+    for talker in task.known:
+        if not talker.located and talker.elevation:
+            yield f"{talker.name}: `elevation_deg` without `azimuth_deg` is no bearing; both were located"

@@ -51,7 +51,7 @@ def name_talkers(
     missing = [known[i].name for i in range(len(known)) if i not in chosen]
     if missing:
         notes.append(f"no bearing was found for {', '.join(missing)}")
-    named = [replace(chosen[i], name=known[i].name) for i in sorted(chosen)]
+    named = [_bearing_of(known[i], chosen[i]) for i in sorted(chosen)]
     taken = {t.name for t in known}
     number = 1
     for talker in left[len(rest) :]:
@@ -60,6 +60,14 @@ def name_talkers(
         taken.add(f"talker-{number}")
         named.append(replace(talker, name=f"talker-{number}"))
     return named, notes
+
+
+def _bearing_of(known: Talker, found: LocatedTalker) -> LocatedTalker:
+    """The found talker under the name and at the distance that the scene gives."""
+    if known.distance_m is None or found.distance_m is None:
+        return replace(found, name=known.name)
+    track = replace(found.track, distance_m=np.full(len(found.track.time_s), known.distance_m))
+    return replace(found, name=known.name, distance_m=known.distance_m, track=track)
 
 
 def _assign(chosen: dict[int, LocatedTalker], left: list[LocatedTalker], rows: list[int], cost: Floats) -> None:

@@ -24,7 +24,7 @@ from unmix.batch.results import Written, figure_columns, write_results
 from unmix.batch.scores import Scores, read_scores
 from unmix.batch.store import Store
 from unmix.errors import InputError
-from unmix.files import write_json
+from unmix.files import path_from, write_json
 from unmix.metrics.grades import FIGURES
 
 __all__ = ["BatchResult", "Engine", "Progress", "forecast_batch", "missing", "run_batch"]
@@ -73,7 +73,7 @@ class Progress:
 
 @dataclass(frozen=True)
 class BatchResult:
-    """What a batch came to."""
+    """What a batch came to; `scene_files` are seen from its folder, `settings` are the variants' by name."""
 
     plan: Plan
     folder: Path
@@ -83,6 +83,8 @@ class BatchResult:
     analysis: Analysis
     comparison: Comparison | None
     seconds: float
+    scene_files: dict[str, str] = field(default_factory=dict)
+    settings: dict[str, dict[str, Any]] = field(default_factory=dict)
 
     @property
     def in_part(self) -> bool:
@@ -102,6 +104,8 @@ class BatchResult:
             "missing": self.written.missing,
             "files": [path.name for path in self.written.files],
             "metrics": [{"name": m.name, "column": m.column} for m in self.analysis.metrics],
+            "scene_files": self.scene_files,
+            "settings": self.settings,
             **self.analysis.to_dict(),
             "comparison": None if self.comparison is None else self.comparison.to_dict(),
         }
@@ -156,10 +160,25 @@ def run_batch(
     )
     comparison = None if earlier is None else compare(out, earlier, metrics, seed=plan.seed)
     result = BatchResult(
-        plan, Path(out), len(items), len(pending), written, analysis, comparison, time.monotonic() - began
+        plan,
+        Path(out),
+        len(items),
+        len(pending),
+        written,
+        analysis,
+        comparison,
+        time.monotonic() - began,
+        scene_files=_scene_files(items, store),
+        settings={variant.name: variant.to_dict() for variant in items.variants},
     )
     write_json(Path(out) / "batch.json", result.to_dict(), overwrite=True)
     return result
+
+
+def _scene_files(items: Items, store: Store) -> dict[str, str]:
+    """Where each scene's file lies, seen from the batch's folder; scenes that were not rendered are left out."""
+    found = ((scene.name, store.scene_path(scene)) for scene in items.scenes)
+    return {name: str(path_from(store.folder, path)) for name, path in found if path is not None}
 
 
 def forecast_batch(plan_file: str | Path, out: str | Path | None, *, workers: int | None = None) -> Forecast:

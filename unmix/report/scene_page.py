@@ -20,7 +20,7 @@ from unmix.report.scene_sound import MICROPHONE, OUTPUT, SceneSound, picture_of,
 from unmix.report.spectrogram import RANGE_DB
 from unmix.report.words import Verdict, figure_text, talker_verdict, understandable
 
-__all__ = ["REPORT", "SOUND_MB", "UNGRADED", "scene_report", "write_scene_report"]
+__all__ = ["REPORT", "SOUND_MB", "UNGRADED", "player_of", "scene_report", "scene_views", "write_scene_report"]
 
 REPORT = "report.html"
 SOUND_MB = 5.0
@@ -66,7 +66,7 @@ def scene_report(
     sound = scene_sound(material, megabytes=sound_mb)
     verdicts = _verdicts(material)
     pictures, colours = picture_of(sound) if sound is not None else ([], "")
-    player = _player(sound) if sound is not None and audio else None
+    player = player_of(sound) if sound is not None and audio else None
     return render_page(
         "scene.html",
         ["player.js"] if player is not None else [],
@@ -80,7 +80,7 @@ def scene_report(
         pictures=pictures,
         colours=colours,
         sound=player,
-        **_views(material, sound),
+        views=scene_views(material, sound),
         **_drawings(material, verdicts),
         figures=_figures(material.grades) if material.grades is not None else None,
         done=_done(material),
@@ -152,8 +152,11 @@ def _warnings(material: SceneMaterial, sound: SceneSound | None) -> list[str]:
     return list(dict.fromkeys(lines))
 
 
-def _player(sound: SceneSound) -> dict[str, Any]:
-    """The signals with their FLAC, grouped by talker for the radio buttons."""
+def player_of(sound: SceneSound, key: str = "") -> dict[str, Any]:
+    """The signals with their FLAC, grouped by talker for the radio buttons.
+
+    key  tells several players of a page apart
+    """
     signals = []
     groups: dict[str, list[dict[str, Any]]] = {}
     for number, (heard, coded) in enumerate(zip(sound.heard, sound.encoded(), strict=True), start=1):
@@ -170,11 +173,12 @@ def _player(sound: SceneSound) -> dict[str, Any]:
         "signals": signals,
         "groups": [{"name": name, "signals": members} for name, members in groups.items()],
         "seconds": sound.seconds,
+        "key": key,
         "described": described,
     }
 
 
-def _views(material: SceneMaterial, sound: SceneSound | None) -> dict[str, Any]:
+def scene_views(material: SceneMaterial, sound: SceneSound | None) -> dict[str, Any]:
     """Time line and spectrograms, microphone, output and reference side by side for each talker."""
     if sound is None:
         empty: dict[str, Any] = {"timeline": [], "spectrograms": [], "columns": 3, "excerpt": "", "activity_from": ""}

@@ -202,7 +202,8 @@ function clockText(seconds) {
   return `${minutes}:${(seconds - 60 * minutes).toFixed(1).padStart(4, "0")}`;
 }
 
-/* Binds a player to the controls inside `root`; `lanes` are pictures with time to the right. */
+/* Binds a player to the controls and pictures inside `root`. Pictures have time to the right, from data-from to data-to.
+   Keys work while options.active() is true: several players may share a page. */
 function bindTransport(player, root, options = {}) {
   const find = (selector) => root.querySelector(selector);
   const startOfDay = options.startS || 0;
@@ -210,7 +211,8 @@ function bindTransport(player, root, options = {}) {
   const slider = find("[data-position]");
   const clock = find("[data-clock]");
   const status = find("[data-status]");
-  const lanes = [...document.querySelectorAll(options.lanes || "[data-lane]")];
+  const lanes = [...root.querySelectorAll("[data-lane]")];
+  const active = options.active || (() => true);
   const tell = (text) => { status.textContent = text; };
   let from = null;
   let until = null;
@@ -229,7 +231,7 @@ function bindTransport(player, root, options = {}) {
   root.querySelectorAll("[data-signal]").forEach((radio) => {
     radio.addEventListener("change", () => player.select(radio.value));
   });
-  document.querySelectorAll("[data-pick]").forEach((button) => {
+  root.querySelectorAll("[data-pick]").forEach((button) => {
     button.addEventListener("click", () => player.select(button.dataset.pick));
   });
   const matched = find("[data-matched]");
@@ -277,7 +279,7 @@ function bindTransport(player, root, options = {}) {
 
   document.addEventListener("keydown", (event) => {
     const typing = event.target.closest("input:not([type=radio]):not([type=checkbox]), select, textarea, [contenteditable]");
-    if (event.altKey || event.ctrlKey || event.metaKey || typing) return;
+    if (!active() || event.altKey || event.ctrlKey || event.metaKey || typing) return;
     const onButton = event.target.closest("button, a, summary, input");
     const keys = {
       " ": () => startStop(), k: () => startStop(),
@@ -312,7 +314,7 @@ function bindTransport(player, root, options = {}) {
     playButton.textContent = player.playing ? "Pause" : "Play";
     loop.checked = player.looping;
     root.querySelectorAll("[data-signal]").forEach((radio) => { radio.checked = radio.value === player.current; });
-    document.querySelectorAll("[data-pick]").forEach((button) => {
+    root.querySelectorAll("[data-pick]").forEach((button) => {
       button.setAttribute("aria-pressed", String(button.dataset.pick === player.current));
     });
     lanes.forEach((lane) => {

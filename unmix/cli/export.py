@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
 __all__ = ["command"]
 
-WORDS: list[Any] = ["float32", "s24", "s16", "s12"]
+WORDS: list[Any] = ["float32", "s24", "s16", "s12", "s8"]
 
 
 @click.command("export")
@@ -44,10 +44,20 @@ WORDS: list[Any] = ["float32", "s24", "s16", "s12"]
 @click.option("--loss-db", type=float, default=0.5, show_default=True, help="Loss in SIR that tap length may cost.")
 @click.option("--latency-ms", type=click.FloatRange(0.0, 1000.0), help="Most that filters may see of the future.")
 @click.option(
-    "--word", "words", multiple=True, type=click.Choice(WORDS), help="Word length; repeat it (default: all of them)."
+    "--word", "words", multiple=True, type=click.Choice(WORDS), help="Word length; repeat it (default: all but s8)."
 )
 @click.option("--grid-deg", type=float, metavar="DEG", help="Also a table of filters, one talker going round in steps.")
 @click.option("--grid-talker", metavar="NAME", help="Who goes round (default: the first).")
+@click.option(
+    "--plot", type=existing_file, metavar="FILE", help="Also a picture: presets' quality against latency, work, words."
+)
+@click.option(
+    "--plot-t20-s",
+    type=click.FloatRange(0.0, 1.5),
+    default=0.3,
+    show_default=True,
+    help="Reverberation time of the picture's room; 0: none.",
+)
 @overwrite_option
 @json_option
 def command(**options: Any) -> None:
@@ -57,11 +67,21 @@ def command(**options: Any) -> None:
     talker and --rate. Tap length follows from --loss-db. Every figure is by formula and measured on speech, without a
     room; they stand in export.json, which --json prints.
     """
-    exported = _export(**{name: value for name, value in options.items() if name != "as_json"})
-    if options["as_json"]:
-        print_json(exported.to_dict())
+    plot, t20_s, as_json = (options.pop(name) for name in ("plot", "plot_t20_s", "as_json"))
+    if plot is not None:
+        _check_picture(plot, options["overwrite"])
+    exported = _export(**options)
+    tree = exported.to_dict()
+    if plot is not None:
+        tree["tradeoffs"] = _picture(
+            exported, options["source"], options["bearings"], plot, t20_s, options["overwrite"]
+        )
+    if as_json:
+        print_json(tree)
         return
     _print(exported, options["out"])
+    if plot is not None:
+        say(f"Picture of the presets on this array: {plot}")
 
 
 def _export(
@@ -99,9 +119,33 @@ def _export(
             temperature_c=20.0 if scene is None else scene.temperature_c,
             noise=None if scene is None else noise_spectra(scene),
             loss_db=loss_db, latency_s=None if latency_ms is None else 1e-3 * latency_ms,
-            words=words or WORDS, grid_deg=grid_deg, grid_talker=names.index(grid_talker) if grid_talker else 0,
+            words=words or WORDS[:4], grid_deg=grid_deg, grid_talker=names.index(grid_talker) if grid_talker else 0,
             overwrite=overwrite, progress=report,
         )  # fmt: skip
+
+
+def _check_picture(plot: Path, overwrite: bool) -> None:
+    from unmix.files import refuse_to_replace
+    from unmix.report.figures import check_format
+
+    check_format(plot)
+    refuse_to_replace(plot, overwrite=overwrite)
+
+
+def _picture(
+    exported: Exported, source: Path, bearings: Sequence[str], plot: Path, t20_s: float, overwrite: bool
+) -> dict[str, Any]:
+    """Measure the presets on the array and draw them."""
+    from unmix.export.tradeoffs import measure_tradeoffs
+    from unmix.report.figures import save_figure, tradeoff_figure
+
+    array, talkers, _ = who_and_where(source, bearings)
+    with progress_bar("measuring presets") as report:
+        found = measure_tradeoffs(
+            array, talkers, sample_rate=exported.bank.sample_rate, t20_s=t20_s or None, progress=report
+        )
+    save_figure(tradeoff_figure(found), plot, overwrite=overwrite)
+    return found.to_dict()
 
 
 def _print(exported: Exported, out: Path) -> None:

@@ -38,8 +38,8 @@ FIELDS = {
     "reference_channel": "the microphone at which talkers are received",
     "variant": "name of the variant",
     "float32": "(talkers, channels, length) filters in single precision",
-    "s24, s16, s12": "(talkers, channels, length) fixed point: a tap is value * 2^-shift",
-    "shift_s24, shift_s16, shift_s12": "(talkers, channels) shifts",
+    "s24, s16, s12, s8": "(talkers, channels, length) fixed point: a tap is value * 2^-shift",
+    "shift_s24, shift_s16, shift_s12, shift_s8": "(talkers, channels) shifts",
 }
 """Fields of the NumPy archive, which holds this text as JSON under `fields`."""
 
@@ -51,7 +51,7 @@ GRID_FIELDS = {
     "sample_rate": "hertz",
 }
 
-_C_TYPES: dict[Word, str] = {"float32": "float", "s24": "int32_t", "s16": "int16_t", "s12": "int16_t"}
+_C_TYPES: dict[Word, str] = {"float32": "float", "s24": "int32_t", "s16": "int16_t", "s12": "int16_t", "s8": "int8_t"}
 
 
 @dataclass(frozen=True)
@@ -214,4 +214,6 @@ def _uncommented(text: str) -> str:
 
 
 def _numpy_type(word: Word) -> Any:
-    return np.float32 if word == "float32" else np.int32 if BITS[word] > 16 else np.int16
+    if word == "float32":
+        return np.float32
+    return np.int32 if BITS[word] > 16 else np.int16 if BITS[word] > 8 else np.int8

@@ -22,6 +22,7 @@ from unmix.export.material import speech_material
 from unmix.export.shorten import Shortened, shorten
 from unmix.export.sir import filtered, images_of, measured_sir_db, predicted_sir_db, spectra_of
 from unmix.export.words import (
+    ALL_WORDS,
     WORDS,
     Word,
     Words,
@@ -163,7 +164,7 @@ def export_bank(
         Loss in SIR that the tap length may cost, without a room.
     latency_s : float, optional
         Most that filters may see of the future.
-    words : sequence of "float32", "s24", "s16", "s12"
+    words : sequence of "float32", "s24", "s16", "s12", "s8"
         Word lengths to write.
     grid_deg, grid_talker
         Spacing of a table in which one talker goes round the array, and who.
@@ -218,8 +219,8 @@ def _check(loss_db: float, latency_s: float | None, words: Sequence[str]) -> Non
     if latency_s is not None and latency_s < 0.0:
         raise InputError(f"latency of {latency_s:g} s; give seconds from zero up")
     for word in words:
-        if word not in WORDS:
-            raise InputError(f"there is no word length {word!r}; known are {', '.join(WORDS)}")
+        if word not in ALL_WORDS:
+            raise InputError(f"there is no word length {word!r}; known are {', '.join(ALL_WORDS)}")
 
 
 def _speech(signals: ArrayLike | None, talkers: int, sample_rate: int) -> Floats:

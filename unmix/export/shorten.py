@@ -17,7 +17,7 @@ from unmix.live.bank import fitted
 from unmix.model.delays import Paths
 from unmix.solvers.stationary import FilterBank
 
-__all__ = ["Shortened", "shorten"]
+__all__ = ["Shortened", "shorten", "shorten_to"]
 
 Floats = NDArray[np.float64]
 
@@ -68,6 +68,20 @@ def shorten(
         else:
             high = share
     return best
+
+
+def shorten_to(bank: FilterBank, taps: int) -> FilterBank:
+    """The bank cut to at most `taps` taps, whatever that costs."""
+    low, high = np.log(1e-12), np.log(0.999)
+    best = bank
+    for _ in range(2 * _STEPS):
+        share = 0.5 * (low + high)
+        cut = _cut(bank, float(np.exp(share)))
+        if cut.taps.shape[-1] <= taps:
+            best, high = cut, share
+        else:
+            low = share
+    return best if best.taps.shape[-1] <= taps else fitted(bank, before=0, after=taps - 1)
 
 
 def _cut(bank: FilterBank, share: float) -> FilterBank:

@@ -77,9 +77,9 @@ def images_of(signals: Floats, paths: Paths, sample_rate: float) -> Floats:
     """(talkers, channels, samples): what microphones hear of each talker alone, without a room, delays exact."""
     samples = signals.shape[1]
     size = 1 << (samples + 4096).bit_length()
-    omega = 2.0 * np.pi * np.fft.rfftfreq(size, 1.0 / sample_rate)
-    phase = np.exp(-1j * omega * paths.delay_s[..., None]) * paths.gain[..., None]
-    return np.asarray(np.fft.irfft(np.fft.rfft(signals, size)[:, None] * phase, size)[..., :samples])
+    omega = np.asarray(2.0 * np.pi * np.fft.rfftfreq(size), np.float64)
+    heard = steering(paths, omega, sample_rate).transpose(2, 1, 0)
+    return np.asarray(np.fft.irfft(np.fft.rfft(signals, size)[:, None] * heard, size)[..., :samples])
 
 
 def filtered(taps: Floats, sound: Floats) -> Floats:

@@ -27,6 +27,8 @@ from unmix.model.delays import Paths
 from unmix.solvers.stationary import FilterBank
 
 __all__ = [
+    "ALL_WORDS",
+    "BITS",
     "WORDS",
     "Word",
     "Words",
@@ -40,9 +42,11 @@ __all__ = [
 ]
 
 Floats = NDArray[np.float64]
-Word = Literal["float32", "s24", "s16", "s12"]
-WORDS: tuple[Word, ...] = get_args(Word)
-BITS: dict[Word, int] = {"s24": 24, "s16": 16, "s12": 12}
+Word = Literal["float32", "s24", "s16", "s12", "s8"]
+ALL_WORDS: tuple[Word, ...] = get_args(Word)
+WORDS = ALL_WORDS[:4]
+"""What is exported unless something else is asked for."""
+BITS: dict[Word, int] = {"s24": 24, "s16": 16, "s12": 12, "s8": 8}
 
 
 @dataclass(frozen=True)

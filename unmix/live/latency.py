@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from unmix.live.stage import LiveStage
 from unmix.model.delays import Paths
+from unmix.solvers.baselines import steering
 
 __all__ = ["impulse_images", "measured_latency"]
 
@@ -19,9 +20,9 @@ Floats = NDArray[np.float64]
 
 def impulse_images(paths: Paths, talker: int, *, at: int, samples: int, sample_rate: float) -> Floats:
     """(channels, samples): what the microphones hear of a band-limited impulse of unit height at sample `at`."""
-    omega = 2.0 * np.pi * np.fft.rfftfreq(samples) * sample_rate
-    phase = np.exp(-1j * omega * (at / sample_rate + paths.delay_s[talker][:, None]))
-    return np.asarray(np.fft.irfft(paths.gain[talker][:, None] * phase, samples, axis=-1))
+    omega = np.asarray(2.0 * np.pi * np.fft.rfftfreq(samples), np.float64)
+    heard = steering(paths, omega, sample_rate)[:, :, talker].T
+    return np.asarray(np.fft.irfft(heard * np.exp(-1j * omega * at), samples, axis=-1))
 
 
 def measured_latency(

@@ -19,6 +19,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from unmix.errors import InputError
+from unmix.export.tradeoffs import Tradeoffs
 from unmix.files import write_aside
 from unmix.jobs.located import Located, LocatedTalker
 
@@ -41,6 +42,7 @@ __all__ = [
     "plain_label",
     "save_figure",
     "styled",
+    "tradeoff_figure",
 ]
 
 COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
@@ -245,3 +247,47 @@ def _unjumped(azimuth_deg: np.ndarray[Any, np.dtype[np.float64]]) -> np.ndarray[
     out = azimuth_deg.copy()
     out[1:][np.abs(np.diff(azimuth_deg)) > 180.0] = np.nan
     return out
+
+
+def tradeoff_figure(tradeoffs: Tradeoffs) -> Figure:
+    """SIR and STOI of the worst talker against latency, multiply-accumulates and word length, one line per variant."""
+    heads = {
+        "latency": "latency of the filters, ms",
+        "work": "million multiply-accumulates per second, direct",
+        "word": "bits",
+    }
+    with styled():
+        figure = new_figure(9.0, 5.2)
+        axes = figure.subplots(2, 3, sharex="col", sharey="row", squeeze=False)
+        for row, figure_name in enumerate(("sir_db", "stoi")):
+            for column, axis in enumerate(heads):
+                _tradeoff(axes[row, column], tradeoffs, axis, figure_name)
+        for column, head in enumerate(heads.values()):
+            axes[1, column].set_xlabel(head)
+        axes[0, 0].set_ylabel("SIR, dB")
+        axes[1, 0].set_ylabel("STOI")
+        axes[0, 0].set_xscale("symlog", linthresh=0.5, base=2)
+        axes[0, 0].set_xlim(left=0.0)
+        axes[0, 1].set_xscale("log")
+        axes[0, 2].set_xticks([8, 12, 16, 24, 32], ["8", "12", "16", "24", "float"])
+        for shown in axes[1, :2]:
+            shown.xaxis.set_major_formatter("{x:g}")
+        handles, labels = axes[0, 0].get_legend_handles_labels()
+        figure.legend(handles, labels, loc="outside upper center", ncols=6, fontsize=8.0)
+        room = "without a room" if tradeoffs.t20_s is None else f"in a room, T20 {tradeoffs.t20_s:g} s"
+        axes[0, 1].set_title(f"the worst talker, {room}", fontsize=9.0)
+    return figure
+
+
+def _tradeoff(axes: Axes, tradeoffs: Tradeoffs, axis: Any, figure_name: str) -> None:
+    for k, variant in enumerate(tradeoffs.variants):
+        points = tradeoffs.along(axis, variant)
+        across = [
+            {"latency": p.latency_ms, "work": 1e-6 * (p.mac_per_s or np.nan), "word": p.bits}[axis] for p in points
+        ]
+        up = [np.nan if getattr(p, figure_name) is None else getattr(p, figure_name) for p in points]
+        mark = MARKS[k % len(MARKS)]
+        axes.plot(across, up, marker=mark, markersize=4, linewidth=1.2, color=COLOURS[k % len(COLOURS)], label=variant)
+    before = tradeoffs.unprocessed_sir_db if figure_name == "sir_db" else tradeoffs.unprocessed_stoi
+    if before is not None:
+        axes.axhline(before, color=QUIET, linewidth=0.8, linestyle="--", label="unprocessed")

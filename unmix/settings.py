@@ -139,18 +139,33 @@ class PredictionSettings(_Strict, kw_only=True, frozen=True):
 class RefinementSettings(_Strict, kw_only=True, frozen=True):
     """Auxiliary-function iteration on the separating matrix (overdetermined independent vector analysis)."""
 
-    iterations: Annotated[int, Meta(ge=1, le=200, description="updates from the constrained solution")] = 15
+    iterations: Annotated[int, Meta(ge=1, le=200, description="updates from the constrained solution")] = 30
     warm_iterations: Annotated[
         int, Meta(ge=1, le=200, description="updates when a previous segment's matrix is the start")
-    ] = 8
+    ] = 15
     source_model: Annotated[
         Literal["frame", "low-rank"],
         Meta(description="talker variance: one figure per frame, or nonnegative factors over frequency and time"),
-    ] = "frame"
-    components: Annotated[int, Meta(ge=1, le=64, description="nonnegative components per talker (low-rank)")] = 8
+    ] = "low-rank"
+    components: Annotated[int, Meta(ge=1, le=64, description="nonnegative components per talker (low-rank)")] = 16
     look_weight: Annotated[
         float, Meta(ge=0.0, le=100.0, description="pull of each row toward zeros at the other talkers' bearings")
     ] = 0.1
+
+
+class LearnedSettings(_Strict, kw_only=True, frozen=True):
+    """The constrained solve once more, with the responses learned by the refinement in place of pure delays."""
+
+    noise: Annotated[
+        Literal["observed", "white"],
+        Meta(description="covariance of the noise: the recording's own (least output power), or white"),
+    ] = "observed"
+    loading: Annotated[
+        float, Meta(ge=0.0, le=1.0, description="added to the observed covariance, relative to its mean diagonal")
+    ] = 1e-4
+    prior_weight: Annotated[
+        float, Meta(ge=0.0, le=10.0, description="weight of the flat prior, relative to the mean diagonal of A'R^-1 A")
+    ] = 1e-6
 
 
 class PostSettings(_Strict, kw_only=True, frozen=True):
@@ -198,6 +213,12 @@ class SegmentSettings(_Strict, kw_only=True, frozen=True):
     """Stretches solved at once; a shorter one follows moving talkers and has poorer statistics."""
 
     length_s: Annotated[float, Meta(ge=1.0, le=120.0, description="segment length")] = 30.0
+    moving_length_s: Annotated[
+        float, Meta(ge=1.0, le=120.0, description="segment length while a talker moves or the array turns")
+    ] = 4.0
+    most_turn_deg: Annotated[
+        float, Meta(ge=0.0, description="bearings that turn by more within a segment: the model alone")
+    ] = 60.0
     context_s: Annotated[
         float, Meta(ge=0.1, le=10.0, description="sound before the segment that is processed with it")
     ] = 1.0
@@ -225,6 +246,7 @@ class RoomSettings(_Strict, kw_only=True, frozen=True):
     transform: TransformSettings = TransformSettings()
     prediction: PredictionSettings | None = PredictionSettings()
     refinement: RefinementSettings | None = RefinementSettings()
+    learned: LearnedSettings | None = LearnedSettings()
     post: PostSettings | None = PostSettings()
     segments: SegmentSettings = SegmentSettings()
     low_latency: LowLatencySettings | None = None

@@ -249,7 +249,7 @@ def describe(
     if room is not None:
         details["room"] = room.to_dict()
         # What the model alone would have fallen back to does not matter when the room stage answers.
-        fallbacks = () if room.fallback == "none" else (f"room stage: fell back to {room.fallback}",)
+        fallbacks = room.reasons
     return Solution(
         talkers=talkers,
         sample_rate=rate,
@@ -258,7 +258,8 @@ def describe(
         method=assembly.method if room is None else "room",
         signals=stored.signals,
         fallbacks=fallbacks,
-        warnings=(*fallbacks, *(room.warnings if room else ()), *findings, *_loudness(talkers)),
+        # Locating has looked at the same channels before.
+        warnings=tuple(dict.fromkeys((*fallbacks, *(room.warnings if room else ()), *findings, *_loudness(talkers)))),
         conditioning=assembly.conditioning.to_dict() if assembly.conditioning else None,
         margin_s=assembly.margin / rate,
         latency_ms=1e3 * assembly.latency_samples / rate if room is None else room.latency_ms,

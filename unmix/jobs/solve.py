@@ -84,7 +84,7 @@ def _solve(scene: Scene, variant: Variant, sink: Sink, progress: Progress | None
         temperature_c=scene.temperature_c,
         spectra=spectra,
     )
-    room = room_stage(scene, variant, paths, spectra) if variant.room is not None else None
+    room = room_stage(scene, variant, paths, spectra, assembly.separator) if variant.room is not None else None
     health = ChannelHealth(len(scene.recording.channels))
     sink.open([t.name for t in scene.talkers], scene.sample_rate, scene.recording.samples)
     done = 0

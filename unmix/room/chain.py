@@ -1,8 +1,11 @@
 """One segment through the room stage: spectra of all channels in, spectra of the talkers out.
 
-    predict -> refine -> masks and filters -> predict again, by the talkers' power -> filters -> restore -> gain
+    predict -> refine -> constrained solve -> judge -> masks and filters -> predict again, by the talkers' power
+    -> filters -> restore -> gain
 
-Everything but the refinement works per frequency, and is shared out over bands.
+The constrained solve after the refinement is the model's own, B = (A^H R^-1 A + Q)^-1 A^H R^-1, with the responses A
+that the refined matrix implies in place of those of pure delays. Everything but the refinement works per frequency, and
+is shared out over bands.
 """
 
 from __future__ import annotations
@@ -11,18 +14,20 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
+from numpy.typing import NDArray
 
 from unmix.room.bands import Bands
-from unmix.room.linalg import power
+from unmix.room.judge import Verdict, judge
+from unmix.room.linalg import adjoint, loaded, power, safe_solve
 from unmix.room.post import background_level, distortionless, frame_weights, gains, posterior_masks, restore
 from unmix.room.prediction import predict
 from unmix.room.refinement import Refined, independent_start, refine, scaled
 from unmix.room.stft import Complexes, Reals
-from unmix.settings import PostSettings, PredictionSettings, RoomSettings
+from unmix.settings import LearnedSettings, PostSettings, PredictionSettings, RoomSettings
 
 __all__ = ["STAGES", "ChainResult", "Start", "run_chain"]
 
-STAGES = ("prediction", "refinement", "filter", "restoration")
+STAGES = ("prediction", "refinement", "constrained", "filter", "restoration")
 """What changes the model's output, in order."""
 
 _NOISE_IN_MASKS = 8.0
@@ -48,56 +53,93 @@ class Start:
 class ChainResult:
     """Talkers of one segment and what was done.
 
-    talkers    (frequencies, K, frames)
-    model      the model alone, alike
+    talkers    (frequencies, K, frames); None where the verdict is that the model alone is better
     rows       refined rows, the next segment's start; None without refinement
     responses  (frequencies, M, K) relative responses that the refined matrix implies; None without refinement
+    verdict    whether the stage helps; None where nothing was learned
     shares     energy of each stage's change of the output, (stages, K), not normalised
     """
 
-    talkers: Complexes
-    model: Complexes
+    talkers: Complexes | None
     rows: Complexes | None
     responses: Complexes | None
     refined: Refined | None
+    verdict: Verdict | None
     shares: Reals
 
 
-def run_chain(x: Complexes, start: Start, settings: RoomSettings, reference: int, bands: Bands) -> ChainResult:
+def run_chain(
+    x: Complexes,
+    start: Start,
+    settings: RoomSettings,
+    reference: int,
+    bands: Bands,
+    frequencies_hz: NDArray[np.float64],
+) -> ChainResult:
     """Carry spectra (frequencies, M, frames) through the parts that the settings name."""
     model_rows = start.model.astype(x.dtype)
-    model = np.concatenate(bands.each(lambda b: model_rows[b] @ x[b]))
     z = _predicted(x, settings.prediction, bands)
-    refined, rows, responses = None, model_rows, None
+    refined, responses, verdict = None, None, None
+    steps = [model_rows]
     if settings.refinement is not None:
-        warm = start.warm is not None
         refined = refine(
             z,
-            start.warm if start.warm is not None else start.model,
+            start.model if start.warm is None else start.warm,
             start.look,
             settings.refinement,
             bands,
-            iterations=settings.refinement.warm_iterations if warm else None,
+            iterations=None if start.warm is None else settings.refinement.warm_iterations,
         )
         rows, responses = scaled(refined.matrix, refined.talkers, reference)
-    post = settings.post
-    talkers = np.empty_like(model)
-    k = model.shape[1]
+        steps.append(rows)
+        if settings.learned is not None:
+            steps.append(_constrained(z, responses, settings.learned, bands))
+        if settings.judge:
+            verdict = judge(x, start.look, responses, rows, frequencies_hz, bands)
+    carried = None if refined is None else independent_start(refined.matrix[:, : refined.talkers])
+    if verdict is not None and not verdict.helps:
+        return ChainResult(None, carried, responses, refined, verdict, np.zeros((len(STAGES), start.model.shape[1])))
+    talkers, shares = _finished(x, z, steps, settings, reference, bands)
+    return ChainResult(talkers, carried, responses, refined, verdict, shares)
+
+
+def _finished(
+    x: Complexes, z: Complexes, steps: list[Complexes], settings: RoomSettings, reference: int, bands: Bands
+) -> tuple[Complexes, Reals]:
+    """The talkers by the last matrix and the post stage; energy of what each stage has changed, (stages, K)."""
+    f, k, _ = steps[0].shape
+    talkers = np.empty((f, k, x.shape[2]), x.dtype)
 
     def finish(b: slice) -> Reals:
-        dry = model_rows[b] @ z[b]
-        y = rows[b] @ z[b]
-        steps = [model[b], dry, y]
-        if post is not None:
-            filtered, early = _post(x[b], z[b], rows[b], y, post, settings.prediction, reference)
-            steps += [filtered, early]
-        talkers[b] = steps[-1]
-        changes = [power(after - before).sum(axis=(0, 2)) for before, after in pairwise(steps)]
-        return np.stack(changes + [np.zeros(k, changes[0].dtype)] * (len(STAGES) - len(changes)))
+        outputs = [steps[0][b] @ x[b], *(rows[b] @ z[b] for rows in steps)]
+        names = list(STAGES[: len(steps)])
+        if settings.post is not None:
+            filtered, early = _post(
+                x[b], z[b], steps[-1][b], outputs[-1], settings.post, settings.prediction, reference
+            )
+            outputs += [filtered, early]
+            names += STAGES[3:]
+        talkers[b] = outputs[-1]
+        changed = np.zeros((len(STAGES), k))
+        for name, (before, after) in zip(names, pairwise(outputs), strict=True):
+            changed[STAGES.index(name)] = power(after - before).sum(axis=(0, 2))
+        return changed
 
-    shares = sum(bands.each(finish))
-    carried = None if refined is None else independent_start(refined.matrix[:, :k])
-    return ChainResult(talkers, model, carried, responses, refined, np.asarray(shares))
+    return talkers, np.asarray(sum(bands.each(finish)))
+
+
+def _constrained(z: Complexes, responses: Complexes, settings: LearnedSettings, bands: Bands) -> Complexes:
+    """Rows (frequencies, K, M) of the constrained solve with learned responses."""
+
+    def solve(b: slice) -> Complexes:
+        a = responses[b]
+        if settings.noise == "white":
+            left = adjoint(a)
+        else:
+            left = adjoint(safe_solve(loaded(z[b] @ adjoint(z[b]), settings.loading), a))
+        return safe_solve(loaded(left @ a, settings.prior_weight), left)
+
+    return np.concatenate(bands.each(solve))
 
 
 def _predicted(x: Complexes, settings: PredictionSettings | None, bands: Bands) -> Complexes:

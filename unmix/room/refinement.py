@@ -28,7 +28,7 @@ from unmix.room.linalg import adjoint, loaded, power, safe_solve
 from unmix.room.stft import Complexes, Reals
 from unmix.settings import RefinementSettings
 
-__all__ = ["Refined", "independent_start", "refine", "scaled"]
+__all__ = ["Refined", "independent_start", "look_penalty", "refine", "scaled", "update_rows"]
 
 _LOADING = 1e-6
 _FLOOR = 1e-6
@@ -93,7 +93,7 @@ def refine(
     w = independent_start(start).astype(z.dtype)
     outer = np.concatenate(bands.each(lambda b: _outer(z[b])))
     covariance = loaded(_unpacked(outer.mean(axis=1)[:, None], m)[:, 0].astype(z.dtype), _LOADING)
-    held = [_look_penalty(look, i, settings.look_weight).astype(z.dtype) for i in range(k)]
+    held = look_penalty(look, settings.look_weight).astype(z.dtype)
     factors = Factors(f, k, frames, settings.components) if settings.source_model == "low-rank" else None
     cost: list[float] = []
     reverted = 0
@@ -112,7 +112,7 @@ def refine(
         def update(b: slice, weight: Reals = weight) -> int:
             phi = weight[b] if factors is not None else np.broadcast_to(weight, (b.stop - b.start, k, frames))
             v = _unpacked(phi @ outer[b] * (1.0 / frames), m).astype(z.dtype)
-            return _update_rows(w[b], v, covariance[b], [h[b] for h in held])
+            return update_rows(w[b], v, covariance[b], held[b])
 
         reverted += sum(bands.each(update))
     matrix = np.empty((f, m, m), z.dtype)
@@ -137,16 +137,27 @@ def scaled(matrix: Complexes, talkers: int, reference: int) -> tuple[Complexes, 
     return rows, inverse[:, :, :talkers] / safe[:, None, :]
 
 
-def _update_rows(w: Complexes, v: Complexes, covariance: Complexes, held: list[Complexes]) -> int:
-    """One sweep over the rows of ``w`` (in place); returns how many rows were left as they were."""
-    f, k, m = w.shape
+def update_rows(w: Complexes, v: Complexes, covariance: Complexes, held: Complexes) -> int:
+    """One sweep over the rows of ``w`` (in place); returns how many rows were left as they were.
+
+    w           (frequencies, K, M)
+    v           (frequencies, K, M, M), each talker's weighted covariance
+    covariance  (frequencies, M, M)
+    held        (frequencies, K, M, M), what is added to ``v``, relative to its mean diagonal
+
+    The background's rows are never formed: V_k w_k must be orthogonal to them, hence in the span of C W^H, and
+    w_k = V_k^-1 C W^H (W C W^H)^-1 e_k solves the same equations as [W; J, -I] V_k w_k = e_k.
+    """
+    k, m = w.shape[1:]
     reverted = 0
     for i in range(k):
         level = np.trace(v[:, i], axis1=1, axis2=2).real[:, None, None] / m
-        vi = loaded(v[:, i] + held[i] * level, _LOADING)
-        unit = np.zeros((f, m, 1), w.dtype)
+        vi = loaded(v[:, i] + held[:, i] * level, _LOADING)
+        cw = covariance @ adjoint(w)
+        gram = loaded(w @ cw, _LOADING)
+        unit = np.zeros((len(w), k, 1), w.dtype)
         unit[:, i] = 1.0
-        row = safe_solve(_with_background(w, covariance) @ vi, unit)
+        row = safe_solve(vi, cw @ safe_solve(gram, unit))
         norm = (adjoint(row) @ vi @ row).real
         fine = np.isfinite(row).all(axis=(1, 2)) & (norm[:, 0, 0] > 0.0) & np.isfinite(norm[:, 0, 0])
         scale = 1.0 / np.sqrt(np.where(fine[:, None, None], norm, 1.0))
@@ -170,10 +181,11 @@ def _with_background(w: Complexes, covariance: Complexes) -> Complexes:
     return full
 
 
-def _look_penalty(look: Complexes, row: int, weight: float) -> Complexes:
-    others = np.delete(look, row, axis=2)
-    penalty: Complexes = (weight / look.shape[1]) * (others @ adjoint(others))
-    return penalty
+def look_penalty(look: Complexes, weight: float) -> Complexes:
+    """weight / M sum_{j != k} a_j a_j^H for each talker k: (frequencies, K, M, M)."""
+    m, k = look.shape[1:]
+    others = [np.delete(look, i, axis=2) for i in range(k)]
+    return np.stack([(weight / m) * (o @ adjoint(o)) for o in others], axis=1)
 
 
 def _outer(z: Complexes) -> Reals:

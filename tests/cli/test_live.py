@@ -126,6 +126,14 @@ def test_tracks_that_meet_are_told_and_the_audio_goes_on(live: Live, scene: Path
     assert np.isfinite(decoded(out)).all()
 
 
+def test_a_bound_on_look_ahead_says_what_it_costs(live: Live, scene: Path) -> None:
+    ran, _ = live(recording(), scene, *RAW, "--lookahead-ms", 4)
+    assert ran.status == 0
+    assert "latency 64 samples (4.0 ms) as stated, 64, 64 as measured" in ran.err
+    cut, whole_sir = map(float, ran.err.split("look-ahead leaves ")[1].split(" dB SIR")[0].split(" dB of "))
+    assert 0.0 < cut < whole_sir
+
+
 def one_line(ran: Ran, said: str) -> None:
     errors = [line for line in ran.err.splitlines() if line.startswith("error:")]
     assert len(errors) == 1 and said in errors[0], ran.err

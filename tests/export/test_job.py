@@ -72,7 +72,7 @@ def test_the_archive_documents_itself(exported: Exported, folder: Path) -> None:
         told = json.loads(str(archive["fields"]))
     assert told == FIELDS
     documented = {name.strip() for key in FIELDS for name in key.split(",")} | {"fields"}
-    assert names == documented - {"s8", "shift_s8"}
+    assert names == documented - {"s8", "scale_s8"}
     bank = read_bank(folder / "bank.npz")
     assert bank.names == ("mate", "Chief */ Pilot")
     assert np.allclose(bank.bearings, [[20.0, 0.0, 1.2], [95.0, 0.0, np.nan]], equal_nan=True)
@@ -87,8 +87,8 @@ def test_the_csv_holds_the_same(exported: Exported, folder: Path) -> None:
     shape = exported.bank.taps.shape
     assert np.array_equal(np.array([float(r["value"]) for r in rows]).reshape(shape), exported.bank.taps)
     s16 = np.array([int(r["s16"]) for r in rows]).reshape(shape)
-    shift = next(json.loads(line.split(" = ")[1]) for line in lines if line.startswith("# shift_s16"))
-    step = 2.0 ** -np.array(shift, float)
+    scale = next(json.loads(line.split(" = ")[1]) for line in lines if line.startswith("# scale_s16"))
+    step = np.array(scale)
     assert np.abs(s16 * step[..., None] - exported.bank.taps).max() <= 1.01 * step.max()
     assert rows[exported.bank.delay]["lag"] == "0"
 
@@ -108,7 +108,7 @@ int main(void) {
                 f += (double)unmix_float32[k][m][j] * y[m][t - j];
                 sum += unmix_s16[k][m][j] * y[m][t - j];
             }
-            q += sum / (1L << unmix_shift_s16[k][m]);
+            q += sum * unmix_scale_s16[k][m];
         }
         printf("%.17g %.17g\\n", f, q);
     }

@@ -26,6 +26,7 @@ __all__ = ["command"]
 
 RAW = ["s16le", "s24le", "s32le", "f32le", "f64le"]
 IN_PART = 3
+_TOLD_SHARE = 1e-4
 
 
 @click.command("live")
@@ -228,7 +229,24 @@ def _tell_start(separator: LiveSeparator, sound: PipeFormat, chunk: int, measure
         f"with an impulse; {1e3 * (late + chunk) / rate:.1f} ms with the chunk itself",
         err=True,
     )
+    if separator.cut_share > _TOLD_SHARE and len(separator.talkers) > 1:
+        _tell_loss(separator, rate)
     click.echo(consent_line(), err=True)
+
+
+def _tell_loss(separator: LiveSeparator, rate: int) -> None:
+    """What less look-ahead costs in separation, by formula."""
+    from unmix.export.sir import predicted_sir_db, speech_spectra
+
+    filters, paths = separator.filters, separator.paths()
+    if filters is None:
+        return
+    spectra = speech_spectra(paths.talkers, rate)
+    cut, whole = (predicted_sir_db(f, paths, spectra, rate).min() for f in (filters, separator.whole_filters()))
+    click.echo(
+        f"the bound on look-ahead leaves {cut:.1f} dB of {whole:.1f} dB SIR to the worst talker, without a room",
+        err=True,
+    )
 
 
 def _tell(meter: Meter) -> None:

@@ -38,8 +38,8 @@ FIELDS = {
     "reference_channel": "the microphone at which talkers are received",
     "variant": "name of the variant",
     "float32": "(talkers, channels, length) filters in single precision",
-    "s24, s16, s12, s8": "(talkers, channels, length) fixed point: a tap is value * 2^-shift",
-    "shift_s24, shift_s16, shift_s12, shift_s8": "(talkers, channels) shifts",
+    "s24, s16, s12, s8": "(talkers, channels, length) fixed point: a tap is value * scale",
+    "scale_s24, scale_s16, scale_s12, scale_s8": "(talkers, channels) scales, 32-bit floats",
 }
 """Fields of the NumPy archive, which holds this text as JSON under `fields`."""
 
@@ -88,7 +88,7 @@ def write_npz(path: Path, bank: ExportedBank) -> None:
     for words in bank.words:
         arrays[words.word] = words.values.astype(_numpy_type(words.word))
         if words.word != "float32":
-            arrays[f"shift_{words.word}"] = words.shift
+            arrays[f"scale_{words.word}"] = words.scale
     np.savez_compressed(path, **arrays)
 
 
@@ -117,8 +117,8 @@ def read_bank(path: str | Path) -> ExportedBank:
 
 def _words(found: dict[str, NDArray[Any]], word: Word) -> Words:
     values = found[word]
-    shift = found.get(f"shift_{word}", np.zeros(values.shape[:2], np.int32))
-    return Words(word, values if word == "float32" else values.astype(np.int32), shift)
+    scale = found[f"scale_{word}"] if word != "float32" else np.ones(values.shape[:2], np.float32)
+    return Words(word, values if word == "float32" else values.astype(np.int32), scale)
 
 
 def write_csv(path: Path, bank: ExportedBank) -> None:
@@ -133,11 +133,11 @@ def write_csv(path: Path, bank: ExportedBank) -> None:
             rows.writerow([k, m, j, j - bank.delay, repr(float(value)), *others])
         for words in bank.words:
             if words.word != "float32":
-                stream.write(f"# shift_{words.word} = {words.shift.tolist()}\n")
+                stream.write(f"# scale_{words.word} = {words.scale.tolist()}\n")
 
 
 def write_header(path: Path, bank: ExportedBank) -> None:
-    """Write a C header: sizes, and one constant array per word length with its shifts."""
+    """Write a C header: sizes, and one constant array per word length with its scales."""
     talkers, channels, length = bank.taps.shape
     lines = ["/*", *(f" * {_uncommented(line)}" for line in _about(bank)), " */"]
     lines += ["#ifndef UNMIX_BANK_H", "#define UNMIX_BANK_H", "#include <stdint.h>", ""]
@@ -155,8 +155,8 @@ def write_header(path: Path, bank: ExportedBank) -> None:
         lines += [f" {{ /* {_uncommented(name)} */\n{_rows(words, k)}\n }}," for k, name in enumerate(bank.names)]
         lines.append("};")
         if words.word != "float32":
-            rows = ", ".join("{" + ", ".join(map(str, row)) + "}" for row in words.shift.tolist())
-            lines.append(f"static const int8_t unmix_shift_{words.word}{size} = {{{rows}}};")
+            rows = ", ".join("{" + ", ".join(map(_float_literal, row)) + "}" for row in words.scale.tolist())
+            lines.append(f"static const float unmix_scale_{words.word}{size} = {{{rows}}};")
     lines.append("\n#endif")
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
 
@@ -185,7 +185,7 @@ def _about(bank: ExportedBank) -> Sequence[str]:
         f"channel {m}: x {x:.4f}, y {y:.4f}, z {z:.4f} m" for m, (x, y, z) in enumerate(bank.positions_m.tolist())
     ]
     fixed = [words.word for words in bank.words if words.word != "float32"]
-    scale = [f"fixed point ({', '.join(fixed)}): a tap is value * 2^-shift[talker][channel]"] if fixed else []
+    scale = [f"fixed point ({', '.join(fixed)}): a tap is value * scale[talker][channel]"] if fixed else []
     return [
         f"filters of variant {bank.variant}: {talkers} talkers, {channels} channels, {length} taps, "
         f"{bank.sample_rate} Hz",

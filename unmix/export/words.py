@@ -1,7 +1,8 @@
-"""Word lengths: filters rounded to 32-bit float, or to fixed point with one power of two per filter.
+"""Word lengths: filters rounded to 32-bit float, or to fixed point with one scale per filter.
 
-Fixed point of b bits: a tap h becomes an integer c, h = c 2^-s, with s the largest shift at which the filter's largest
-tap still fits: a device multiplies by c and shifts once per filter. D = 2^-s is the step.
+Fixed point of b bits: a tap h becomes an integer c, h = c D, with D the step at which the filter's largest tap just
+fits: a device sums with c and multiplies by D once per filter and sample. Powers of two for D, which would need a shift
+only, would cost up to one bit more.
 
 Rounding errors are fed back, as in converters (H. A. Spang and P. M. Schultheiss, "Reduction of quantizing noise by use
 of feedback", IRE Trans. Communications Systems 10, 1962): each tap's error is carried into the next, so that their
@@ -53,27 +54,27 @@ BITS: dict[Word, int] = {"s24": 24, "s16": 16, "s12": 12, "s8": 8}
 class Words:
     """Filters in a word length.
 
-    values  (talkers, channels, taps) float32, or integers: the tap is value * 2^-shift
-    shift   (talkers, channels), zero for float32
+    values  (talkers, channels, taps) float32, or integers: the tap is value * scale
+    scale   (talkers, channels), one for float32
     """
 
     word: Word
     values: NDArray[np.float32] | NDArray[np.int32]
-    shift: NDArray[np.int32]
+    scale: NDArray[np.float32]
 
     @property
     def taps(self) -> Floats:
         """What the words stand for."""
-        return np.asarray(self.values.astype(np.float64) * 2.0 ** -self.shift[..., None].astype(np.float64))
+        return np.asarray(self.values.astype(np.float64) * self.scale[..., None].astype(np.float64))
 
 
 def quantise(taps: Floats, word: Word, sample_rate: float) -> Words:
     """Round filters (talkers, channels, taps) to a word length."""
     if word == "float32":
-        return Words(word, taps.astype(np.float32), np.zeros(taps.shape[:2], np.int32))
-    shift, feedback = _shifts(taps, word), predictor(sample_rate)
+        return Words(word, taps.astype(np.float32), np.ones(taps.shape[:2], np.float32))
+    scale, feedback = _scales(taps, word), predictor(sample_rate)
     most = 2.0 ** (BITS[word] - 1) - 1.0
-    scaled = taps * 2.0 ** shift[..., None].astype(np.float64)
+    scaled = taps / scale[..., None].astype(np.float64)
     values = np.empty(taps.shape, np.int32)
     error = np.zeros(taps.shape[:2])
     for n in range(taps.shape[-1]):
@@ -81,7 +82,7 @@ def quantise(taps: Floats, word: Word, sample_rate: float) -> Words:
         rounded = np.clip(np.rint(wanted), -most, most)
         error = wanted - rounded
         values[..., n] = rounded
-    return Words(word, values, shift)
+    return Words(word, values, scale)
 
 
 def predictor(sample_rate: float) -> float:
@@ -90,11 +91,12 @@ def predictor(sample_rate: float) -> float:
     return float(lags[1] / lags[0])
 
 
-def _shifts(taps: Floats, word: Word) -> NDArray[np.int32]:
+def _scales(taps: Floats, word: Word) -> NDArray[np.float32]:
+    """The step of each filter, a 32-bit float; one for a filter that is all zero."""
     largest = np.abs(taps).max(axis=-1)
-    most = 2.0 ** (BITS[word] - 1) - 1.0
-    shift = np.floor(np.log2(most / np.where(largest > 0.0, largest, most)))
-    return np.asarray(shift, np.int32)
+    step = (largest / (2.0 ** (BITS[word] - 1) - 1.0)).astype(np.float32)
+    # Rounded up, so that the largest tap still fits.
+    return np.where(largest > 0.0, np.nextafter(step, np.float32(np.inf)), np.float32(1.0))
 
 
 def _errors(taps: Floats, word: Word, sample_rate: float) -> tuple[Floats, Floats, float]:
@@ -104,7 +106,7 @@ def _errors(taps: Floats, word: Word, sample_rate: float) -> tuple[Floats, Float
         step = 2.0 ** (np.floor(np.log2(np.maximum(size, 2.0**-126))) - 23.0)
         return np.zeros(taps.shape[:2]), (step**2 / 12.0).sum(axis=-1), 0.0
     feedback = predictor(sample_rate)
-    step = (2.0 ** -_shifts(taps, word).astype(np.float64))[..., None]
+    step = _scales(taps, word).astype(np.float64)[..., None]
     lost = size < 0.5 * (1.0 - feedback) * step
     return (taps**2 * lost).sum(axis=-1), (step**2 / 12.0 * ~lost).sum(axis=-1), feedback
 

@@ -23,13 +23,15 @@ class Meter:
     chunks: int = 0
     under_runs: int = 0
     busy_s: float = 0.0
+    cpu_s: float = 0.0
     longest_s: float = 0.0
 
     @contextmanager
     def chunk(self, samples: int) -> Iterator[None]:
         """Time the work on one chunk."""
-        began = time.perf_counter()
+        began, worked = time.perf_counter(), time.thread_time()
         yield
+        self.cpu_s += time.thread_time() - worked
         took = time.perf_counter() - began
         self.chunks += 1
         self.samples += samples
@@ -42,6 +44,11 @@ class Meter:
         """Share of real time that the work took; above 1 it cannot keep up."""
         return self.busy_s * self.sample_rate / self.samples if self.samples else 0.0
 
+    @property
+    def cpu_share(self) -> float:
+        """The same in time of the processor alone, without waiting for it."""
+        return self.cpu_s * self.sample_rate / self.samples if self.samples else 0.0
+
     def to_dict(self) -> dict[str, Any]:
         """Plain values."""
         return {
@@ -49,5 +56,6 @@ class Meter:
             "chunks": self.chunks,
             "under_runs": self.under_runs,
             "cost": self.cost,
+            "cpu_share": self.cpu_share,
             "longest_chunk_ms": 1e3 * self.longest_s,
         }

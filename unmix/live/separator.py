@@ -21,8 +21,10 @@ from unmix.live.bank import BankStage, Change
 from unmix.live.design import Designer, check_is_filters, noise_spectra
 from unmix.live.latency import measured_latency
 from unmix.live.stage import LiveStage
+from unmix.model.delays import Paths
 from unmix.model.noise import Spectra
 from unmix.scene import Scene, Talker
+from unmix.solvers.stationary import FilterBank
 from unmix.variant import Variant, load_variant
 
 __all__ = ["BearingSource", "LiveSeparator", "track_source"]
@@ -135,6 +137,19 @@ class LiveSeparator:
         return self._stage.cut_share if isinstance(self._stage, BankStage) else 0.0
 
     @property
+    def filters(self) -> FilterBank | None:
+        """The filters in use, or being faded in; None for a variant that is more than filters."""
+        return self._stage.bank if isinstance(self._stage, BankStage) else None
+
+    def whole_filters(self) -> FilterBank:
+        """The variant's filters for the talkers where they now are, with nothing cut off; designed anew."""
+        return self._design(self.talkers)
+
+    def paths(self) -> Paths:
+        """Delays and gains of the talkers where they now are."""
+        return self._design.paths(self.talkers)
+
+    @property
     def last_change(self) -> Change | None:
         """How the last change of bearings went, measured on the output; None before the first."""
         return self._stage.change if isinstance(self._stage, BankStage) else None
@@ -174,8 +189,7 @@ class LiveSeparator:
 
     def measure_latency(self) -> tuple[int, ...]:
         """Latency in samples of each talker, measured with an impulse on a fresh stage; the stream is not touched."""
-        paths = self._design.paths(self.talkers)
-        return measured_latency(self._make_stage(), paths, sample_rate=self.sample_rate)
+        return measured_latency(self._make_stage(), self.paths(), sample_rate=self.sample_rate)
 
     def save_state(self) -> bytes:
         """Everything that depends on what was pushed, as the bytes of a NumPy archive of a size that never grows."""

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from unmix.cli.common import existing_file, json_option, print_json, print_table, progress_bar, say
+from unmix.cli.reporting import REPORT, no_report_option, write_batch_report
 
 if TYPE_CHECKING:
     from unmix.batch.run import BatchResult, Progress
@@ -32,6 +33,7 @@ MOST_FAILURES = 5
 @click.option("--compare", "earlier", type=existing_file, metavar="DIR", help="Compare with an earlier batch's folder.")
 @click.option("--query", "sql", metavar="SQL", help="Answer from the table `results` in --out; run nothing.")
 @click.option("--explain", is_flag=True, help="Print every field of a plan with type, unit, range and default.")
+@no_report_option
 @json_option
 def command(
     plan: Path | None,
@@ -44,6 +46,7 @@ def command(
     earlier: Path | None,
     sql: str | None,
     explain: bool,
+    no_report: bool,
     as_json: bool,
 ) -> int | None:
     """Run scenes x variants, grade them, and rank the variants.
@@ -67,19 +70,23 @@ def command(
         return None
     if workers is not None and cluster is not None:
         raise click.UsageError("--workers are this machine's; with --cluster the scheduler has its own")
-    return _run(plan, out, as_json, workers=workers, cluster=cluster, yes=yes, retry=retry, earlier=earlier)
+    options = {"workers": workers, "cluster": cluster, "retry": retry, "earlier": earlier}
+    return _run(plan, out, as_json, yes=yes, no_report=no_report, **options)
 
 
-def _run(plan: Path, out: Path, as_json: bool, *, yes: bool, **options: Any) -> int | None:
+def _run(plan: Path, out: Path, as_json: bool, *, yes: bool, no_report: bool, **options: Any) -> int | None:
     from unmix.batch.run import run_batch
 
     yes = yes or _agreed(plan)
     with progress_bar("starting") as report:
         result = run_batch(plan, out, yes=yes, progress=lambda progress: _show(progress, report), **options)
+        report(1.0, "writing the report")
+        current = not result.ran and (out / REPORT).exists()
+        reported = None if no_report or current else write_batch_report(out)
     if as_json:
         print_json(result.to_dict())
     else:
-        _print(result, out)
+        _print(result, out, reported=reported is not None)
     return IN_PART if result.in_part else None
 
 
@@ -111,7 +118,7 @@ def _show(progress: Progress, report: Any) -> None:
     report(progress.done / progress.total, ", ".join(said))
 
 
-def _print(result: BatchResult, out: Path) -> None:
+def _print(result: BatchResult, out: Path, *, reported: bool) -> None:
     from unmix.cli.batch_tables import change_lines, change_table, clock, ranking_lines, ranking_table
 
     ran = f"{result.ran:,} run now in {clock(result.seconds)}" if result.ran else "none of them run now"
@@ -130,7 +137,8 @@ def _print(result: BatchResult, out: Path) -> None:
         say(f"{written.failures - MOST_FAILURES} more failed; they are rows with an `error` in the results")
     if written.missing:
         say(f"{written.missing:,} items are missing; run again to do them")
-    say(f"Written to {out}: {', '.join(path.name for path in written.files)}, batch.json")
+    files = [path.name for path in written.files] + ["batch.json"] + [REPORT] * reported
+    say(f"Written to {out}: {', '.join(files)}")
 
 
 def _dry_run(plan: Path, out: Path | None, workers: int | None, as_json: bool) -> None:

@@ -23,7 +23,7 @@ __all__ = ["command"]
     "--sound-mb",
     type=click.FloatRange(0.1, 500.0),
     metavar="MB",
-    help="Megabytes of sound at most; longer recordings are cut to a telling stretch. [default: 5; batch: 12]",
+    help="Megabytes of sound at most; longer recordings are cut to a telling stretch. [default: 5; batch: 10]",
 )
 @overwrite_option
 @json_option
@@ -43,15 +43,21 @@ def command(
     inside itself, and prints.
     """
     from unmix.files import refuse_to_replace
+    from unmix.report.batch_material import is_batch, material_of_batch
+    from unmix.report.batch_page import write_batch_report
     from unmix.report.material import material_of_folder
-    from unmix.report.scene_page import SOUND_MB, write_scene_report
+    from unmix.report.scene_page import write_scene_report
 
     path = folder / REPORT if out is None else out
     refuse_to_replace(path, overwrite=overwrite)
+    options: dict[str, Any] = {"audio": not no_audio, "hide_names": pseudonyms, "overwrite": overwrite}
+    if sound_mb is not None:
+        options["sound_mb"] = sound_mb
     with progress_bar("writing the report"):
-        material = material_of_folder(folder, scene=scene)
-        options: dict[str, Any] = {"audio": not no_audio, "hide_names": pseudonyms, "overwrite": overwrite}
-        page = write_scene_report(material, path, sound_mb=sound_mb or SOUND_MB, **options)
+        if is_batch(folder):
+            page = write_batch_report(material_of_batch(folder), path, **options)
+        else:
+            page = write_scene_report(material_of_folder(folder, scene=scene), path, **options)
     if as_json:
         print_json({"file": str(page.path), "bytes": page.bytes})
         return

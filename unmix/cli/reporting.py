@@ -15,7 +15,7 @@ from unmix.files import refuse_to_replace
 if TYPE_CHECKING:
     from unmix.report.material import SceneMaterial
 
-__all__ = ["REPORT", "no_report_option", "refuse_report", "write_report"]
+__all__ = ["REPORT", "no_report_option", "refuse_report", "write_batch_report", "write_report"]
 
 Decorated = TypeVar("Decorated", bound=Callable[..., Any])
 
@@ -49,6 +49,27 @@ def write_report(material: Callable[[], SceneMaterial], folder: Path, *, overwri
 
     try:
         return write_scene_report(material(), folder / REPORT, overwrite=overwrite).path
+    except UnmixError as error:
+        warnings.warn(f"no report was written: {error}", UnmixWarning, stacklevel=2)
+        return None
+
+
+def write_batch_report(folder: Path) -> Path | None:
+    """Write or renew the report of a batch, as its tables are; one without voices or names stays without.
+
+    When that fails the batch stands all the same, and a warning says what happened.
+    """
+    from unmix.report.batch_material import material_of_batch
+    from unmix.report.batch_page import write_batch_report as write
+    from unmix.report.page import kind_of_page
+
+    path = folder / REPORT
+    kind = kind_of_page(path) or ""
+    try:
+        if path.exists() and not kind.startswith("batch"):
+            raise FileError(f"{path} is not a batch's; move it, or name another file: unmix report {folder} --out FILE")
+        options = {"audio": "without sound" not in kind, "hide_names": "without names" in kind}
+        return write(material_of_batch(folder), path, overwrite=True, **options).path
     except UnmixError as error:
         warnings.warn(f"no report was written: {error}", UnmixWarning, stacklevel=2)
         return None

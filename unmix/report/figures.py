@@ -68,7 +68,7 @@ STYLE: Any = {
     "svg.hashsalt": "unmix",
 }
 FORMATS = (".svg", ".png", ".pdf")
-LONGEST_LABEL = 22
+LONGEST_LABEL = 28
 
 
 @contextlib.contextmanager
@@ -83,9 +83,11 @@ def styled() -> Iterator[None]:
 
 
 def plain_label(name: str) -> str:
-    """A name as a label: no mathematics in `$`, no control characters, shortened where it would fill the picture."""
+    """A name as a label: no mathematics in `$`, no control characters, long ones with their middle left out."""
     text = "".join(c if c.isprintable() else " " for c in name)
-    text = text if len(text) <= LONGEST_LABEL else f"{text[: LONGEST_LABEL - 1]}\u2026"
+    if len(text) > LONGEST_LABEL:
+        half = LONGEST_LABEL // 2
+        text = f"{text[:half]}\u2026{text[1 - half :]}"
     return text.replace("$", r"\$")
 
 
@@ -125,9 +127,13 @@ def embedded_svg(figure: Figure, name: str, title: str, description: str) -> str
     text = stream.getvalue()
     body = text[text.index("<svg") :]
     body = re.sub(r"<metadata>.*?</metadata>\s*", "", body, flags=re.DOTALL)
-    used = set(re.findall(r"(?:url\(#|href=\"#)([^\")]+)", body))
-    body = re.sub(r'\s+id="([^"]*)"', lambda m: f' id="{name}-{m.group(1)}"' if m.group(1) in used else "", body)
-    body = re.sub(r"(url\(#|href=\"#)([^\")]+)", lambda m: f"{m.group(1)}{name}-{m.group(2)}", body)
+    used = set(re.findall(r"(?:url\(#|href=\"#)([^\")]+)", body)) & set(re.findall(r'\sid="([^"]*)"', body))
+
+    def named(match: re.Match[str]) -> str:
+        return f"{match.group(1)}{name}-{match.group(2)}" if match.group(2) in used else match.group(0)
+
+    body = re.sub(r'\s+id="([^"]*)"', lambda m: m.group(0) if m.group(1) in used else "", body)
+    body = re.sub(r"(\sid=\"|url\(#|href=\"#)([^\")]+)", named, body)
     for colour, variable in _page_colours().items():
         body = re.sub(re.escape(colour), f"var({variable}, {colour})", body, flags=re.IGNORECASE)
     body = re.sub(r'font: (?:[\w.]+ )?([\d.]+)px [^;"]*', r"font-size: \1px", body)

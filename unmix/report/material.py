@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import re
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -19,7 +19,16 @@ from unmix.jobs.solution import Solution
 from unmix.metrics.grades import Grades
 from unmix.scene import REFERENCE_KINDS, Scene, Talker
 
-__all__ = ["SceneMaterial", "find_solution", "material_of_folder", "material_of_scene", "pseudonyms", "read_solution"]
+__all__ = [
+    "SceneMaterial",
+    "find_solution",
+    "material_of_folder",
+    "material_of_scene",
+    "pseudonyms",
+    "read_solution",
+    "rename",
+    "rename_table",
+]
 
 SOUND_SUFFIXES = (".wav", ".flac", ".w64", ".rf64", ".aiff", ".aif")
 
@@ -205,29 +214,36 @@ def _scene(found: Path, named: object, given: Path | None, notes: list[str]) -> 
         return None
 
 
-def pseudonyms(material: SceneMaterial) -> SceneMaterial:
-    """The same with every talker called Talker A, Talker B, ...: in tables, pictures, the title and warnings."""
-    everybody = dict.fromkeys([*material.names, *(t.name for t in material.seats)])
-    other = {name: f"Talker {_letters(k)}" for k, name in enumerate(everybody)}
+def pseudonyms(material: SceneMaterial, *, known: Sequence[str] = ()) -> SceneMaterial:
+    """The same with every talker called Talker A, Talker B, ...: in tables, pictures, the title and warnings.
+
+    known  talkers that come first, so that the same person has the same letter in several scenes
+    """
+    other = rename_table([*known, *material.names, *(t.name for t in material.seats)])
     grades = material.grades
     return replace(
         material,
-        title=_renamed(material.title, other),
+        title=rename(material.title, other),
         names=tuple(other[name] for name in material.names),
         seats=tuple(replace(t, name=other[t.name]) for t in material.seats),
         outputs={other.get(name, name): path for name, path in material.outputs.items()},
         references={other.get(name, name): path for name, path in material.references.items()},
-        solution=None if material.solution is None else _renamed_tree(material.solution, other, keep=("settings",)),
-        grades=None if grades is None else Grades.from_dict(_renamed_tree(grades.to_dict(), other)),
-        notes=tuple(_renamed(note, other) for note in material.notes),
+        solution=None if material.solution is None else _rename_tree(material.solution, other, keep=("settings",)),
+        grades=None if grades is None else Grades.from_dict(_rename_tree(grades.to_dict(), other)),
+        notes=tuple(rename(note, other) for note in material.notes),
     )
+
+
+def rename_table(names: Sequence[str]) -> dict[str, str]:
+    """Pseudonyms by name, in order."""
+    return {name: f"Talker {_letters(k)}" for k, name in enumerate(dict.fromkeys(names))}
 
 
 def _letters(index: int) -> str:
     return chr(ord("A") + index) if index < 26 else f"{_letters(index // 26 - 1)}{chr(ord('A') + index % 26)}"
 
 
-def _renamed(text: str, other: Mapping[str, str]) -> str:
+def rename(text: str, other: Mapping[str, str]) -> str:
     """The names in a text replaced in one pass, the longest first, whole words of any case only."""
     if not other:
         return text
@@ -239,14 +255,14 @@ def _renamed(text: str, other: Mapping[str, str]) -> str:
     return re.sub(pattern, lambda m: table.get(m.group(0).casefold(), m.group(0)), text, flags=re.IGNORECASE)
 
 
-def _renamed_tree(tree: Any, other: Mapping[str, str], keep: tuple[str, ...] = ()) -> Any:
+def _rename_tree(tree: Any, other: Mapping[str, str], keep: tuple[str, ...] = ()) -> Any:
     if isinstance(tree, str):
-        return _renamed(tree, other)
+        return rename(tree, other)
     if isinstance(tree, list | tuple):
-        return [_renamed_tree(value, other, keep) for value in tree]
+        return [_rename_tree(value, other, keep) for value in tree]
     if isinstance(tree, dict):
         return {
-            other.get(key, key): value if key in keep else _renamed_tree(value, other, keep)
+            other.get(key, key): value if key in keep else _rename_tree(value, other, keep)
             for key, value in tree.items()
         }
     return tree

@@ -51,6 +51,7 @@ def figure_text(value: float | None, digits: int, *, signed: bool = False) -> st
     """A figure as text with a true minus sign; a dash when there is none."""
     if value is None or not math.isfinite(value):
         return UNDEFINED
+    value = round(value, digits) + 0.0  # no minus before a nought
     return f"{value:{'+' if signed else ''}.{digits}f}".replace("-", "\u2212")
 
 

@@ -6,7 +6,7 @@ class Player {
   static EDGE_S = 0.006;
   static AHEAD_S = 1.5;
 
-  /* signals: [{id, matched, asItWas}], their FLAC in <script id="audio-ID">; seconds: length; start: time of sample 0 */
+  /* signals: [{id, matched, asItWas}], their FLAC in the element "audio-ID"; seconds: length; start: time of sample 0 */
   constructor(signals, seconds, sampleRate) {
     this.signals = signals;
     this.seconds = seconds;

@@ -89,7 +89,7 @@ def at_rest(scenes: int, rows: Sequence[tuple[int, float | None]] = ROWS) -> Non
             whole += bool(near.sum() == talkers == len(located.talkers))
         table.append(
             [talkers, "none" if t20_s is None else t20_s, f"{whole} of {scenes}", f"{counted} of {scenes}", invented,
-             float(np.median(errors)), float(np.percentile(errors, 90)), _rms(scores), f"{_rms(bounds):.3f}"]
+             f"{np.median(errors):.2g}", f"{np.percentile(errors, 90):.2g}", _rms(scores), f"{_rms(bounds):.2g}"]
         )  # fmt: skip
     print_table(
         "Talkers at rest, 40 degrees apart or more",
@@ -290,7 +290,7 @@ def _sir(signals: Floats, rendered: RenderedScene) -> float:
     talkers = len(rendered.names)
     if len(signals) < talkers:
         return float("-inf")
-    grades = grade(signals[:talkers], rendered.early, sample_rate=RATE)
+    grades = grade(signals[:talkers], rendered.early, sample_rate=RATE, speech=False)
     return float(np.mean([t.sir_db for t in grades.talkers if t.sir_db is not None]))
 
 

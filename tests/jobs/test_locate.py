@@ -270,6 +270,23 @@ def test_silence_has_no_talker_and_says_why() -> None:
         assert located.to_dict()["talkers"] == []
 
 
+def test_a_quarter_of_a_second_is_enough_for_a_plain_talker() -> None:
+    loud = speech("novel-reader", 3.0)[None, 2 * RATE : 2 * RATE + RATE // 4]
+    signal = np.concatenate([np.zeros((1, 800)), loud], axis=1)
+    located = quietly(recorded([40.0], signals=signal, seconds=0.3), PUCK, RATE)
+    assert len(located.talkers) == 1 and errors_deg(located, [40.0]).max() < 2.0
+
+
+def test_a_dead_channel_is_named_once() -> None:
+    mixture = recorded([-50.0, 60.0])
+    mixture[2] = 0.0
+    located = quietly(mixture, PUCK, RATE)
+    assert errors_deg(located, [-50.0, 60.0]).max() < 5.0
+    assert "channel 2 is silent" in said(located)
+    lines = solved(Scene.from_arrays(mixture, PUCK, sample_rate=RATE)).warnings
+    assert sum("channel 2 is silent" in line for line in lines) == 1
+
+
 def test_one_talker_asked_for_as_three() -> None:
     """What is plain comes first; the others are marked, not hidden, and nothing is lost."""
     located = quietly(in_a_room([40.0]), PUCK, RATE, talkers=3)

@@ -121,6 +121,8 @@ class Scanner:
 
     def finish(self) -> Scan:
         """What was found."""
+        if not self._detections and self._previous is not None:
+            self._detect(self._previous, 0.5 * self.duration_s)
         self._close_section()
         slices = np.array(self._slices).reshape(-1, 2)
         score = self._score / max(len(self._sections), 1)

@@ -28,6 +28,7 @@ from unmix.bearings.scan import FEWEST_BINS, SLICE_S, Rotations, Scan, scan
 from unmix.bearings.scan_peaks import SLOWEST_HZ, scan_peaks, scan_slowly
 from unmix.bearings.space import Region, SearchSpace, search_space
 from unmix.errors import InputError, UnmixWarning, UnsolvableError
+from unmix.health import ChannelHealth
 from unmix.jobs.located import Located, LocatedTalker, ScoreMap
 from unmix.jobs.naming import name_talkers
 from unmix.scene import Scene, Talker
@@ -205,10 +206,13 @@ def _locate(task: _Task) -> Located:
     offset_s, notes = _orient(task)
     rotations = task.rotations(offset_s)
     space = _space(task, rotations)
-    seen, found, count, shares = _find(task, space, rotations)
+    health = ChannelHealth(task.array.channels)
+    seen, found, count, shares = _find(task, space, rotations, health)
     talkers = [_describe(t, k, shares, space, task) for k, t in enumerate(found)]
     named, naming_notes = name_talkers(talkers, task.known, task.duration_s)
     lines = (*notes, *_warnings(seen, space, named, count, task), *naming_notes)
+    if seen.bins:
+        lines += tuple(health.findings())
     ambiguity = _SLOW if task.slow else space.ambiguity
     return Located(
         talkers=tuple(named),
@@ -248,14 +252,14 @@ def _orient(task: _Task) -> tuple[float, list[str]]:
         return 0.0, []
     notes = []
     offset_s = task.clock_offset_s
-    if not isinstance(offset_s, float):
+    if offset_s == "estimate":
         space = _space(task, None)
         steering = make_steering(task.array, task.sample_rate, temperature_c=task.temperature_c)
         seen = scan(task.chunks(), space, steering, task.duration_s, distance_m=task.distance_m)
         estimate = estimate_clock_offset(task.orientation, seen.detections, space, task.duration_s)
         notes.append(estimate.note)
         offset_s = estimate.offset_s or 0.0
-    return offset_s, notes + orientation_notes(task.orientation, offset_s, task.duration_s)
+    return float(offset_s), notes + orientation_notes(task.orientation, offset_s, task.duration_s)
 
 
 def _space(task: _Task, rotations: Rotations | None) -> SearchSpace:
@@ -264,17 +268,17 @@ def _space(task: _Task, rotations: Rotations | None) -> SearchSpace:
 
 
 def _find(
-    task: _Task, space: SearchSpace, rotations: Rotations | None
+    task: _Task, space: SearchSpace, rotations: Rotations | None, health: ChannelHealth
 ) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
     """The pass over the recording, talkers and their number, and whose bins are whose."""
     if task.slow:
-        return _find_slowly(task, space)
+        return _find_slowly(task, space, health)
     mixture = task.method in ("mixture", "fit")
     steering = make_steering(
         task.array, task.sample_rate, temperature_c=task.temperature_c, spacing=space.spacing, whiten=mixture
     )
     block = FrameCovariance(task.array.channels, task.sample_rate, highest_hz=HIGHEST_HZ)
-    chunks = _watched(task, block if mixture and rotations is None else None)
+    chunks = _watched(task, health, block if mixture and rotations is None else None)
     if task.method in ("srp", "snapshots"):
         seen = scan_peaks(
             chunks,
@@ -304,10 +308,12 @@ def _find(
     return seen, found, count, shares
 
 
-def _find_slowly(task: _Task, space: SearchSpace) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
+def _find_slowly(
+    task: _Task, space: SearchSpace, health: ChannelHealth
+) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
     """As `_find`, from snapshots alone."""
     seen = scan_slowly(
-        _watched(task, None),
+        _watched(task, health),
         task.array,
         space,
         task.sample_rate,
@@ -322,10 +328,11 @@ def _find_slowly(task: _Task, space: SearchSpace) -> tuple[Scan, list[FoundTalke
     return seen, found, count, shares
 
 
-def _watched(task: _Task, block: FrameCovariance | None) -> Iterator[Floats]:
-    """The recording's chunks, taken into ``block`` on their way and reported as progress."""
+def _watched(task: _Task, health: ChannelHealth, block: FrameCovariance | None = None) -> Iterator[Floats]:
+    """The recording's chunks, looked at and taken into ``block`` on their way, and reported as progress."""
     done = 0
     for chunk in task.chunks():
+        health.add(chunk)
         if block is not None:
             block.add(chunk)
         yield chunk
@@ -400,6 +407,8 @@ def _warnings(
         yield "too little speech stands out of the noise to say where it comes from; no talker was found"
     elif asked is not None and asked > len(talkers):
         yield f"{asked} talkers were asked for, and only {len(talkers)} directions could be found"
+    elif not talkers and asked is None:
+        yield "there is sound, but no direction stands out of it: no talker was found; say how many there are to insist"
     doubtful = [t.name for t in talkers if t.doubtful]
     if doubtful:
         yield (
@@ -413,6 +422,8 @@ def _warnings(
     ambiguity = _SLOW if task.slow else space.ambiguity
     if ambiguity is not None and talkers:
         yield ambiguity
+    if task.array.responses is not None:
+        yield "measured responses are not used for locating: the microphones are taken as free of obstacles"
     for talker in task.known:
         if not talker.located and talker.elevation:
             yield f"{talker.name}: `elevation_deg` without `azimuth_deg` is no bearing; both were located"

@@ -59,7 +59,7 @@ def peer(rendered: RenderedScene) -> Floats:
 
 def figures(signals: Floats, rendered: RenderedScene) -> np.ndarray:
     """SIR, STOI, SDR and ESTOI against the early references: (talkers, 4)."""
-    grades = grade(signals, rendered.early, sample_rate=rendered.sample_rate, match="name")
+    grades = grade(signals, rendered.early, sample_rate=rendered.sample_rate, match="name", speech=False)
     return np.array([[t.sir_db, t.stoi, t.sdr_db, t.estoi] for t in grades.talkers], dtype=float)
 
 

@@ -14,7 +14,7 @@ from msgspec import Meta
 from unmix.errors import InputError
 from unmix.files import read_toml
 from unmix.metrics.grades import FIGURES
-from unmix.scene import REFERENCE_KINDS
+from unmix.metrics.speech_figures import SPEECH_FIGURES
 
 __all__ = ["MetricTable", "Plan", "RandomSeats", "RenderTable", "RoomTable", "ScoresTable", "SeatsTable", "VaryTable"]
 
@@ -158,8 +158,5 @@ def _check(plan: Plan, path: Path) -> None:
             raise InputError(f"{path}: key `vary[{index}].fields`: paired lists of different lengths ({said})")
     names = [metric.name for metric in plan.metric]
     for name in names:
-        if name in FIGURES or names.count(name) > 1:
+        if name in (*FIGURES, *SPEECH_FIGURES) or names.count(name) > 1:
             raise InputError(f"{path}: key `metric`: {name!r} is taken; choose another name")
-
-
-KINDS = (*REFERENCE_KINDS, "plain")

@@ -19,6 +19,7 @@ from unmix.batch.work import PARTS_OF_A_GRADE
 from unmix.errors import FileError, InputError
 from unmix.files import write_aside
 from unmix.metrics.grades import FIGURES
+from unmix.metrics.speech_figures import SPEECH_FIGURES
 from unmix.variant import Variant, describe_fields
 
 __all__ = ["MEASURED_COLUMNS", "Written", "figure_columns", "open_results", "query", "write_results"]
@@ -73,6 +74,7 @@ def figure_columns(items: Items, scores: Scores) -> dict[str, str]:
     """Columns of figures with their types."""
     own = [f"{m.name}{ending}" for m in items.metrics for ending in ("", "_before", "_gain")]
     figures = [f"{figure}{ending}" for figure in FIGURES for ending in PARTS_OF_A_GRADE]
+    figures += [f"{figure}{ending}" for figure in SPEECH_FIGURES for ending in PARTS_OF_A_GRADE[:3]]
     return dict.fromkeys([*figures, *own, *scores.columns], "DOUBLE")
 
 
@@ -100,6 +102,7 @@ def write_results(items: Items, store: Store, scores: Scores) -> Written:
         parquet, csv = folder / PARQUET, folder / CSV
         connection = duckdb.connect()
         try:
+            connection.execute("SET enable_progress_bar = false")
             connection.execute("SET threads = 1")
             connection.execute(f"SET memory_limit = '{MEMORY}'")
             connection.execute(f"SET temp_directory = {_quoted(aside / 'spill')}")
@@ -217,6 +220,7 @@ def open_results(folder: str | Path) -> Iterator[Any]:
         raise FileError(f"{path}: no such file; run the batch first, or name its folder with --out")
     connection = duckdb.connect()
     try:
+        connection.execute("SET enable_progress_bar = false")
         connection.execute(f"CREATE VIEW results AS SELECT * FROM read_parquet({_quoted(path)})")
         yield connection
     except duckdb.Error as error:

@@ -26,6 +26,7 @@ from unmix.batch.store import Store
 from unmix.errors import InputError
 from unmix.files import path_from, write_json
 from unmix.metrics.grades import FIGURES
+from unmix.metrics.speech_figures import SPEECH_FIGURES
 
 __all__ = ["BatchResult", "Engine", "Progress", "forecast_batch", "missing", "run_batch"]
 
@@ -207,7 +208,7 @@ def _planned(path: Path, yes: bool) -> tuple[Plan, Items, Scores]:
 
 def _metrics(plan: Plan, items: Items, scores: Scores, path: Path) -> tuple[Metric, ...]:
     """The plan's metrics, by the columns they stand in."""
-    known = {name: Metric(name, f"{name}_gain") for name in FIGURES}
+    known = {name: Metric(name, f"{name}_gain") for name in (*FIGURES, *SPEECH_FIGURES)}
     known |= {m.name: Metric(m.name, f"{m.name}_gain", m.higher_is_better) for m in items.metrics}
     known |= {name: Metric(name, name, higher) for name, higher in scores.columns.items()}
     for name in plan.metrics:

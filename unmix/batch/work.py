@@ -26,6 +26,7 @@ from unmix.jobs.solve import solve
 from unmix.metrics.assignment import match_names
 from unmix.metrics.grader import Grader
 from unmix.metrics.grades import FIGURES, Figures, Grades, TalkerGrade
+from unmix.metrics.speech_figures import SPEECH_FIGURES
 from unmix.scene import Scene
 from unmix.variant import Variant
 
@@ -140,8 +141,8 @@ def _truth(scene: Path) -> dict[str, dict[str, Any]]:
 def _grade(grader: Grader, solution: Solution) -> Grades:
     matched = _matched(grader, solution)
     if matched is None:
-        return grader.grade(_signals(solution), match="best")
-    return grader.grade(_signals(solution), matched=matched)
+        return grader.grade(_signals(solution), match="best", speech=True)
+    return grader.grade(_signals(solution), matched=matched, speech=True)
 
 
 def _matched(grader: Grader, solution: Solution) -> list[int | None] | None:
@@ -193,6 +194,10 @@ def _talker_columns(grade: TalkerGrade, loaded: _Loaded, solution: Solution) -> 
     columns: dict[str, Any] = {"talker": grade.name}
     for ending, part in zip(PARTS_OF_A_GRADE, parts, strict=True):
         columns |= {f"{figure}{ending}": None if part is None else getattr(part, figure) for figure in FIGURES}
+    if grade.speech is not None:
+        understood = (grade.speech.after, grade.speech.before, grade.speech.gain)
+        for ending, of in zip(PARTS_OF_A_GRADE, understood, strict=False):
+            columns |= {f"{figure}{ending}": getattr(of, figure) for figure in SPEECH_FIGURES}
     leaks = [value for value in (grade.leakage_db or {}).values() if value is not None]
     azimuth = None if grade.estimate is None else solution.talkers[grade.estimate].azimuth_deg
     columns |= {

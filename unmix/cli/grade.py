@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from unmix.cli.common import existing_file, json_option, overwrite_option, print_json, print_table, progress_bar, say
+from unmix.cli.listeners import grade_listeners
 from unmix.cli.reporting import REPORT, no_report_option, refuse_report, write_report
 
 if TYPE_CHECKING:
@@ -36,6 +37,15 @@ __all__ = ["command", "print_grades"]
     help="By name, or whichever assignment gives the highest SIR. [default: name where names fit]",
 )
 @click.option("--filter-length", type=int, default=512, show_default=True, help="Taps of BSS Eval's allowed filter.")
+@click.option(
+    "--listeners",
+    multiple=True,
+    type=existing_file,
+    metavar="FILE",
+    help="Instead: answers of a listening test that `unmix report --listening` made; once per listener.",
+)
+@click.option("--key", type=existing_file, metavar="FILE", help="Its key. [default: listening-key.json beside them]")
+@click.option("--keep-all", is_flag=True, help="Keep listeners who did not recognise the hidden reference.")
 @click.option("--cross-check", is_flag=True, help="Recompute with mir_eval and print the largest difference.")
 @click.option("--out", type=existing_file, metavar="DIR", help="Folder for grades.json and the report.")
 @no_report_option
@@ -51,6 +61,9 @@ def command(
     unprocessed_channel: int,
     match: str | None,
     filter_length: int,
+    listeners: tuple[Path, ...],
+    key: Path | None,
+    keep_all: bool,
     cross_check: bool,
     out: Path | None,
     no_report: bool,
@@ -60,8 +73,15 @@ def command(
     """Grade talker signals against references, before and after.
 
     Either a SCENE with references and --estimates DIR, or files: --reference and --estimate once per talker, and
-    --unprocessed for the recording. A report that `solve` left in the --out folder is renewed with the figures.
+    --unprocessed for the recording. Or what people heard: --listeners. A report that `solve` left in the --out folder is renewed with the figures.
     """
+    if listeners:
+        if scene is not None or references or given:
+            raise click.UsageError("--listeners stands alone: give no SCENE, --reference or --estimate with it")
+        grade_listeners(listeners, key, keep_all=keep_all, out=out, overwrite=overwrite, as_json=as_json)
+        return
+    if key is not None or keep_all:
+        raise click.UsageError("--key and --keep-all belong to --listeners")
     _check_usage(scene, estimates, references, given)
     from unmix.files import refuse_to_replace
     from unmix.jobs.grade import grade_files, grade_scene, grades_tree
@@ -149,11 +169,24 @@ def _check_usage(
 
 def print_grades(grades: Grades, *, cross_check: bool = False) -> None:
     """The table for people."""
-    from unmix.cli.tables import before_and_after, undefined_lines
+    from unmix.cli.tables import before_and_after, speech_table, undefined_lines
+    from unmix.metrics.information import ENOUGH_S
+    from unmix.metrics.words import CAUTION
 
     start, stop = grades.span_s
     say(f"Against the {grades.against} references, {stop - start:.1f} s at {grades.sample_rate} Hz")
     print_table(before_and_after(grades))
+    if any(talker.speech is not None for talker in grades.talkers):
+        print_table(speech_table(grades))
+        say(
+            "equivalent SNR: a mixture of the references with the others so far below would be as intelligible by STOI."
+        )
+        say(f"Mind: {CAUTION}.")
+        shortest = min(
+            (t.speech.speech_s for t in grades.talkers if t.speech is not None and t.speech.speech_s), default=0.0
+        )
+        if 0.0 < shortest < ENOUGH_S:
+            say(f"Bits rest on {shortest:.0f} s of speech and more; {ENOUGH_S:.0f} s are recommended.")
     for line in (*undefined_lines(grades), *grades.warnings):
         say(f"Note: {line}")
     if cross_check and grades.cross_check_db is not None:

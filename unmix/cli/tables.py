@@ -14,7 +14,7 @@ from unmix.metrics.grades import Grades, TalkerGrade
 if TYPE_CHECKING:
     from unmix.jobs.solution import Solution
 
-__all__ = ["before_and_after", "decibels", "number", "plain_table", "solution_table", "undefined_lines"]
+__all__ = ["before_and_after", "decibels", "number", "plain_table", "solution_table", "speech_table", "undefined_lines"]
 
 UNDEFINED = "–"
 _FIGURES = (
@@ -85,12 +85,47 @@ def before_and_after(grades: Grades, *, brief: bool = False) -> Table:
     return table
 
 
+_SPEECH = (
+    ("equivalent\nSNR, dB", "equivalent_snr_db", 1),
+    ("SIR, SII-\nweighted, dB", "sii_sir_db", 1),
+    ("bits/s", "bits_per_s", 0),
+    ("words, %\nIEEE", "words_ieee_percent", 0),
+    ("words, %\nDantale II", "words_dantale_percent", 0),
+)
+
+
+def speech_table(grades: Grades) -> Table:
+    """How well each talker is understood, before and after, beside STOI; the gains over segments of 3 s last."""
+    heads = [*(head for head, _, _ in _SPEECH), "STOI over 3 s\nmean [95 % interval]", "segments\n(silent)"]
+    table = plain_table([("talker", "left"), ("", "left"), *[(head, "right") for head in heads]], [])
+    for talker in grades.talkers:
+        if talker.speech is None:
+            continue
+        for label, part in (
+            ("before", talker.speech.before),
+            ("after", talker.speech.after),
+            ("gain", talker.speech.gain),
+        ):
+            gain = label == "gain"
+            cells = [number(getattr(part, key), digits, signed=gain) for _, key, digits in _SPEECH]
+            segments = talker.speech.segments if gain else None
+            if segments is not None:
+                mean, low, high = (
+                    number(v, 2, signed=True) for v in (segments.stoi.mean, segments.stoi.low, segments.stoi.high)
+                )
+                cells += [f"{mean} [{low} {high}]", f"{segments.used} ({segments.silent})"]
+            name = talker.name if label == "before" else ""
+            table.add_row(name, label, *cells, style="bold" if gain else None, end_section=gain)
+    return table
+
+
 def undefined_lines(grades: Grades) -> list[str]:
     """Why figures are missing, one line for each talker and reason."""
     lines = []
     for talker in grades.talkers:
         reasons: dict[str, list[str]] = {}
-        for figure, why in talker.undefined.items():
+        further = {} if talker.speech is None else talker.speech.after.undefined
+        for figure, why in {**talker.undefined, **further}.items():
             reasons.setdefault(why, []).append(figure)
         lines += [f"{talker.name}: no {', '.join(figures)}: {why}" for why, figures in reasons.items()]
     return lines

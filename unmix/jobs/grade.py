@@ -61,6 +61,7 @@ def grade(
     cross_check: bool = False,
     images: Signals | None = None,
     image_outputs: Signals | None = None,
+    speech: bool = True,
 ) -> Grades:
     """Grade talker signals against their references.
 
@@ -93,6 +94,9 @@ def grade(
         Each talker alone at the reference microphone, to read leakage off by projection.
     image_outputs : (images, talkers, samples), optional
         What the filters that made the estimates make of each image alone: leakage without a ruler's end.
+    speech : bool
+        Also words correct, equivalent ratio, weighted interference, bits, and gains over segments of 3 s; these take
+        most of the time.
 
     Raises
     ------
@@ -127,7 +131,7 @@ def grade(
         filter_length=filter_length,
         notes=notes,
     )
-    return grader.grade(given, match=match, image_outputs=image_outputs, cross_check=cross_check)
+    return grader.grade(given, match=match, image_outputs=image_outputs, cross_check=cross_check, speech=speech)
 
 
 def _fit_all(samples: int, sample_rate: int, **signals: Signals | None) -> tuple[dict[str, Any], list[str]]:
@@ -212,7 +216,12 @@ def grade_scene(
     estimates = estimates_of_scene(scene, Path(estimates_dir))
     matched, match, notes = _match(estimates.names, grader.names, match, str(estimates_dir))
     grades = grader.grade(
-        estimates.signals, match=match, matched=matched, cross_check=cross_check, notes=(*estimates.notes, *notes)
+        estimates.signals,
+        match=match,
+        matched=matched,
+        cross_check=cross_check,
+        speech=True,
+        notes=(*estimates.notes, *notes),
     )
     if out_dir is not None:
         write_grades(grades, out_dir, overwrite=overwrite, scene=scene.path, estimates=Path(estimates_dir))
@@ -280,7 +289,9 @@ def grade_files(
         filter_length=filter_length,
     )
     given = stack(estimates)
-    grades = grader.grade(given, match=match, matched=matched, cross_check=cross_check, notes=(*notes, *said))
+    grades = grader.grade(
+        given, match=match, matched=matched, cross_check=cross_check, speech=True, notes=(*notes, *said)
+    )
     if out_dir is not None:
         write_grades(grades, out_dir, overwrite=overwrite)
     return grades

@@ -32,6 +32,7 @@ from typing import Any
 import numpy as np
 import scipy.fft
 import scipy.linalg
+import scipy.signal
 from numpy.typing import NDArray
 
 from unmix.metrics.delayed import DelayedCopies
@@ -206,6 +207,24 @@ class ReferenceSet:
                 difference[:, others] -= filters.T.reshape(len(D), len(others), -1)
             alone[good, k] = self._quadratic(difference, self._lags)
         return by_itself, alone
+
+    def parts(self, estimate: Signals, talker: int) -> tuple[Floats, Floats]:
+        """s_target and e_interf of one estimate (samples,) against one reference, as signals of its length.
+
+        For an estimate and a reference of which the ratios are defined.
+        """
+        i = self._usable.index(talker)
+        D = self._scaled_correlations(estimate[None])
+        filters = self._joint_filters(D).reshape(len(self._usable), -1) / self._scale[:, None]
+        own = scipy.linalg.cho_solve((self._own_factors[i], True), D[0, i], check_finite=False) / self._scale[i]
+        samples = self.references.shape[1]
+
+        def filtered(taps: Floats, k: int) -> Floats:
+            return np.asarray(scipy.signal.oaconvolve(self.references[k], taps)[:samples])
+
+        target = filtered(own, talker)
+        explained = sum(filtered(taps, k) for taps, k in zip(filters, self._usable, strict=True))
+        return target, np.asarray(explained - target)
 
     def _factor_without(self, i: int) -> Floats:
         """Factor of G without the rows and columns of usable reference i."""

@@ -7,7 +7,7 @@ the microphones' figures) is computed once, for all estimates graded.
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
@@ -19,6 +19,8 @@ from unmix.metrics.bench import Bench, difference_to_mir_eval_db
 from unmix.metrics.distortion import EXACT, FILTER_LENGTH, ROUNDING_DB, Distortion, ReferenceSet, describe_unusable
 from unmix.metrics.grades import Figures, Grades, TalkerGrade
 from unmix.metrics.leakage import leakage_of_outputs_db, projected_leakage_db
+from unmix.metrics.speech import SpeechBench, disagreements
+from unmix.metrics.speech_figures import SpeechFigures, SpeechGrade
 from unmix.metrics.timebase import Matched, Span, Timebase, clarity
 
 __all__ = ["Grader", "Match"]
@@ -96,6 +98,8 @@ class Grader:
         self._benches: dict[Span, Bench] = {}
         self._befores: dict[Span, list[_Before]] = {}
         self._image_sets: dict[Span, ReferenceSet] = {}
+        self._speech_benches: dict[Span, SpeechBench] = {}
+        self._speech_befores: dict[tuple[Span, int], SpeechFigures] = {}
 
     def grade(
         self,
@@ -105,6 +109,7 @@ class Grader:
         matched: Matched | None = None,
         image_outputs: Signals | None = None,
         cross_check: bool = False,
+        speech: bool = False,
         notes: Sequence[str] = (),
     ) -> Grades:
         """Grade `estimates` (estimates, samples).
@@ -120,6 +125,8 @@ class Grader:
             What the filters behind the estimates make of each image alone; leakage is then read off these.
         cross_check : bool
             Recompute the ratios with mir_eval.
+        speech : bool
+            Also words, equivalent ratio, weighted interference, bits, and gains over segments of 3 s.
         notes : sequence of str
             Warnings that go into this result.
         """
@@ -138,10 +145,13 @@ class Grader:
             distortion = self._bench(time).split(aligned)
         leakage, leakage_by = self._leakage(aligned, matched, time, image_outputs)
         difference, why_not = self._cross_check(time, aligned, distortion, matched) if cross_check else (None, None)
+        talkers = tuple(
+            self._talker(k, time, offsets, matched, aligned, distortion, leakage) for k in range(len(self.names))
+        )
+        if speech:
+            talkers = tuple(self._with_speech(talker, k, time, aligned) for k, talker in enumerate(talkers))
         return Grades(
-            talkers=tuple(
-                self._talker(k, time, offsets, matched, aligned, distortion, leakage) for k in range(len(self.names))
-            ),
+            talkers=talkers,
             against=self.against,
             sample_rate=self.sample_rate,
             filter_length=self.filter_length,
@@ -149,7 +159,12 @@ class Grader:
             span_s=(time.start / self.sample_rate, time.stop / self.sample_rate),
             leakage_by=leakage_by,
             cross_check_db=difference,
-            warnings=(*self.notes, *notes, *self._warnings(time, offsets, matched, aligned, why_not)),
+            warnings=(
+                *self.notes,
+                *notes,
+                *self._warnings(time, offsets, matched, aligned, why_not),
+                *(line for t in talkers if t.speech is not None for line in disagreements(t.name, t.gain, t.speech)),
+            ),
         )
 
     def aligned(self, estimates: Signals, matched: Matched) -> tuple[Floats, Floats, Floats | None]:
@@ -210,8 +225,9 @@ class Grader:
                 for name, value in leaks.items()
                 if value is None
             }
+        found: dict[str, Any] = figures.figures()
         return TalkerGrade(
-            **figures.figures(),
+            **found,
             undefined=undefined,
             name=self.names[k],
             estimate=e,
@@ -225,6 +241,30 @@ class Grader:
             gain_over_best=None if before.best is None else figures.gain_over(before.best),
             leakage_db=leaks,
         )
+
+    def _with_speech(self, talker: TalkerGrade, k: int, time: Span, aligned: Floats) -> TalkerGrade:
+        """The grade with figures of understanding."""
+        bench, e = self._speech_bench(time), talker.estimate
+        after = SpeechFigures.none_because("no estimate was matched to this talker")
+        if e is not None:
+            after = bench.figures(aligned[e], talker, k)
+        before, segments = SpeechFigures.none_because("the unprocessed recording was not given"), None
+        if self.unprocessed is not None:
+            microphone = np.asarray(self.unprocessed[time.start : time.stop], dtype=np.float64)
+            if (time, k) not in self._speech_befores:
+                _drop_oldest(self._speech_befores, len(self.names) * KEPT)
+                self._speech_befores[time, k] = bench.figures(microphone, talker.unprocessed, k)
+            before = self._speech_befores[time, k]
+            segments = None if e is None else bench.segments(aligned[e], microphone, k)
+        gain = after.gain_over(before)
+        grade = SpeechGrade(after=after, before=before, gain=gain, speech_s=bench.speech_s(k), segments=segments)
+        return replace(talker, speech=grade)
+
+    def _speech_bench(self, time: Span) -> SpeechBench:
+        if time not in self._speech_benches:
+            _drop_oldest(self._speech_benches)
+            self._speech_benches[time] = SpeechBench(self._bench(time))
+        return self._speech_benches[time]
 
     def _heard_s(self, k: int) -> float | None:
         samples = None if self._clock.heard is None else self._clock.heard[k].samples
@@ -341,6 +381,6 @@ def _scores(distortion: Distortion) -> Floats:
     return scores
 
 
-def _drop_oldest(kept: dict[Span, Any]) -> None:
-    while len(kept) >= KEPT:
+def _drop_oldest(kept: dict[Any, Any], most: int = KEPT) -> None:
+    while len(kept) >= most:
         del kept[next(iter(kept))]

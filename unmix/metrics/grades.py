@@ -6,6 +6,8 @@ import html
 from dataclasses import dataclass, field, fields
 from typing import Any
 
+from unmix.metrics.speech_figures import SpeechGrade
+
 __all__ = ["FIGURES", "Figures", "Grades", "TalkerGrade"]
 
 FIGURES = ("sdr_db", "sir_db", "sar_db", "si_sdr_db", "stoi", "estoi")
@@ -64,6 +66,7 @@ class TalkerGrade(Figures):
     best_channel     which one that is
     gain_over_best   figures less those of the best microphone
     leakage_db       each other talker's leakage into this signal, by name; None without images
+    speech           figures of understanding beside STOI and ESTOI; None when they were not asked for
     """
 
     name: str
@@ -77,6 +80,7 @@ class TalkerGrade(Figures):
     best_channel: int | None = None
     gain_over_best: Figures | None = None
     leakage_db: dict[str, float | None] | None = None
+    speech: SpeechGrade | None = None
 
     @classmethod
     def from_dict(cls, tree: dict[str, Any]) -> TalkerGrade:
@@ -100,6 +104,7 @@ class TalkerGrade(Figures):
             best_microphone=None if best is None else part("best_microphone"),
             best_channel=None if best is None else best["channel"],
             gain_over_best=None if best is None else part("gain_over_best_microphone"),
+            speech=None if tree["speech"] is None else SpeechGrade.from_dict(tree["speech"]),
         )
 
     def to_dict(self) -> dict[str, Any]:
@@ -126,6 +131,7 @@ class TalkerGrade(Figures):
         if tree["best_microphone"] is not None:
             tree["best_microphone"]["channel"] = self.best_channel
         tree["leakage_db"] = self.leakage_db
+        tree["speech"] = None if self.speech is None else self.speech.to_dict()
         tree["undefined"] = undefined
         return tree
 

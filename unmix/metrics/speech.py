@@ -1,0 +1,103 @@
+"""Figures of understanding beside STOI and ESTOI: words, equivalent ratio, weighted interference, bits, segments.
+
+No measure has the last word: each was fitted to other listening tests. Where they disagree about a talker, that is
+said, and ears must decide.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from unmix.metrics.bands import importance_weighted_db
+from unmix.metrics.bench import Bench
+from unmix.metrics.equivalent import EquivalentRatio
+from unmix.metrics.grades import Figures
+from unmix.metrics.information import InformationReference
+from unmix.metrics.segments import SegmentGains, segment_gains
+from unmix.metrics.speech_figures import SPEECH_FIGURES, SpeechFigures, SpeechGrade
+from unmix.metrics.words import words_dantale_percent, words_ieee_percent
+
+__all__ = ["SpeechBench", "disagreements"]
+
+Floats = NDArray[np.float64]
+
+
+class SpeechBench:
+    """Figures of understanding on one bench; what depends on its references is computed once."""
+
+    def __init__(self, bench: Bench) -> None:
+        self._bench = bench
+
+    @cached_property
+    def _information(self) -> list[InformationReference]:
+        return [InformationReference(s, self._bench.sample_rate) for s in self._bench.references]
+
+    @cached_property
+    def _equivalent(self) -> list[EquivalentRatio]:
+        speech = self._bench.speech
+        return [EquivalentRatio(self._bench.references, k, speech[k]) for k in range(len(speech))]
+
+    def speech_s(self, talker: int) -> float:
+        """Seconds of speech that the measure in bits rests on; 0 when it is undefined."""
+        reference = self._information[talker]
+        return reference.speech_s if reference.undefined is None else 0.0
+
+    def figures(self, signal: Floats, known: Figures, talker: int) -> SpeechFigures:
+        """The figures of one signal (samples,) whose STOI and SIR are `known`."""
+        undefined: dict[str, str] = {}
+        words: tuple[float | None, float | None] = (None, None)
+        if known.stoi is not None:
+            words = words_ieee_percent(known.stoi), words_dantale_percent(known.stoi)
+        else:
+            undefined |= dict.fromkeys(SPEECH_FIGURES[:2], known.undefined.get("stoi", "STOI is undefined"))
+        ratio, why_no_ratio = self._equivalent[talker].ratio_db(known.stoi)
+        bits, why_no_bits = self._information[talker].bits_per_s(signal)
+        sir, why_no_sir = self._weighted(signal, known, talker)
+        for name, why in zip(SPEECH_FIGURES[2:], (why_no_ratio, why_no_sir, why_no_bits), strict=True):
+            if why is not None:
+                undefined[name] = why
+        return SpeechFigures(
+            words_ieee_percent=words[0],
+            words_dantale_percent=words[1],
+            equivalent_snr_db=ratio,
+            sii_sir_db=sir,
+            bits_per_s=bits,
+            undefined=undefined,
+        )
+
+    def _weighted(self, signal: Floats, known: Figures, talker: int) -> tuple[float | None, str | None]:
+        if known.sir_db is None:
+            return None, known.undefined.get("sir_db", "SIR is undefined")
+        target, interference = self._bench.set.parts(self._bench.hold_back(signal[None])[0], talker)
+        ratio = importance_weighted_db(target, interference, self._bench.sample_rate)
+        return ratio, None if ratio is not None else "no band holds both talker and interference"
+
+    def segments(self, after: Floats, before: Floats, talker: int) -> SegmentGains:
+        """Gains over segments of 3 s."""
+        return segment_gains(self._bench.references[talker], after, before, self._bench.sample_rate)
+
+
+NOTICEABLE = {"STOI": 0.02, "ESTOI": 0.02, "bits": 0.05}
+"""Gains smaller than this are no gains: in STOI and ESTOI as they are, in bits as a share of those before."""
+
+
+def disagreements(name: str, gain: Figures, speech: SpeechGrade) -> Iterator[str]:
+    """Where measures of intelligibility disagree about a talker, in words."""
+    signs: dict[str, int] = {}
+    for measure, value in (("STOI", gain.stoi), ("ESTOI", gain.estoi)):
+        if value is not None:
+            signs[measure] = _sign(value, NOTICEABLE[measure])
+    bits, before = speech.gain.bits_per_s, speech.before.bits_per_s
+    if bits is not None and before is not None:
+        signs["bits"] = _sign(bits, NOTICEABLE["bits"] * before)
+    up, down = ([m for m, sign in signs.items() if sign == way] for way in (1, -1))
+    if up and down:
+        yield f"{name}: measures disagree: {' and '.join(up)} got better, {' and '.join(down)} worse; listen to decide"
+
+
+def _sign(value: float, noticeable: float) -> int:
+    return 0 if abs(value) < noticeable else 1 if value > 0.0 else -1

@@ -14,6 +14,7 @@ COMMANDS: dict[str, str] = {
     "grade": "Grade talker signals against references, before and after.",
     "locate": "Find the talkers of a scene: where, how many, who speaks when.",
     "check": "Check recording and array before anything is separated.",
+    "calibrate": "Find each channel's gain, delay, polarity and position from takes.",
     "limits": "What an array can achieve at best, before anything is built.",
     "render": "Render a scene with known truth: mixture, references, scene file.",
     "live": "Separate talkers while they speak, from a pipe into a pipe.",

@@ -14,7 +14,7 @@ from unmix.jobs.findings import Finding
 from unmix.physics import speed_of_sound
 from unmix.scene import Scene
 
-__all__ = ["clock_findings", "copy_findings", "field_findings", "longest_delay", "unsynchronised"]
+__all__ = ["clock_findings", "copy_findings", "drifts", "field_findings", "longest_delay", "unsynchronised"]
 
 Floats = NDArray[np.float64]
 
@@ -57,15 +57,15 @@ def unsynchronised(clocks: Sequence[ClockFit | None], scene: Scene) -> NDArray[n
         if clock is None or m == scene.array.reference_channel:
             continue
         beyond = abs(clock.delay_s - known[m]) - limit - _SLACK_S
-        late[m] = (beyond > 3.0 * clock.spread_s / np.sqrt(clock.chunks)) or _drifts(clock, limit, scene)
+        late[m] = (beyond > 3.0 * clock.spread_s / np.sqrt(clock.chunks)) or drifts(clock, scene)
     return late
 
 
-def _drifts(clock: ClockFit, limit_s: float, scene: Scene) -> bool:
+def drifts(clock: ClockFit, scene: Scene) -> bool:
     """A slope beyond its own error, over more time than talkers who move could give it."""
     change = abs(clock.drift_ppm) * 1e-6 * scene.recording.duration_s
     plain = abs(clock.drift_ppm) > max(LEAST_DRIFT_PPM, DRIFT_DEVIATIONS * clock.drift_std_ppm)
-    return bool(clock.chunks >= 4 and plain and change > 2.0 * limit_s + 0.5 / scene.sample_rate)
+    return bool(clock.chunks >= 4 and plain and change > 2.0 * longest_delay(scene) + 0.5 / scene.sample_rate)
 
 
 def clock_findings(clocks: Sequence[ClockFit | None], late: NDArray[np.bool_], scene: Scene) -> Iterator[Finding]:
@@ -77,7 +77,7 @@ def clock_findings(clocks: Sequence[ClockFit | None], late: NDArray[np.bool_], s
             continue
         known = scene.array.delay_s[m] - scene.array.delay_s[reference]
         where = f"channel {m} against channel {reference}"
-        if _drifts(clock, limit, scene):
+        if drifts(clock, scene):
             yield Finding(
                 "drift", "unfit", f"clocks drift by {clock.drift_ppm:+.2f} +- {clock.drift_std_ppm:.2f} ppm", where,
                 min(0.999, 0.8 + 0.02 * abs(clock.drift_ppm) / max(clock.drift_std_ppm, 1e-3)),

@@ -131,7 +131,8 @@ def test_a_bound_on_look_ahead_says_what_it_costs(live: Live, scene: Path) -> No
     assert ran.status == 0
     assert "latency 64 samples (4.0 ms) as stated, 64, 64 as measured" in ran.err
     cut, whole_sir = map(float, ran.err.split("look-ahead leaves ")[1].split(" dB SIR")[0].split(" dB of "))
-    assert 0.0 < cut < whole_sir
+    # Filters made anew lose little; a tenth of a decibel may come out either way.
+    assert 30.0 < cut < whole_sir + 0.2
 
 
 def one_line(ran: Ran, said: str) -> None:

@@ -199,7 +199,7 @@ def _points(
     yield point("latency", usual)
     for length in LENGTHS:
         if length < usual.taps.shape[-1]:
-            yield point("work", shorten_to(usual, length))
+            yield point("work", shorten_to(bank, length, paths, spectra, rate))
     yield point("work", usual)
     for word in ALL_WORDS:
         yield point("word", usual, word)

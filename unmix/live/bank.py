@@ -7,8 +7,9 @@ add |v[n] - u[n]| at once.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,7 +22,16 @@ from unmix.solvers.stationary import FilterBank
 __all__ = ["BankStage", "Change", "fitted"]
 
 Floats = NDArray[np.float64]
-Design = Callable[[Sequence[Talker]], FilterBank]
+
+
+class Design(Protocol):
+    """Makes filters for talkers."""
+
+    def __call__(self, talkers: Sequence[Talker]) -> FilterBank:
+        """Whole."""
+
+    def within(self, talkers: Sequence[Talker], *, before: int, after: int) -> FilterBank:
+        """With `before` samples of the future and at most `after` of the past."""
 
 
 @dataclass(frozen=True)
@@ -63,14 +73,15 @@ class BankStage:
 
     design     makes the filters for talkers
     fade       samples that a change of bearings takes
-    lookahead  most samples of the future; what filters have beyond is cut. As many as they need when None
+    lookahead  most samples of the future; as many as filters want when None
     """
 
     def __init__(self, design: Design, talkers: Sequence[Talker], *, fade: int, lookahead: int | None = None) -> None:
         bank = design(talkers)
-        self.latency = bank.before if lookahead is None else min(lookahead, bank.before)
+        if lookahead is not None and lookahead < bank.before:
+            bank = design.within(talkers, before=lookahead, after=bank.after)
+        self.latency = bank.before
         self.talkers, self.channels = bank.taps.shape[:2]
-        bank = fitted(bank, before=self.latency)
         self.cut_share = bank.cut_share
         self._design, self._fade = design, max(1, fade)
         self._weight = np.sin(0.5 * np.pi * (np.arange(self._fade) + 0.5) / self._fade) ** 2
@@ -90,7 +101,8 @@ class BankStage:
 
     def steer(self, talkers: Sequence[Talker]) -> None:
         """Fade to the filters of other bearings; a fade that runs is finished first."""
-        bank = fitted(self._design(talkers), before=self.latency, after=self._convolver.capacity - self.latency - 1)
+        most = self._convolver.capacity - self.latency - 1
+        bank = self._design.within(talkers, before=self.latency, after=most)
         self._waiting = (bank.taps, bank.cut_share)
         if self._next is None:
             self._begin()

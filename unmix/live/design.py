@@ -11,6 +11,8 @@ from numpy.typing import NDArray
 from unmix.array import Array
 from unmix.audio import Recording
 from unmix.errors import InputError, UnsolvableError
+from unmix.live.bank import fitted
+from unmix.live.refit import refit
 from unmix.model.delays import Paths, paths_from_bearings
 from unmix.model.noise import Spectra
 from unmix.scene import Scene, Talker
@@ -21,6 +23,11 @@ from unmix.variant import Variant
 __all__ = ["Designer", "check_is_filters", "noise_spectra"]
 
 Floats = NDArray[np.float64]
+
+CUT_SHARE = 1e-4
+"""Share of the filters' magnitude up to which tails are simply cut."""
+LONGEST_REFIT = 1023
+"""Samples of the past up to which filters are made anew; more would take longer and bring little."""
 
 
 @dataclass(frozen=True)
@@ -49,6 +56,18 @@ class Designer:
         if assembly.bank is None:
             raise UnsolvableError(f"variant {self.variant.name!r} is no filter bank; {_USE}")
         return assembly.bank
+
+    def within(self, talkers: Sequence[Talker], *, before: int, after: int) -> FilterBank:
+        """The variant's filters with `before` samples of the future and at most `after` of the past.
+
+        Little outside is cut; where it is more, the taps that remain make up for it.
+        """
+        bank = self(talkers)
+        cut = fitted(bank, before=before, after=after)
+        if cut.cut_share <= bank.cut_share + CUT_SHARE:
+            return cut
+        past = min(after, bank.after, LONGEST_REFIT)
+        return refit(bank, self.paths(talkers), self.sample_rate, before=before, after=past)
 
     def paths(self, talkers: Sequence[Talker]) -> Paths:
         """Delays and gains of talkers at rest."""

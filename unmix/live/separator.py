@@ -55,8 +55,9 @@ class LiveSeparator:
     noise : (channels, samples) array, optional
         A stretch without talkers, for noise `measured`.
     lookahead_s : float, optional
-        Most that the filters may see of the future, which is the latency; what is cut off shows in `cut_share`. Left
-        out, the filters are whole and the output equals that of `unmix.solve`, late by `latency_samples`.
+        Most that the filters may see of the future, which is the latency. They are then those whose output is nearest
+        to the variant's; `cut_share` says how much of the variant's filters lies outside. Left out, filters are whole
+        and the output equals that of `unmix.solve`, late by `latency_samples`.
     fade_s : float
         Seconds over which filters change when bearings do.
     source : callable, optional

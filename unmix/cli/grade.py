@@ -73,7 +73,8 @@ def command(
     """Grade talker signals against references, before and after.
 
     Either a SCENE with references and --estimates DIR, or files: --reference and --estimate once per talker, and
-    --unprocessed for the recording. Or what people heard: --listeners. A report that `solve` left in the --out folder is renewed with the figures.
+    --unprocessed for the recording. Or what people heard: --listeners. A report that `solve` left in the --out folder
+    is renewed with the figures.
     """
     if listeners:
         if scene is not None or references or given:

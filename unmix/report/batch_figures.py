@@ -48,7 +48,9 @@ def ranking_figure(ranked: Sequence[RankedVariant], metric: str) -> Figure:
             ax.plot([variant.mean], [y], MARKS[(variant.group - 1) % 5], color=colour, markersize=6, zorder=3)
             if y and variant.group != known[y - 1].group:
                 ax.axhline(y - 0.5, color=INK, linewidth=0.7)
-        ax.axvline(0.0, color=QUIET, linewidth=0.8)
+        low, high = ax.get_xlim()
+        if low - (high - low) <= 0.0 <= high + (high - low):  # further away it would only squeeze what differs
+            ax.axvline(0.0, color=QUIET, linewidth=0.8)
         ax.set_yticks(range(len(known)), [plain_label(v.name) for v in known])
         ax.set_ylim(len(known) - 0.4, -0.6)
         ax.tick_params(axis="y", length=0)

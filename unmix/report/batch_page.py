@@ -30,7 +30,7 @@ from unmix.report.words import figure_text, understandable
 from unmix.scene import Scene
 from unmix.variant import Variant
 
-__all__ = ["BATCH_SOUND_MB", "batch_report", "write_batch_report"]
+__all__ = ["BATCH_SOUND_MB", "batch_report", "telling_scenes", "write_batch_report"]
 
 BATCH_SOUND_MB = 10.0
 """Room for the sound of the three scenes, of the fifteen megabytes the page should stay below."""
@@ -363,7 +363,7 @@ def _details(material: BatchMaterial, notes: list[str], megabytes: float, *, hid
         return []
     variant = msgspec.convert(material.settings[winner.name], Variant)
     found = []
-    for key, (role, scene) in _telling_scenes(material, winner.name).items():
+    for key, (role, scene) in telling_scenes(material, winner.name).items():
         try:
             found.append(_detail(material, key, role, scene, variant, megabytes, hide_names=hide_names))
         except UnmixError as error:
@@ -371,7 +371,8 @@ def _details(material: BatchMaterial, notes: list[str], megabytes: float, *, hid
     return found
 
 
-def _telling_scenes(material: BatchMaterial, winner: str) -> dict[str, tuple[str, str]]:
+def telling_scenes(material: BatchMaterial, winner: str) -> dict[str, tuple[str, str]]:
+    """The scenes in which a variant gains most, the median and least: (role, scene) by key."""
     metric = material.metrics[0]
     gains = material.tables[metric.name][:, material.variants.index(winner)]
     known = np.flatnonzero(np.isfinite(gains) & [name in material.scene_files for name in material.scenes])

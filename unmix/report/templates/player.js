@@ -142,6 +142,12 @@ class Player {
     this.changed();
   }
 
+  /* Stop for good and give the sound device back. */
+  close() {
+    this.stop();
+    if (this.context) this.context.close();
+  }
+
   async toggle() { return this.playing ? this.stop() : this.play(); }
 
   seek(seconds) {

@@ -10,7 +10,6 @@ from tests.conftest import circle
 from unmix.errors import InputError, UnsolvableError
 from unmix.export.grid import BearingGrid, bearing_grid, interpolation_cost
 from unmix.export.sir import speech_spectra
-from unmix.live.bank import fitted
 from unmix.live.design import Designer
 from unmix.scene import Talker
 from unmix.variant import PRESETS
@@ -31,7 +30,7 @@ def grid() -> BearingGrid:
 def test_entries_are_the_filters_made_there(grid: BearingGrid) -> None:
     assert grid.taps.shape == (36, 2, 7, 351)
     entry = int(np.flatnonzero(grid.azimuth_deg == 40.0)[0])
-    made = fitted(DESIGN([Talker.at("mate", 40.0, distance_m=1.2), SEATS[1]]), before=100, after=250).taps
+    made = DESIGN.within([Talker.at("mate", 40.0, distance_m=1.2), SEATS[1]], before=100, after=250).taps
     assert np.array_equal(grid.taps[entry, ..., : made.shape[-1]], made)
     for how in ("nearest", "linear", "cubic"):
         assert np.allclose(grid.at(40.0, how), grid.taps[entry], rtol=0, atol=1e-12)  # type: ignore[arg-type]

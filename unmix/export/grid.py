@@ -16,7 +16,6 @@ from numpy.typing import NDArray
 
 from unmix.errors import InputError, UnsolvableError
 from unmix.export.sir import predicted_sir_db
-from unmix.live.bank import fitted
 from unmix.live.design import Designer
 from unmix.scene import Talker
 from unmix.solvers.stationary import FilterBank
@@ -102,8 +101,8 @@ def bearing_grid(
     azimuths = -180.0 + step_deg * np.arange(count)
     entries: list[Floats | None] = []
     for index, azimuth in enumerate(azimuths):
-        bank = _bank_at(design, talkers, talker, float(azimuth), least_apart_deg)
-        entries.append(None if bank is None else _exactly(bank, before, after))
+        bank = _bank_at(design, talkers, talker, float(azimuth), least_apart_deg, before, after)
+        entries.append(None if bank is None else _padded(bank, after))
         if progress is not None:
             progress((index + 1) / count)
     made = [entry for entry in entries if entry is not None]
@@ -147,12 +146,12 @@ def interpolation_cost(
     left: dict[Interpolation, list[float]] = {how: [] for how in INTERPOLATIONS}
     places = []
     for azimuth in grid.azimuth_deg + 180.0 / len(grid.azimuth_deg):
-        bank = _bank_at(design, talkers, grid.talker, float(azimuth), least_apart_deg)
+        bank = _bank_at(design, talkers, grid.talker, float(azimuth), least_apart_deg, grid.delay, after)
         between = {how: grid.at(float(azimuth), how) for how in INTERPOLATIONS}
         if bank is None or not all(np.isfinite(taps).all() for taps in between.values()):
             continue
         paths = design.paths(_placed(talkers, grid.talker, float(azimuth)))
-        made = predicted_sir_db(fitted(bank, before=grid.delay, after=after), paths, spectra, design.sample_rate)
+        made = predicted_sir_db(bank, paths, spectra, design.sample_rate)
         places.append(float(azimuth))
         for how, taps in between.items():
             sir = predicted_sir_db(FilterBank(taps, grid.delay, 0.0), paths, spectra, design.sample_rate)
@@ -180,17 +179,22 @@ def _placed(talkers: Sequence[Talker], talker: int, azimuth_deg: float) -> list[
 
 
 def _bank_at(
-    design: Designer, talkers: Sequence[Talker], talker: int, azimuth_deg: float, least_apart_deg: float
+    design: Designer,
+    talkers: Sequence[Talker],
+    talker: int,
+    azimuth_deg: float,
+    least_apart_deg: float,
+    before: int,
+    after: int,
 ) -> FilterBank | None:
     others = [np.degrees(t.azimuth or 0.0) for i, t in enumerate(talkers) if i != talker]
     if any(abs((azimuth_deg - other + 180.0) % 360.0 - 180.0) < least_apart_deg for other in others):
         return None
     try:
-        return design(_placed(talkers, talker, azimuth_deg))
+        return design.within(_placed(talkers, talker, azimuth_deg), before=before, after=after)
     except UnsolvableError:
         return None
 
 
-def _exactly(bank: FilterBank, before: int, after: int) -> Floats:
-    taps = fitted(bank, before=before, after=after).taps
-    return np.pad(taps, ((0, 0), (0, 0), (0, before + after + 1 - taps.shape[-1])))
+def _padded(bank: FilterBank, after: int) -> Floats:
+    return np.pad(bank.taps, ((0, 0), (0, 0), (0, after - bank.after)))

@@ -8,78 +8,34 @@ from __future__ import annotations
 
 import time
 import warnings as warning_system
-from collections.abc import Callable, Iterable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
 from unmix.array import Array
-from unmix.bearings.activity import Shares, active_stretches, talker_shares
-from unmix.bearings.bins import HIGHEST_HZ, make_steering
-from unmix.bearings.count import MOST_TALKERS, TalkerCount
+from unmix.bearings.activity import Shares, active_stretches
 from unmix.bearings.estimate import bearing_estimate
-from unmix.bearings.find import FoundTalker, find_talkers
-from unmix.bearings.fit import FrameCovariance
-from unmix.bearings.orientation import estimate_clock_offset, orientation_notes
-from unmix.bearings.polish import polished
-from unmix.bearings.scan import FEWEST_BINS, SLICE_S, Rotations, Scan, scan
-from unmix.bearings.scan_peaks import SLOWEST_HZ, scan_peaks, scan_slowly
-from unmix.bearings.space import Region, SearchSpace, search_space
-from unmix.errors import InputError, UnmixWarning, UnsolvableError
+from unmix.bearings.find import FoundTalker
+from unmix.bearings.scan import SLICE_S, Scan
+from unmix.bearings.space import Region, SearchSpace
+from unmix.errors import InputError, UnmixWarning
 from unmix.health import ChannelHealth
+from unmix.jobs.locate_search import find_in_recording, orient, space_of
+from unmix.jobs.locate_task import METHODS, LocateTask, Method, Progress, check_task, warnings_of
 from unmix.jobs.located import Located, LocatedTalker, ScoreMap
 from unmix.jobs.naming import name_talkers
-from unmix.scene import Scene, Talker
+from unmix.scene import Scene
 from unmix.track import Orientation, Track
 
 __all__ = ["METHODS", "Method", "clock_offset", "locate", "locate_array", "locate_quietly"]
 
 Floats = NDArray[np.float64]
-Chunks = Callable[[], Iterable[Floats]]
-Progress = Callable[[float], None]
-Method = Literal["mixture", "srp", "snapshots", "fit"]
-METHODS: tuple[Method, ...] = ("mixture", "srp", "snapshots", "fit")
 
-SHORTEST_S = 0.1
-_SLOW = (
-    "snapshots taken slowly: they tell the axis sound came along, not from which end; one is taken, the opposite "
-    "direction is listed as a candidate"
-)
 # Root mean square elevation of directions spread evenly over a hemisphere: sqrt(pi^2/4 - 2).
 _ANY_ELEVATION = 0.684
 _CHUNK_S = 2.0
-
-
-@dataclass(frozen=True)
-class _Task:
-    """What is to be located, and how."""
-
-    chunks: Chunks
-    duration_s: float
-    array: Array
-    sample_rate: int
-    where: str
-    asked: int | None
-    method: Method
-    region: Region
-    orientation: Orientation | None
-    clock_offset_s: float | Literal["estimate"]
-    temperature_c: float
-    distance_m: float | None
-    known: tuple[Talker, ...] = ()
-    progress: Progress | None = None
-
-    @property
-    def slow(self) -> bool:
-        """Whether the recording is a row of snapshots, too slow for spectra of voices."""
-        return self.sample_rate < SLOWEST_HZ
-
-    def rotations(self, offset_s: float) -> Rotations | None:
-        """Rotations, array to world, at times of the recording; None when the array rests."""
-        orientation = self.orientation
-        return None if orientation is None else lambda time_s: orientation.matrices(time_s + offset_s)
 
 
 def locate(
@@ -125,17 +81,17 @@ def clock_offset(scene: Scene) -> tuple[float, tuple[str, ...]]:
 
     Raises InputError or FileError as `locate` does.
     """
-    offset_s, notes = _orient(_task_of(scene))
+    offset_s, notes = orient(_task_of(scene))
     return offset_s, tuple(notes)
 
 
 def _task_of(
     scene: Scene, *, method: Method = "mixture", region: Region = "sphere", progress: Progress | None = None
-) -> _Task:
+) -> LocateTask:
     distances = [t.distance_m for t in scene.talkers if t.distance_m is not None]
     # Waves bend by the inverse of the distance: its mean serves for all while nobody is told apart.
     known = bool(distances) and len(distances) == len(scene.talkers)
-    return _Task(
+    return LocateTask(
         chunks=scene.recording.chunks,
         duration_s=scene.recording.duration_s,
         array=scene.array,
@@ -182,7 +138,7 @@ def locate_array(
         channel, sample = np.argwhere(~np.isfinite(recording))[0]
         raise InputError(f"recording: channel {channel}, sample {sample} is NaN or infinite; repair or cut it out")
     size = round(_CHUNK_S * sample_rate)
-    task = _Task(
+    task = LocateTask(
         chunks=lambda: (recording[:, at : at + size] for at in range(0, recording.shape[1], size)),
         duration_s=recording.shape[1] / sample_rate,
         array=array,
@@ -200,26 +156,25 @@ def locate_array(
     return _warned(_locate(task))
 
 
-def _locate(task: _Task) -> Located:
+def _locate(task: LocateTask) -> Located:
     began = time.perf_counter()
-    _check(task)
-    offset_s, notes = _orient(task)
+    check_task(task)
+    offset_s, notes = orient(task)
     rotations = task.rotations(offset_s)
-    space = _space(task, rotations)
+    space = space_of(task, rotations)
     health = ChannelHealth(task.array.channels)
-    seen, found, count, shares = _find(task, space, rotations, health)
+    seen, found, count, shares = find_in_recording(task, space, rotations, health)
     talkers = [_describe(t, k, shares, space, task) for k, t in enumerate(found)]
     named, naming_notes = name_talkers(talkers, task.known, task.duration_s)
-    lines = (*notes, *_warnings(seen, space, named, count, task), *naming_notes)
+    lines = (*notes, *warnings_of(seen, space, named, count, task), *naming_notes)
     if seen.bins:
         lines += tuple(health.findings())
-    ambiguity = _SLOW if task.slow else space.ambiguity
     return Located(
         talkers=tuple(named),
         count=count,
         method=task.method,
         frame="array" if rotations is None else "world",
-        ambiguity=ambiguity,
+        ambiguity=task.ambiguity_of(space),
         warnings=lines,
         duration_s=task.duration_s,
         score=_score_map(seen, space),
@@ -229,128 +184,7 @@ def _locate(task: _Task) -> Located:
     )
 
 
-def _check(task: _Task) -> None:
-    if task.method not in METHODS:
-        raise InputError(f"{task.where}: method {task.method!r} is not known; choose one of {', '.join(METHODS)}")
-    if task.duration_s < SHORTEST_S:
-        raise InputError(
-            f"{task.where}: the recording lasts {task.duration_s * 1e3:.0f} ms; at least {SHORTEST_S * 1e3:.0f} ms are "
-            "needed"
-        )
-    if task.slow and (task.method != "snapshots" or task.orientation is not None):
-        raise UnsolvableError(
-            f"{task.where}: at {task.sample_rate} Hz there are no spectra of voices to locate by; "
-            + ("record faster to use an orientation" if task.method == "snapshots" else "take the method snapshots")
-        )
-    if task.asked is not None and not 0 <= task.asked <= MOST_TALKERS:
-        raise InputError(f"{task.where}: {task.asked} talkers asked for; 0 to {MOST_TALKERS} can be told apart")
-
-
-def _orient(task: _Task) -> tuple[float, list[str]]:
-    """Clock offset of the orientation, estimated in a pass of its own when asked for, and what is to be said of it."""
-    if task.orientation is None:
-        return 0.0, []
-    notes = []
-    offset_s = task.clock_offset_s
-    if offset_s == "estimate":
-        space = _space(task, None)
-        steering = make_steering(task.array, task.sample_rate, temperature_c=task.temperature_c)
-        seen = scan(task.chunks(), space, steering, task.duration_s, distance_m=task.distance_m)
-        estimate = estimate_clock_offset(task.orientation, seen.detections, space, task.duration_s)
-        notes.append(estimate.note)
-        offset_s = estimate.offset_s or 0.0
-    return float(offset_s), notes + orientation_notes(task.orientation, offset_s, task.duration_s)
-
-
-def _space(task: _Task, rotations: Rotations | None) -> SearchSpace:
-    turns = None if rotations is None else rotations(np.linspace(0.0, task.duration_s, 61))
-    return search_space(task.array.positions_m, turns, region=task.region, where=task.where)
-
-
-def _find(
-    task: _Task, space: SearchSpace, rotations: Rotations | None, health: ChannelHealth
-) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
-    """The pass over the recording, talkers and their number, and whose bins are whose."""
-    if task.slow:
-        return _find_slowly(task, space, health)
-    mixture = task.method in ("mixture", "fit")
-    steering = make_steering(
-        task.array, task.sample_rate, temperature_c=task.temperature_c, spacing=space.spacing, whiten=mixture
-    )
-    block = FrameCovariance(task.array.channels, task.sample_rate, highest_hz=HIGHEST_HZ)
-    chunks = _watched(task, health, block if mixture and rotations is None else None)
-    if task.method in ("srp", "snapshots"):
-        seen = scan_peaks(
-            chunks,
-            task.method,
-            task.array,
-            space,
-            steering,
-            task.duration_s,
-            rotations=rotations,
-            distance_m=task.distance_m,
-            temperature_c=task.temperature_c,
-        )
-    else:
-        seen = scan(chunks, space, steering, task.duration_s, rotations=rotations, distance_m=task.distance_m)
-    found, count = find_talkers(seen, space, steering, asked=task.asked, distance_m=task.distance_m)
-    shares = talker_shares(seen, space, steering, _projections(found, space.rank), distance_m=task.distance_m)
-    found, _ = polished(
-        found,
-        shares.outside,
-        block,
-        task.array,
-        space,
-        temperature_c=task.temperature_c,
-        distance_m=task.distance_m,
-        always=task.method == "fit",
-    )
-    return seen, found, count, shares
-
-
-def _find_slowly(
-    task: _Task, space: SearchSpace, health: ChannelHealth
-) -> tuple[Scan, list[FoundTalker], TalkerCount, Shares]:
-    """As `_find`, from snapshots alone."""
-    seen = scan_slowly(
-        _watched(task, health),
-        task.array,
-        space,
-        task.sample_rate,
-        task.duration_s,
-        distance_m=task.distance_m,
-        temperature_c=task.temperature_c,
-    )
-    # Nothing is steered: the array's response is never asked for.
-    steering = make_steering(task.array, 16000, temperature_c=task.temperature_c, whiten=False)
-    found, count = find_talkers(seen, space, steering, asked=task.asked)
-    shares = talker_shares(seen, space, steering, _projections(found, space.rank))
-    return seen, found, count, shares
-
-
-def _watched(task: _Task, health: ChannelHealth, block: FrameCovariance | None = None) -> Iterator[Floats]:
-    """The recording's chunks, looked at and taken into ``block`` on their way, and reported as progress."""
-    done = 0
-    for chunk in task.chunks():
-        health.add(chunk)
-        if block is not None:
-            block.add(chunk)
-        yield chunk
-        done += chunk.shape[1]
-        if task.progress is not None:
-            task.progress(min(1.0, done / (task.duration_s * task.sample_rate)))
-
-
-def _projections(found: list[FoundTalker], rank: int) -> Callable[[Floats], Floats]:
-    def at(time_s: Floats) -> Floats:
-        if not found:
-            return np.zeros((len(time_s), 0, rank))
-        return np.stack([t.at(time_s) for t in found], axis=1)
-
-    return at
-
-
-def _describe(t: FoundTalker, index: int, shares: Shares, space: SearchSpace, task: _Task) -> LocatedTalker:
+def _describe(t: FoundTalker, index: int, shares: Shares, space: SearchSpace, task: LocateTask) -> LocatedTalker:
     """A found talker as the user sees it."""
     distance_m = task.distance_m
     outside = float(shares.outside[index])
@@ -394,36 +228,3 @@ def _score_map(seen: Scan, space: SearchSpace) -> ScoreMap:
 def _detected(seen: Scan, space: SearchSpace) -> Floats:
     rows = [(d.time_s, float(azimuth)) for d in seen.detections if len(d.x) for azimuth in space.bearings(d.x)[0]]
     return np.array(rows).reshape(-1, 2)
-
-
-def _warnings(
-    seen: Scan, space: SearchSpace, talkers: list[LocatedTalker], count: TalkerCount, task: _Task
-) -> Iterator[str]:
-    """What the user should know, one line each."""
-    asked = task.asked
-    if not np.any(seen.loud > 0.0):
-        yield "nothing but silence or steady noise in the recording: no talker can be found; check channels and levels"
-    elif seen.bins < FEWEST_BINS:
-        yield "too little speech stands out of the noise to say where it comes from; no talker was found"
-    elif asked is not None and asked > len(talkers):
-        yield f"{asked} talkers were asked for, and only {len(talkers)} directions could be found"
-    elif not talkers and asked is None:
-        yield "there is sound, but no direction stands out of it: no talker was found; say how many there are to insist"
-    doubtful = [t.name for t in talkers if t.doubtful]
-    if doubtful:
-        yield (
-            f"{asked} talkers were asked for, and the recording speaks for {count.estimated}: "
-            f"{', '.join(doubtful)} may be a reflection, or nobody"
-        )
-    if asked is not None and asked < count.lowest:
-        yield f"{asked} talkers were asked for, and the recording speaks for {count.estimated}: the plainest were taken"
-    if asked is None and count.reason is not None:
-        yield count.reason
-    ambiguity = _SLOW if task.slow else space.ambiguity
-    if ambiguity is not None and talkers:
-        yield ambiguity
-    if task.array.responses is not None:
-        yield "measured responses are not used for locating: the microphones are taken as free of obstacles"
-    for talker in task.known:
-        if not talker.located and talker.elevation:
-            yield f"{talker.name}: `elevation_deg` without `azimuth_deg` is no bearing; both were located"

@@ -37,7 +37,7 @@ from unmix.track import Orientation, Track
 
 RATE = 16000
 FOUND_DEG = 10.0
-ROWS = ((1, 0.4), (2, None), (3, None), (2, 0.2), (3, 0.2), (2, 0.4), (3, 0.4), (2, 0.6), (3, 0.6))
+ROWS = ((1, 0.4), (2, None), (3, None), (2, 0.2), (3, 0.2), (2, 0.4), (3, 0.4), (2, 0.6), (3, 0.6), (4, 0.4))
 
 
 def apart_deg(a: Floats, b: Floats) -> Floats:
@@ -75,9 +75,10 @@ def at_rest(scenes: int, rows: Sequence[tuple[int, float | None]] = ROWS) -> Non
     """Talkers at rest, their number estimated."""
     table = []
     for talkers, t20_s in rows:
-        errors, scores, bounds, whole, counted, invented = [], [], [], 0, 0, 0
+        errors, scores, bounds, measured, whole, counted, invented = [], [], [], [], 0, 0, 0
         for case in drawn_cases("rest", talkers, t20_s, TABLE_SEEDS[:scenes]):
             rendered = case.render()
+            measured += [t for t in rendered.t20_s if t is not None]
             located = locate_array(rendered.mixture, rendered.array, RATE)
             error, stated = matched(located, np.radians(case.azimuths_deg))
             near = error < FOUND_DEG
@@ -88,7 +89,8 @@ def at_rest(scenes: int, rows: Sequence[tuple[int, float | None]] = ROWS) -> Non
             invented += len(located.talkers) - int(near.sum())
             whole += bool(near.sum() == talkers == len(located.talkers))
         table.append(
-            [talkers, "none" if t20_s is None else t20_s, f"{whole} of {scenes}", f"{counted} of {scenes}", invented,
+            [talkers, "none" if t20_s is None else f"{np.mean(measured):.2f}", f"{whole} of {scenes}",
+             f"{counted} of {scenes}", invented,
              f"{np.median(errors):.2g}", f"{np.percentile(errors, 90):.2g}", _rms(scores), f"{_rms(bounds):.2g}"]
         )  # fmt: skip
     print_table(

@@ -12,6 +12,8 @@ from typing import Any
 import numpy as np
 
 from unmix.metrics.grades import FIGURES, Figures, Grades
+from unmix.metrics.intervals import Interval
+from unmix.metrics.words import CAUTION
 from unmix.report.figures import embedded_svg
 from unmix.report.material import SceneMaterial, pseudonyms
 from unmix.report.page import PageFile, render_page, versions, write_page
@@ -26,6 +28,13 @@ REPORT = "report.html"
 SOUND_MB = 5.0
 """Room for the sound, of the six megabytes that a mail attachment should stay below."""
 
+_SPEECH = (
+    ("words_ieee_percent", "words", "IEEE, %", 0),
+    ("words_dantale_percent", "words", "Dantale II, %", 0),
+    ("equivalent_snr_db", "equivalent SNR", "dB", 1),
+    ("sii_sir_db", "SIR, speech bands", "dB", 1),
+    ("bits_per_s", "intelligibility", "bit/s", 1),
+)
 _HEADS = {
     "sdr_db": ("SDR", "dB"),
     "sir_db": ("SIR", "dB"),
@@ -83,6 +92,7 @@ def scene_report(
         views=scene_views(material, sound),
         **_drawings(material, verdicts),
         figures=_figures(material.grades) if material.grades is not None else None,
+        speech=_speech(material.grades) if material.grades is not None else None,
         done=_done(material),
         settings=_settings(material),
     )
@@ -146,7 +156,8 @@ def _warnings(material: SceneMaterial, sound: SceneSound | None) -> list[str]:
         lines += material.grades.warnings
         for talker in material.grades.talkers:
             reasons: dict[str, list[str]] = {}
-            for figure, why in talker.undefined.items():
+            further = {} if talker.speech is None else talker.speech.after.undefined
+            for figure, why in {**talker.undefined, **further}.items():
                 reasons.setdefault(why, []).append(figure)
             lines += [f"{talker.name}: no {', '.join(names)}: {why}" for why, names in reasons.items()]
     return list(dict.fromkeys(lines))
@@ -294,6 +305,52 @@ def _figures(grades: Grades) -> dict[str, Any]:
         f"{grades.filter_length} taps, every signal held back {grades.guard_samples} samples behind its reference."
     )
     return {"rows": rows, "heads": [_HEADS[name] for name in FIGURES], "caption": caption}
+
+
+def _speech(grades: Grades) -> dict[str, Any] | None:
+    """The table of what is understood, with intervals over segments; None when it was not asked for."""
+    rows = []
+    for talker in grades.talkers:
+        if talker.speech is None:
+            continue
+        segments = talker.speech.segments
+        for label, part in (
+            ("before", talker.speech.before),
+            ("after", talker.speech.after),
+            ("gain", talker.speech.gain),
+        ):
+            cells = [
+                {
+                    "text": figure_text(getattr(part, name), digits, signed=label == "gain"),
+                    "why": part.undefined.get(name, ""),
+                }
+                for name, _, _, digits in _SPEECH
+            ]
+            over = ("", "")
+            if label == "gain" and segments is not None:
+                silent = f", {segments.silent} silent" if segments.silent else ""
+                over = (_interval_text(segments.stoi), f"{segments.used}{silent}")
+            cells += [{"text": text, "why": ""} for text in over]
+            first = label == "before"
+            rows.append(
+                {
+                    "name": talker.name if first else None,
+                    "span": 3,
+                    "label": label,
+                    "kind": "first" if first else label,
+                    "cells": cells,
+                }
+            )
+    if not rows:
+        return None
+    heads = [(title, unit) for _, title, unit, _ in _SPEECH]
+    heads += [("STOI over 3 s", "mean gain [95 % interval]"), ("segments", "of 3 s")]
+    return {"rows": rows, "heads": heads, "caption": f"Beside STOI. {CAUTION[:1].upper()}{CAUTION[1:]}."}
+
+
+def _interval_text(interval: Interval) -> str:
+    mean, low, high = (figure_text(v, 2, signed=True) for v in (interval.mean, interval.low, interval.high))
+    return f"{mean} [{low} {high}]"
 
 
 def _done(material: SceneMaterial) -> list[tuple[str, str]]:

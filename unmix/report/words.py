@@ -1,14 +1,7 @@
 """Figures put into words: what a reader takes along from the first screen.
 
-Share of words right that sentence tests gave at a short-time objective intelligibility d [1]_, by two published fits:
-
-    100 / (1 + exp(a d + b)),    IEEE sentences a = -17.4906, b = 9.6921;  Dantale II a = -14.5435, b = 7.0792
-
-They were fitted to normal-hearing listeners and these sentences. Here they only choose the words of the verdict, which
+Words are chosen by the words correct that two published mappings predict from STOI (`unmix.metrics.words`); the verdict
 claims the lower of the two.
-
-.. [1] C. H. Taal et al., "An algorithm for intelligibility prediction of time-frequency weighted noisy speech",
-   IEEE Transactions on Audio, Speech, and Language Processing 19(7), 2011.
 """
 
 from __future__ import annotations
@@ -17,10 +10,10 @@ import math
 from dataclasses import dataclass
 
 from unmix.metrics.grades import TalkerGrade
+from unmix.metrics.words import words_dantale_percent, words_ieee_percent
 
 __all__ = ["Verdict", "figure_text", "talker_verdict", "understandable", "words_right_percent"]
 
-FITS = {"IEEE sentences": (-17.4906, 9.6921), "Dantale II": (-14.5435, 7.0792)}
 UNDERSTOOD, PARTLY = 95.0, 50.0
 """Percent of words from which somebody can be understood, or half understood: a choice, not a standard."""
 UNDEFINED = "\u2013"
@@ -43,8 +36,8 @@ class Verdict:
 
 def words_right_percent(stoi: float) -> tuple[float, float]:
     """The lower and the higher of the two predictions."""
-    shares = sorted(100.0 / (1.0 + math.exp(a * stoi + b)) for a, b in FITS.values())
-    return shares[0], shares[-1]
+    ieee, dantale = words_ieee_percent(stoi), words_dantale_percent(stoi)
+    return min(ieee, dantale), max(ieee, dantale)
 
 
 def figure_text(value: float | None, digits: int, *, signed: bool = False) -> str:

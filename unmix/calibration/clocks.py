@@ -77,17 +77,20 @@ class ClockMeter:
         return [fit_clock(time_s, delay[:, m], peak[:, m]) for m in range(channels)]
 
 
-def chunk_delays(chunk: Floats, reference: int, sample_rate: int) -> tuple[Floats, Floats]:
+def chunk_delays(chunk: Floats, reference: int, sample_rate: float) -> tuple[Floats, Floats]:
     """Delay in seconds of each channel against the reference, and the signed height of the correlation's peak in
     deviations of all lags."""
-    size = scipy.fft.next_fast_len(2 * chunk.shape[1], real=True)
-    spectrum = scipy.fft.rfft(chunk.astype(np.float32), size, axis=1)
-    f = scipy.fft.rfftfreq(size, 1.0 / sample_rate)
-    # What the lossless part of the spectrum does not hold is rounding; it would count like speech.
-    band = (f >= LOWEST_HZ) & (f <= min(HIGHEST_HZ, 0.45 * sample_rate))
+    # Lags are far below the chunk's length: what wraps around its ends is a little noise.
+    long = scipy.fft.next_fast_len(chunk.shape[1], real=True)
+    top = int(min(HIGHEST_HZ, 0.45 * sample_rate) * long / sample_rate) + 1
+    spectrum = scipy.fft.rfft(chunk.astype(np.float32), long, axis=1)[:, :top]
+    spectrum[:, : int(LOWEST_HZ * long / sample_rate)] = 0.0
     cross = spectrum * spectrum[reference].conj()
     magnitude = np.abs(cross)
-    cross = np.where(band & (magnitude > 1e-12), cross / np.maximum(magnitude, 1e-12), 0.0)
+    cross = np.where(magnitude > 1e-12, cross / np.maximum(magnitude, 1e-12), 0.0)
+    # No more lags between samples than the band calls for.
+    size = scipy.fft.next_fast_len(3 * top, real=True)
+    sample_rate = sample_rate * size / long
     correlation = scipy.fft.irfft(cross, size, axis=1)
     middle = size // 2
     at = np.argmax(np.abs(correlation), axis=1)

@@ -41,6 +41,8 @@ LOWEST_HZ, HIGHEST_HZ = 1000.0, 4000.0
 LEAST_LOW_HZ = 120.0
 DIRECTIONS = 300
 LEAST_GAIN = 0.01
+TRIED, FEWEST_TRIED = 40_000, 300
+"""Cells times exchanges that are tried, and the fewest cells."""
 
 
 @dataclass(frozen=True)
@@ -93,8 +95,8 @@ class FieldMeter:
         self._seen += 1
         if (self._seen - 1) % self._every or chunk.shape[1] < 2 * GROUP * self._frame:
             return
-        hop = self._frame // 2
-        frames = np.lib.stride_tricks.sliding_window_view(chunk.astype(np.float32), self._frame, axis=1)[:, ::hop]
+        count = chunk.shape[1] // self._frame
+        frames = chunk[:, : count * self._frame].astype(np.float32).reshape(len(chunk), count, self._frame)
         spectra = scipy.fft.rfft(frames * self._window, axis=-1).transpose(2, 1, 0)  # (bins, frames, channels)
         low = spectra[self._low].reshape(-1, self._array.channels).astype(np.complex128)
         self._low_sum += low.T @ low.conj()
@@ -157,6 +159,9 @@ class FieldMeter:
         vectors = vectors * equaliser * np.exp(2j * np.pi * self._f[bins][:, None] * self._array.delay_s)
         vectors = vectors / np.linalg.norm(vectors, axis=1, keepdims=True)
         order = np.arange(len(sign))
+        most = max(FEWEST_TRIED, TRIED // (len(sign) * (len(sign) - 1) // 2))
+        kept = np.linspace(0, len(vectors) - 1, min(most, len(vectors))).astype(np.int64)
+        vectors, bins, when = vectors[kept], bins[kept], when[kept]
         given = best = self._fits(vectors, bins, order[None])[:, 0]
         for _ in range(len(sign) - 1):
             trials = _exchanges(order)

@@ -18,7 +18,7 @@ from unmix.calibration.clocks import ClockFit, ClockMeter
 from unmix.calibration.order import FieldMeter, FieldReading
 from unmix.health import SILENT_DBFS
 from unmix.jobs.check_channels import channel_findings, quiet_findings
-from unmix.jobs.check_pairs import clock_findings, copy_findings, field_findings, unsynchronised
+from unmix.jobs.check_pairs import clock_findings, copy_findings, field_findings, peak_findings, unsynchronised
 from unmix.jobs.findings import ChannelFigures, Checked, Finding
 from unmix.limits.ambiguity import ambiguity_hz
 from unmix.limits.ladder import noise_gain, responses
@@ -63,6 +63,8 @@ def check(scene: Scene, *, progress: Progress | None = None) -> Checked:
     findings += copy_findings(measured.gram, measured.alive)
     findings += clock_findings(measured.clocks, measured.late, scene)
     findings += field_findings(measured.field, measured.alive & ~measured.late, _expected_spread_db(scene))
+    if measured.field.sign is None:
+        findings += peak_findings(measured.clocks, measured.alive & ~measured.late, scene)
     lowest, ambiguous, separation = _resolution(scene)
     findings += _geometry(lowest, ambiguous, separation, scene)
     return Checked(

@@ -14,7 +14,15 @@ from unmix.jobs.findings import Finding
 from unmix.physics import speed_of_sound
 from unmix.scene import Scene
 
-__all__ = ["clock_findings", "copy_findings", "drifts", "field_findings", "longest_delay", "unsynchronised"]
+__all__ = [
+    "clock_findings",
+    "copy_findings",
+    "drifts",
+    "field_findings",
+    "longest_delay",
+    "peak_findings",
+    "unsynchronised",
+]
 
 Floats = NDArray[np.float64]
 
@@ -26,6 +34,8 @@ LEAST_DRIFT_PPM = 0.2
 GAIN_DB, LOST_DB = 1.5, 15.0
 SURE_COHERENCE = 0.3
 ORDER_DEVIATIONS = 5.0
+PLAIN_SHARE = 0.3
+"""Peaks of one sign beyond one half, from which the sign is believed."""
 
 
 def copy_findings(gram: Floats, alive: NDArray[np.bool_]) -> Iterator[Finding]:
@@ -93,16 +103,34 @@ def clock_findings(clocks: Sequence[ClockFit | None], late: NDArray[np.bool_], s
             )  # fmt: skip
 
 
+def peak_findings(clocks: Sequence[ClockFit | None], trusted: NDArray[np.bool_], scene: Scene) -> Iterator[Finding]:
+    """Polarity by the sign of the correlation peaks, for arrays too large to hear any frequency as one."""
+    known = scene.array.polarity * scene.array.polarity[scene.array.reference_channel]
+    lean = {
+        m: float(known[m]) * (clock.positive - 0.5)
+        for m, clock in enumerate(clocks)
+        if trusted[m] and clock is not None and clock.chunks >= 3
+    }
+    negative = [m for m, value in lean.items() if value < -PLAIN_SHARE]
+    if 2 * len(negative) > len(lean):
+        negative = [m for m in lean if m not in negative]  # then the reference is the odd one
+    for m in negative:
+        yield _turned(m, 0.6 + 0.7 * abs(lean[m]))
+
+
+def _turned(m: int, confidence: float) -> Finding:
+    return Finding(
+        "polarity", "unfit", "polarity is turned against the other channels", f"channel {m}", confidence,
+        f"swap the connection, or give `polarity` in the array file (-1 for channel {m})", (m,),
+    )  # fmt: skip
+
+
 def field_findings(field: FieldReading, trusted: NDArray[np.bool_], expected_db: Floats) -> Iterator[Finding]:
     """Polarity, gain spread, order of the channels."""
     if field.sign is not None:
         for m in map(int, np.flatnonzero((field.sign < 0) & trusted)):
             if field.sureness[m] > SURE_COHERENCE:
-                yield Finding(
-                    "polarity", "unfit", "polarity is turned against the other channels", f"channel {m}",
-                    min(0.999, 0.7 + 0.3 * float(field.sureness[m])),
-                    f"swap the connection, or give `polarity` in the array file (-1 for channel {m})", (m,),
-                )  # fmt: skip
+                yield _turned(m, min(0.999, 0.7 + 0.3 * float(field.sureness[m])))
     if field.gain_db is not None:
         yield from _gains(field.gain_db - expected_db, field.sureness, trusted)
     order = field.order

@@ -5,9 +5,11 @@ from __future__ import annotations
 import json
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from tests.cli.conftest import RATE, Run, signals
+from tests.conftest import speech
 from unmix.audio import write_audio
 
 
@@ -121,3 +123,29 @@ def test_bad_input(run: Run, solved: Path) -> None:
     assert ran.status == 1
     assert "grades.json: exists already" in ran.err
     assert (solved / "grades.json").read_text() == "mine"
+
+
+def test_a_real_recording(run: Run, tmp_path: Path) -> None:
+    talkers = np.array([speech("novel-reader", 6.0), speech("card-reader", 6.0)])
+    talkers[0, 3 * 16000 :] = 0.0
+    talkers[1, : 2 * 16000] = 0.0
+    write_audio(tmp_path / "mix.wav", np.repeat(talkers.sum(axis=0)[None], 2, axis=0), 16000)
+    (tmp_path / "out").mkdir()
+    text = '[recording]\nfile = "mix.wav"\n[array]\npositions_m = [[0, 0, 0], [0.05, 0, 0]]\n'
+    for k, (name, active) in enumerate((("mate", [[0.0, 3.0]]), ("pilot", [[2.0, 6.0]]))):
+        write_audio(tmp_path / f"{name}.wav", (talkers[k] + 0.1 * talkers[1 - k])[None], 16000)
+        write_audio(tmp_path / "out" / f"{name}.wav", (talkers[k] + 0.03 * talkers[1 - k])[None], 16000)
+        text += f'[[talker]]\nname = "{name}"\nazimuth_deg = {60 * k}\nreference = "{name}.wav"\nactive_s = {active}\n'
+    (tmp_path / "scene.toml").write_text(text)
+    common = ("grade", tmp_path / "scene.toml", "--estimates", tmp_path / "out")
+    alone = run(*common, "--alone")
+    assert alone.status == 0, alone.err
+    assert alone.out.count("-30.5 [-30.5 -30.5]") == 2 and "cannot say what leaks while several speak" in alone.out
+    assert run(*common, "--alone", "--json").json["stretches"] == "given"
+    close = run(*common, "--close", "--out", tmp_path / "graded")
+    assert close.status == 0, close.err
+    assert "Bleed of the close microphones" in close.out and "-20.0" in close.out
+    assert (tmp_path / "graded" / "grades.json").exists()
+    again = run(*common, "--close", "--out", tmp_path / "graded")
+    assert again.status == 1 and "exists already" in again.err
+    assert run(*common, "--close", "--alone").status == 2

@@ -36,6 +36,8 @@ __all__ = ["command", "print_grades"]
     type=click.Choice(["name", "best"]),
     help="By name, or whichever assignment gives the highest SIR. [default: name where names fit]",
 )
+@click.option("--alone", is_flag=True, help="Without references: leakage where one talker is alone.")
+@click.option("--close", is_flag=True, help="References are close microphones: take the others' bleed out first.")
 @click.option("--filter-length", type=int, default=512, show_default=True, help="Taps of BSS Eval's allowed filter.")
 @click.option(
     "--listeners",
@@ -60,6 +62,8 @@ def command(
     unprocessed: Path | None,
     unprocessed_channel: int,
     match: str | None,
+    alone: bool,
+    close: bool,
     filter_length: int,
     listeners: tuple[Path, ...],
     key: Path | None,
@@ -84,6 +88,13 @@ def command(
     if key is not None or keep_all:
         raise click.UsageError("--key and --keep-all belong to --listeners")
     _check_usage(scene, estimates, references, given)
+    if alone or close:
+        if scene is None or estimates is None or (alone and close):
+            raise click.UsageError("give SCENE and --estimates DIR with --alone or --close, one of them")
+        _grade_real(
+            scene, estimates, against if close else None, out, close=close, overwrite=overwrite, as_json=as_json
+        )
+        return
     from unmix.files import refuse_to_replace
     from unmix.jobs.grade import grade_files, grade_scene, grades_tree
     from unmix.scene import Scene
@@ -122,6 +133,39 @@ def command(
     print_grades(grades, cross_check=cross_check)
     if out is not None:
         say(f"Written to {out}: grades.json{f' and {REPORT}' if reported else ''}")
+
+
+def _grade_real(
+    scene: Path, estimates: Path, against: str | None, out: Path | None, *, close: bool, overwrite: bool, as_json: bool
+) -> None:
+    """Grade a recording that has no clean references, and say what the figures can claim."""
+    from unmix.cli.tables import alone_table, bleed_table
+    from unmix.files import refuse_to_replace, write_json
+    from unmix.jobs.grade_real import AloneGrades, grade_alone, grade_close
+    from unmix.scene import Scene
+
+    if out is not None:
+        refuse_to_replace(out / "grades.json", overwrite=overwrite)
+    loaded = Scene.load(scene)
+    with progress_bar("grading"):
+        graded = grade_close(loaded, estimates, against=against) if close else grade_alone(loaded, estimates)
+    if out is not None:
+        write_json(out / "grades.json", graded.to_dict(), overwrite=overwrite)
+    if as_json:
+        print_json(graded.to_dict())
+        return
+    if isinstance(graded, AloneGrades):
+        noise = "taken off" if graded.noise_taken_off else "counted as leakage, since noise_only_s is not given"
+        say(f"Leakage where one talker is alone; stretches {graded.stretches}, noise {noise}")
+        print_table(alone_table(graded))
+    else:
+        print_grades(graded.grades)
+        say(f"Bleed of the close microphones, where one talker is alone; stretches {graded.stretches}")
+        print_table(bleed_table(graded))
+    for claim in graded.claims:
+        say(claim)
+    if out is not None:
+        say(f"Written to {out}: grades.json")
 
 
 def _graded_scene(scene: Scene, estimates: Path, grades: Grades) -> SceneMaterial:

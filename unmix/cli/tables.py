@@ -12,9 +12,20 @@ from rich.table import Table
 from unmix.metrics.grades import Grades, TalkerGrade
 
 if TYPE_CHECKING:
+    from unmix.jobs.grade_real import AloneGrades, CloseGrades
     from unmix.jobs.solution import Solution
 
-__all__ = ["before_and_after", "decibels", "number", "plain_table", "solution_table", "speech_table", "undefined_lines"]
+__all__ = [
+    "alone_table",
+    "before_and_after",
+    "bleed_table",
+    "decibels",
+    "number",
+    "plain_table",
+    "solution_table",
+    "speech_table",
+    "undefined_lines",
+]
 
 UNDEFINED = "–"
 _FIGURES = (
@@ -117,6 +128,32 @@ def speech_table(grades: Grades) -> Table:
             name = talker.name if label == "before" else ""
             table.add_row(name, label, *cells, style="bold" if gain else None, end_section=gain)
     return table
+
+
+def alone_table(grades: AloneGrades) -> Table:
+    """How loud each talker comes out of the others' files where nobody else speaks."""
+    columns = [("talker", "left"), ("in the file of", "left"), ("leakage, dB\nmean [95 % interval]", "right")]
+    columns += [("alone\ns", "right"), ("hidden by noise\nof pieces", "right")]
+    rows = []
+    for item in grades.leakage:
+        mean, low, high = (number(v, 1) for v in (item.interval.mean, item.interval.low, item.interval.high))
+        hidden = f"{item.at_floor} of {item.interval.scenes}"
+        rows.append([item.source, item.target, f"{mean} [{low} {high}]", number(item.seconds, 1), hidden])
+    return plain_table(columns, rows)
+
+
+def bleed_table(grades: CloseGrades) -> Table:
+    """The bleed in each close microphone, before and after it was taken out, and what it leaves in the figures."""
+    columns = [("talker", "left"), ("in the close microphone of", "left"), ("bleed\ndB", "right")]
+    columns += [("left\ndB", "right"), ("alone\ns", "right"), ("SDR\n+- dB", "right"), ("SIR\n+- dB", "right")]
+    rows = []
+    for item in grades.bleed:
+        unsure = grades.uncertainty[item.target]
+        rows.append(
+            [item.source, item.target, number(item.before_db, 1), number(item.left_db, 1), number(item.seconds, 1)]
+            + [number(unsure[figure], 1) for figure in ("sdr_db", "sir_db")]
+        )
+    return plain_table(columns, rows)
 
 
 def undefined_lines(grades: Grades) -> list[str]:

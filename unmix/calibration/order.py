@@ -7,7 +7,7 @@ exchanging them fits better:
     fit(order) = mean over cells of max_u |a(u)^H v_order|^2 / M
 
 All exchanges of two channels are tried, the best one is kept, and again. What a symmetry of the array hides (a ring
-turned by one microphone) cannot be seen without known bearings.
+turned by one microphone, a pair) is seen where the talkers' bearings are known, and u runs over those alone.
 
 Polarity and gain come from low frequencies, at which the array is small against a quarter of the wavelength: there all
 microphones hear alike whatever the sound field.
@@ -32,8 +32,8 @@ Complexes = NDArray[np.complex128]
 
 CHUNKS = 40
 FRAME_S = 0.032
-GROUP = 4
-CELLS_PER_CHUNK = 80
+GROUP = 3
+CELLS_PER_CHUNK = 120
 PURE = 0.9
 """Least |C|_F^2 / tr(C)^2 of a cell: 1 for a single direction."""
 LOWEST_HZ, HIGHEST_HZ = 1000.0, 4000.0
@@ -62,7 +62,7 @@ class FieldReading:
     sign        (channels,) +1 or -1, relative to the majority; None when the array is too large or silent
     sureness    (channels,) least magnitude of the coherence that the sign was read off, 0 to 1
     gain_db     (channels,) level at low frequencies relative to the median channel
-    order       None when there are too few cells, or three channels or fewer
+    order       None when there are too few cells, or two channels and no known source
     """
 
     sign: NDArray[np.int64] | None
@@ -74,14 +74,28 @@ class FieldReading:
 class FieldMeter:
     """Takes in chunks in order; looks at `CHUNKS` of them."""
 
-    def __init__(self, array: Array, sample_rate: int, samples: int, chunk: int, temperature_c: float = 20.0) -> None:
+    def __init__(
+        self,
+        array: Array,
+        sample_rate: int,
+        samples: int,
+        chunk: int,
+        temperature_c: float = 20.0,
+        *,
+        sources: tuple[Floats, Floats] | None = None,
+    ) -> None:
+        """`sources` are directions (n, 3) and distances (n,), NaN for far, of the only sources, where they are known:
+        a swap that a symmetry of the array would hide is then seen."""
         self._array, self._rate, self._c = array, sample_rate, speed_of_sound(temperature_c)
+        self._sources = sources
         self._every = max(1, round(samples / max(chunk, 1) / CHUNKS))
         self._frame = scipy.fft.next_fast_len(round(FRAME_S * sample_rate), real=True)
         self._window = np.hanning(self._frame + 1)[:-1].astype(np.float32)
         self._f = scipy.fft.rfftfreq(self._frame, 1.0 / sample_rate)
         lowest = min(LOWEST_HZ, max(self._c / (4.0 * max(array.aperture_m, 1e-6)), 200.0))
-        self._used = np.flatnonzero((self._f >= lowest) & (self._f <= min(HIGHEST_HZ, 0.4 * sample_rate)))
+        # Beams no narrower than the directions tried lie apart.
+        highest = min(HIGHEST_HZ, max(2.0 * self._c / max(array.aperture_m, 1e-6), 600.0), 0.4 * sample_rate)
+        self._used = np.flatnonzero((self._f >= lowest) & (self._f <= highest))
         self._low_hz = min(self._c / (4.0 * max(array.aperture_m, 1e-6)), 1000.0)
         self._low = np.flatnonzero((self._f >= 80.0) & (self._f <= self._low_hz))
         self._low_sum = np.zeros((array.channels, array.channels), np.complex128)
@@ -127,7 +141,7 @@ class FieldMeter:
         m = self._array.channels
         sign, sureness, gain = self._low_frequencies(trusted)
         order = None
-        if trusted.all() and m > 2 and sum(map(len, self._bins)) >= 40:
+        if trusted.all() and (m > 2 or self._sources is not None) and sum(map(len, self._bins)) >= 40:
             order = self._order(np.asarray(self._array.polarity * (1 if sign is None else sign), np.float64), gain)
         return FieldReading(sign, sureness, gain, order)
 
@@ -173,17 +187,29 @@ class FieldMeter:
         deviations = _deviations(best - given, when) if not np.array_equal(order, np.arange(len(sign))) else 0.0
         return OrderFit(tuple(int(o) for o in order), float(best.mean()), float(given.mean()), deviations)
 
+    def _waves(self) -> tuple[Floats, Floats]:
+        """Delays and gains (directions, channels) of the waves that are tried."""
+        if self._sources is None:
+            return wave_delays(self._array.positions_m, _sphere(DIRECTIONS), None, self._c)
+        tau, gain = wave_delays(self._array.positions_m, *self._sources, self._c)
+        return tau, _level(gain)
+
     def _fits(self, vectors: Complexes, bins: NDArray[np.int64], orders: NDArray[np.int64]) -> Floats:
         """max_u |a(u)^H v_order|^2 / M: (cells, orders)."""
-        tau = wave_delays(self._array.positions_m, _sphere(DIRECTIONS), None, self._c)[0]
+        tau, gain = self._waves()
         out = np.zeros((len(vectors), len(orders)))
         for b in np.unique(bins):
             at = np.flatnonzero(bins == b)
-            waves = np.exp(-2j * np.pi * self._f[b] * tau).astype(np.complex64)
+            waves = (gain * np.exp(-2j * np.pi * self._f[b] * tau)).astype(np.complex64)
             tried = vectors[at][:, orders].astype(np.complex64)
             score = np.abs(tried.reshape(-1, tried.shape[-1]) @ waves.conj().T).max(axis=1) ** 2
             out[at] = score.reshape(len(at), len(orders)) / vectors.shape[1]
         return out
+
+
+def _level(gain: Floats) -> Floats:
+    """Gains of mean square 1 over the channels."""
+    return np.asarray(gain / np.sqrt(np.mean(gain**2, axis=-1, keepdims=True)))
 
 
 def _exchanges(order: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -85,7 +85,7 @@ def _measure(scene: Scene, progress: Progress | None) -> _Measured:
     size = round(CHUNK_S * rate)
     meter = ChannelMeter(channels, rate, samples)
     clock = ClockMeter(scene.array.reference_channel, rate, samples, size)
-    field = FieldMeter(scene.array, rate, samples, size, scene.temperature_c)
+    field = FieldMeter(scene.array, rate, samples, size, scene.temperature_c, sources=_known_sources(scene))
     gram = np.zeros((channels, channels))
     done = 0
     for chunk in scene.recording.chunks(size):
@@ -101,6 +101,15 @@ def _measure(scene: Scene, progress: Progress | None) -> _Measured:
     clocks = clock.fits(channels)
     late = unsynchronised(clocks, scene)
     return _Measured(readings, clocks, field.reading(alive & ~late), gram, alive, late)
+
+
+def _known_sources(scene: Scene) -> tuple[Floats, Floats] | None:
+    """Directions and distances of the talkers, when all are known and nothing moves."""
+    still = scene.talkers and all(t.azimuth is not None and t.track is None for t in scene.talkers)
+    if not still or scene.orientation is not None or scene.array.responses is not None:
+        return None
+    directions = unit_vector([t.azimuth or 0.0 for t in scene.talkers], [t.elevation for t in scene.talkers])
+    return directions, np.array([np.nan if t.distance_m is None else t.distance_m for t in scene.talkers])
 
 
 def _expected_spread_db(scene: Scene) -> Floats:

@@ -33,7 +33,7 @@ DRIFT_DEVIATIONS = 5.0
 LEAST_DRIFT_PPM = 0.2
 GAIN_DB, LOST_DB = 1.5, 15.0
 SURE_COHERENCE = 0.3
-ORDER_DEVIATIONS = 5.0
+ORDER_DEVIATIONS = 4.0
 PLAIN_SHARE = 0.3
 """Peaks of one sign beyond one half, from which the sign is believed."""
 
@@ -140,8 +140,8 @@ def field_findings(field: FieldReading, trusted: NDArray[np.bool_], expected_db:
         yield Finding(
             "order", "unfit", f"channels do not fit the geometry; better, for instance: {pairs}", listed(moved),
             min(0.999, 0.75 + 0.01 * order.deviations),
-            "put `channels` in [recording] in the order of the array file's positions", tuple(moved),
-            order.fit - order.fit_as_given, "",
+            "put `channels` in [recording] in the order of the array file's positions; check the talkers' bearings too",
+            tuple(moved), order.fit - order.fit_as_given,
         )  # fmt: skip
 
 

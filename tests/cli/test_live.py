@@ -18,6 +18,7 @@ from unmix.audio import read_audio, write_audio
 from unmix.cli import main
 from unmix.jobs.solve import solve
 from unmix.live.pipe import PipeFormat, wav_header
+from unmix.live.separator import LiveSeparator
 from unmix.scene import Scene
 
 Live = Callable[..., tuple[Ran, bytes]]
@@ -195,6 +196,28 @@ def test_raw_samples_need_their_format(live: Live, scene: Path) -> None:
     assert ran.status == 1 and "give --bearing for each" in ran.err
     ran, _ = live(recording(), scene)
     assert ran.status == 1 and "no WAV header" in ran.err
+
+
+def test_terminated_in_the_middle_the_state_is_kept(scene: Path) -> None:
+    state = scene.parent / "state.npz"
+    command = [sys.executable, "-m", "unmix", "live", str(scene), *map(str, RAW), "--state", str(state)]
+    process = subprocess.Popen(command, stdin=subprocess.PIPE, stdout=subprocess.PIPE, stderr=subprocess.PIPE)
+    assert process.stdin is not None and process.stdout is not None and process.stderr is not None
+    process.stdin.write(recording()[: 8000 * 20])
+    process.stdin.flush()
+    first = process.stdout.read(8000 * 8)  # all that came in has gone out
+    process.terminate()
+    assert process.wait() == 143
+    for stream in (process.stdin, process.stdout, process.stderr):
+        stream.close()
+    separator = LiveSeparator.from_scene(Scene.load(scene))
+    separator.restore(state.read_bytes())
+    assert separator.position == 8000
+    calm = LiveSeparator.from_scene(Scene.load(scene))
+    sound = PipeFormat("f32le", RATE, 5).decode(recording())
+    assert np.allclose(decoded(first), calm.push(sound[:, :8000]), rtol=0, atol=1e-7)
+    # Chunks of another size: equal but for rounding.
+    assert np.allclose(separator.push(sound[:, 8000:]), calm.push(sound[:, 8000:]), rtol=0, atol=1e-12)
 
 
 def test_a_reader_that_goes_away_is_one_line(scene: Path, tmp_path: Path) -> None:

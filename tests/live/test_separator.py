@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 
 from tests.conftest import circle, delayed, speech
+from tests.test_sofa import free_field
 from unmix.errors import InputError, UnmixWarning, UnsolvableError
 from unmix.jobs.solve import solve
 from unmix.live.bank import fitted
@@ -81,6 +82,19 @@ def test_noise_measured_gives_the_file_jobs_filters() -> None:
     whole = solve(scene, variant).signals
     assert whole is not None
     assert np.abs(out - whole).max() < 1e-6 * np.abs(whole).max()
+
+
+def test_measured_responses_run_live_too() -> None:
+    array = replace(ARRAY, responses=free_field(ARRAY))
+    talkers = [Talker.at("mate", 20.0), Talker.at("pilot", 110.0)]
+    separator = LiveSeparator(array, talkers, "model", sample_rate=RATE)
+    assert separator.measure_latency() == (separator.latency_samples,) * 2
+    out = np.concatenate([separator.push(recording()), separator.flush()], axis=1)[:, separator.latency_samples :]
+    whole = solve(Scene.from_arrays(recording(), array, talkers, sample_rate=RATE), "model").signals
+    assert whole is not None
+    assert np.abs(out - whole).max() < 1e-6 * np.abs(whole).max()
+    with pytest.raises(InputError, match="another array"):
+        LiveSeparator(ARRAY, talkers, "model", sample_rate=RATE).restore(separator.save_state())
 
 
 @pytest.mark.parametrize("variant", ["reference-mic", "minimum-variance", "model", PROPAGATED], ids=str)

@@ -33,7 +33,7 @@ def who_and_where(path: Path, bearings: Sequence[str]) -> tuple[Array, Sequence[
     from unmix.scene import Scene
 
     given = [_talker(text, index) for index, text in enumerate(bearings)]
-    if "recording" not in read_toml(path, dict):
+    if path.suffix.lower() == ".sofa" or "recording" not in read_toml(path, dict):
         array = Array.load(path)
         if not given:
             raise InputError(f"{path}: an array file says not where talkers are; give --bearing for each")

@@ -176,7 +176,7 @@ def export_bank(
     """
     chosen = load_variant(variant)
     _check(loss_db, latency_s, words)
-    check_is_filters(chosen, "be exported as filters", spectra=noise)
+    check_is_filters(chosen, spectra=noise)
     design = Designer(array, chosen, sample_rate, temperature_c, noise)
     out = Path(out)
     names = ["bank.npz", "bank.csv", "bank.h", "export.json", *(["grid.npz"] if grid_deg else [])]

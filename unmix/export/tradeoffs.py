@@ -126,6 +126,10 @@ def measure_tradeoffs(
     """
     if len(talkers) < 2:
         raise InputError(f"{len(talkers)} talkers: a trade-off in SIR needs two at least")
+    if array.responses is not None:
+        raise InputError(
+            "trade-offs are measured on rendered speech; give the array without its measured responses"
+        )
     chosen = [load_variant(variant) for variant in variants]
     rendered = _rendered(array, talkers, sample_rate, t20_s, seconds, seed)
     grader = Grader(
@@ -175,7 +179,7 @@ def _points(
     if variant.room is not None:
         yield _adaptive_point(variant, array, talkers, rendered, grader)
         return
-    check_is_filters(variant, "run on a device as filters", spectra=None)
+    check_is_filters(variant, spectra=None)
     rate = rendered.sample_rate
     design = Designer(array, variant, rate)
     bank, paths, spectra = design(talkers), design.paths(talkers), spectra_of(rendered.early)

@@ -3,7 +3,7 @@
 stage.py      what a live separator runs on: the one interface that filter banks and recursive stages share
 convolver.py  filters applied to chunks of any size: direct, or uniformly partitioned FFT without added delay
 bank.py       a K x M filter bank as a stage, with cross-faded changes
-recursive.py  a separator that adapts as it goes as a stage
+adaptive.py   the low-latency room stage as a stage
 refit.py      filters with less reach that change the output least
 design.py     from array, talkers and variant to filters; which variants cannot run so, and why
 separator.py  LiveSeparator: push, flush, state, bearings

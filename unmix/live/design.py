@@ -20,7 +20,7 @@ from unmix.solvers.assemble import assemble
 from unmix.solvers.stationary import FilterBank
 from unmix.variant import Variant
 
-__all__ = ["Designer", "check_is_filters", "noise_spectra"]
+__all__ = ["Designer", "check_is_filters", "check_runs_live", "noise_spectra"]
 
 Floats = NDArray[np.float64]
 
@@ -76,11 +76,17 @@ class Designer:
         for talker in talkers:
             if talker.azimuth is None:
                 raise InputError(f"talker {talker.name!r} has no bearing; give one, or locate the talkers first")
+        azimuth = np.array([t.azimuth or 0.0 for t in talkers])
+        elevation = np.array([t.elevation for t in talkers])
+        if self.array.responses is not None:
+            from unmix.model.measured import paths_from_responses
+
+            return paths_from_responses(self.array, azimuth, elevation, sample_rate=self.sample_rate)
         plane = self.variant.model.wave == "plane"
         return paths_from_bearings(
             self.array,
-            [t.azimuth or 0.0 for t in talkers],
-            [t.elevation for t in talkers],
+            azimuth,
+            elevation,
             [np.nan if plane or t.distance_m is None else t.distance_m for t in talkers],
             temperature_c=self.temperature_c,
         )
@@ -89,16 +95,29 @@ class Designer:
 _USE = "use a variant that is filters alone, such as model or linear-constraint"
 
 
-def check_is_filters(variant: Variant, doing: str, *, spectra: Spectra | None) -> None:
-    """Raise UnsolvableError, with the reason and the remedy, for a variant that is more than filters.
+def check_is_filters(variant: Variant, *, spectra: Spectra | None) -> None:
+    """Raise UnsolvableError, with the reason and the remedy, for a variant that is more than filters."""
+    cannot = _cannot(variant, "be exported as filters")
+    if variant.room is not None and variant.room.low_latency is not None:
+        raise UnsolvableError(f"{cannot}: its filters are learned while it runs; {_USE}")
+    _check(variant, cannot, spectra)
 
-    doing  what it cannot do therefore, such as "run chunk by chunk"
-    """
-    cannot = f"variant {variant.name or 'as given'!r} cannot {doing}"
-    if variant.room is not None:
+
+def check_runs_live(variant: Variant, *, spectra: Spectra | None) -> None:
+    """Raise UnsolvableError, with the reason and the remedy, for a variant that cannot run chunk by chunk."""
+    _check(variant, _cannot(variant, "run chunk by chunk"), spectra)
+
+
+def _cannot(variant: Variant, what: str) -> str:
+    return f"variant {variant.name or 'as given'!r} cannot {what}"
+
+
+def _check(variant: Variant, cannot: str, spectra: Spectra | None) -> None:
+    room = variant.room
+    if room is not None and room.low_latency is None:
         raise UnsolvableError(
-            f"{cannot}: its room stage refines each segment of {variant.room.segments.length_s:g} s from all of it, so "
-            f"that a sample would wait that long; {_USE}"
+            f"{cannot}: its room stage refines each segment of {room.segments.length_s:g} s from all of it, so that a "
+            f"sample would wait that long; {_USE}, or low-latency"
         )
     if variant.separator != "model":
         return

@@ -18,7 +18,7 @@ from unmix.array import Array
 from unmix.audio import HIGHEST_RATE_HZ, LOWEST_RATE_HZ
 from unmix.errors import InputError, UnmixWarning, UnsolvableError
 from unmix.live.bank import BankStage, Change
-from unmix.live.design import Designer, check_is_filters, noise_spectra
+from unmix.live.design import Designer, check_runs_live, noise_spectra
 from unmix.live.latency import measured_latency
 from unmix.live.stage import LiveStage
 from unmix.model.delays import Paths
@@ -49,7 +49,8 @@ class LiveSeparator:
     talkers : sequence of Talker
         Who sits where, `unmix.Talker.at("mate", 20.0)`; at rest until `set_bearings` or `source` says otherwise.
     variant : str, path or Variant
-        One that is filters alone: `model` (or the same with constraint `propagated`), or a baseline.
+        One that is filters alone, `model` (or the same with constraint `propagated`) or a baseline; or one that
+        learns its filters while it runs, such as `low-latency`, whose block comes on top of its look-ahead.
     sample_rate : int
         In hertz, of everything pushed.
     noise : (channels, samples) array, optional
@@ -88,7 +89,7 @@ class LiveSeparator:
             raise InputError(f"look-ahead of {lookahead_s:g} s; give seconds from zero up")
         self.variant, self.array, self.sample_rate = load_variant(variant), array, sample_rate
         spectra = noise if noise is None or isinstance(noise, Spectra) else _spectra(noise, array)
-        check_is_filters(self.variant, "run chunk by chunk", spectra=spectra)
+        check_runs_live(self.variant, spectra=spectra)
         self._design = Designer(array, self.variant, sample_rate, temperature_c, spectra)
         self._lookahead = None if lookahead_s is None else round(lookahead_s * sample_rate)
         self._fade = max(1, round(fade_s * sample_rate))
@@ -222,13 +223,25 @@ class LiveSeparator:
             raise InputError(
                 "the state belongs to a separator of another array, variant, rate or latency; start without it"
             )
-        self._stage.restore(arrays)
+        try:
+            self._stage.restore(arrays)
+        except (KeyError, ValueError):
+            raise InputError("the state is damaged; start without it") from None
         self._position = head["position"]
         self.talkers = tuple(
             Talker(name, azimuth, elevation, distance) for name, azimuth, elevation, distance in head["talkers"]
         )
 
     def _make_stage(self) -> LiveStage:
+        room = self.variant.room
+        if room is not None and room.low_latency is not None:
+            from unmix.live.adaptive import AdaptiveStage
+
+            own = room.low_latency
+            if self._lookahead is not None:
+                bound = min(own.look_ahead_s, self._lookahead / self.sample_rate)
+                own = msgspec.structs.replace(own, look_ahead_s=bound)
+            return AdaptiveStage(self._design, msgspec.structs.replace(room, low_latency=own), self.talkers)
         return BankStage(self._design, self.talkers, fade=self._fade, lookahead=self._lookahead)
 
     def _advance(self, samples: Floats) -> Floats:
@@ -265,8 +278,11 @@ class LiveSeparator:
     def _fingerprint(self) -> str:
         array = msgspec.to_builtins(self.array.to_file())
         design = self._design
+        responses = self.array.responses
+        heard = "" if responses is None else hashlib.sha256(np.ascontiguousarray(responses.taps).tobytes()).hexdigest()
         parts = [
             array,
+            heard,
             self.variant.to_dict(),
             self.sample_rate,
             design.temperature_c,

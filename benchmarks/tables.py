@@ -23,6 +23,7 @@ TABLES = {
     "bearings": "finding, counting and following talkers, beside the Cramer-Rao bound",
     "arrays": "knowing the array: limits, calibration, health check, a measured head",
     "speed": "how fast and how large",
+    "live": "running live and exported filters: cost, latency, memory over an hour, word lengths",
     "grading_speed": "grading beside a general library",
     "real": "figures for real recordings beside the true ones",
     "batch": "24 scenes x 8 variants, killed and resumed; two workers over one; a million items (hours)",

@@ -19,9 +19,11 @@ from unmix.version import __version__
 if TYPE_CHECKING:
     from unmix.array import Array
     from unmix.audio import Recording, read_audio, write_audio
+    from unmix.batch.run import BatchResult, run_batch
     from unmix.export.files import read_bank
     from unmix.export.job import export_bank
     from unmix.jobs.grade import grade, grade_files, grade_scene
+    from unmix.jobs.grade_real import AloneGrades, CloseGrades, grade_alone, grade_close
     from unmix.jobs.locate import locate
     from unmix.jobs.located import Located
     from unmix.jobs.render import Rendered
@@ -37,7 +39,10 @@ if TYPE_CHECKING:
     from unmix.variant import Variant, load_variant
 
 __all__ = [
+    "AloneGrades",
     "Array",
+    "BatchResult",
+    "CloseGrades",
     "FileError",
     "Grades",
     "InputError",
@@ -60,6 +65,8 @@ __all__ = [
     "__version__",
     "export_bank",
     "grade",
+    "grade_alone",
+    "grade_close",
     "grade_files",
     "grade_scene",
     "load_variant",
@@ -68,13 +75,17 @@ __all__ = [
     "read_bank",
     "render_scene",
     "render_to_folder",
+    "run_batch",
     "solve",
     "solve_to_folder",
     "write_audio",
 ]
 
 _LAZY = {
+    "AloneGrades": "unmix.jobs.grade_real",
     "Array": "unmix.array",
+    "BatchResult": "unmix.batch.run",
+    "CloseGrades": "unmix.jobs.grade_real",
     "Grades": "unmix.metrics.grades",
     "LiveSeparator": "unmix.live.separator",
     "Located": "unmix.jobs.located",
@@ -90,6 +101,8 @@ _LAZY = {
     "Variant": "unmix.variant",
     "export_bank": "unmix.export.job",
     "grade": "unmix.jobs.grade",
+    "grade_alone": "unmix.jobs.grade_real",
+    "grade_close": "unmix.jobs.grade_real",
     "grade_files": "unmix.jobs.grade",
     "grade_scene": "unmix.jobs.grade",
     "load_variant": "unmix.variant",
@@ -99,6 +112,7 @@ _LAZY = {
     "render_scene": "unmix.render.compose",
     # `unmix.render` is the folder of that stage; the job goes by the name of what it does.
     "render_to_folder": "unmix.jobs.render:render",
+    "run_batch": "unmix.batch.run",
     "solve": "unmix.jobs.solve",
     "solve_to_folder": "unmix.jobs.solve",
     "write_audio": "unmix.audio",

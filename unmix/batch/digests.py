@@ -10,12 +10,12 @@ from typing import Any
 
 from unmix.errors import FileError
 
-__all__ = ["Digests", "Stamp", "digest_of", "numerics_version", "stamp_of"]
+__all__ = ["Digests", "Stamp", "digest_of", "numerics_version", "unchanged"]
 
 SIZE = 16
 """Bytes of a digest: two of 2^40 items share one with a probability under 1e-14."""
-Stamp = tuple[str, int, int]
-"""A file's path, size and time of change in nanoseconds: what tells that it changed while a batch ran."""
+Stamp = tuple[str, int, int, str]
+"""A file's path, size, time of change in nanoseconds, and digest: what tells whether it changed while a batch ran."""
 NOT_NUMERICS = ("cli", "report", "batch")
 
 
@@ -25,31 +25,45 @@ def digest_of(*parts: Any) -> str:
     return hashlib.blake2b(text.encode(), digest_size=SIZE).hexdigest()
 
 
-def stamp_of(path: Path) -> Stamp:
-    """The file's stamp. Raises FileError when it is not there."""
+def unchanged(stamp: Stamp) -> bool:
+    """Whether a file is what it was. On another machine a copy may bear another time: then its content decides.
+
+    Raises FileError when it is not there.
+    """
+    path, size, time_ns, digest = stamp
+    now = _status(Path(path))
+    return now == (size, time_ns) or (now[0] == size and _digest_of_file(Path(path)) == digest)
+
+
+def _status(path: Path) -> tuple[int, int]:
     try:
         status = path.stat()
     except OSError as error:
         raise FileError(f"{path}: cannot be read ({error.strerror}); check the path") from None
-    return str(path), status.st_size, status.st_mtime_ns
+    return status.st_size, status.st_mtime_ns
+
+
+def _digest_of_file(path: Path) -> str:
+    try:
+        with path.open("rb") as stream:
+            return hashlib.file_digest(stream, _hasher).hexdigest()
+    except OSError as error:
+        raise FileError(f"{path}: cannot be read ({error.strerror}); check the path") from None
 
 
 class Digests:
     """Digests of files, each read once."""
 
     def __init__(self) -> None:
-        self._known: dict[Stamp, str] = {}
+        self._known: dict[tuple[Path, tuple[int, int]], str] = {}
 
     def of(self, path: Path) -> tuple[str, Stamp]:
         """Digest of the content, and the stamp it was taken under. Raises FileError when it cannot be read."""
-        stamp = stamp_of(path)
-        if stamp not in self._known:
-            try:
-                with path.open("rb") as stream:
-                    self._known[stamp] = hashlib.file_digest(stream, _hasher).hexdigest()
-            except OSError as error:
-                raise FileError(f"{path}: cannot be read ({error.strerror}); check the path") from None
-        return self._known[stamp], stamp
+        status = _status(path)
+        if (path, status) not in self._known:
+            self._known[path, status] = _digest_of_file(path)
+        digest = self._known[path, status]
+        return digest, (str(path), *status, digest)
 
 
 def _hasher() -> Any:

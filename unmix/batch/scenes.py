@@ -130,7 +130,7 @@ def _without_names(tree: Any) -> Any:
 
 
 def _absolute(stamps: tuple[Stamp, ...]) -> tuple[Stamp, ...]:
-    return tuple((str(Path(path).resolve()), size, time_ns) for path, size, time_ns in stamps)
+    return tuple((str(Path(path).resolve()), size, time_ns, digest) for path, size, time_ns, digest in stamps)
 
 
 def _seeds(table: RenderTable) -> Sequence[int | None]:

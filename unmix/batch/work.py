@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.batch.digests import Stamp, stamp_of
+from unmix.batch.digests import Stamp, unchanged
 from unmix.batch.memory import PeakMemory
 from unmix.batch.metrics import OwnMetric
 from unmix.batch.store import Part
@@ -111,7 +111,7 @@ def _run(task: Task) -> Part:
 
 def _check_unchanged(task: Task) -> None:
     for stamp in task.stamps:
-        if stamp_of(Path(stamp[0])) != stamp:
+        if not unchanged(stamp):
             raise FileError(f"{stamp[0]}: changed while the batch was running; run again to do its items anew")
 
 

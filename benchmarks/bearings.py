@@ -132,7 +132,7 @@ def bound(trials: int) -> None:
         for snr_db in (20.0, 30.0, 40.0, 50.0, 60.0, 70.0, 80.0):
             ratio, stated, deviation = bound_trials(np.radians(azimuths), snr_db, trials)
             table.append(
-                [len(azimuths), int(snr_db), f"{deviation:.4f}", float(ratio.min()), float(ratio.max()),
+                [len(azimuths), int(snr_db), f"{deviation:.2g}", float(ratio.min()), float(ratio.max()),
                  float(stated.min()), float(stated.max())]
             )  # fmt: skip
     print_table(

@@ -14,7 +14,9 @@ more memory than a second. Gauss-Newton with analytic derivatives, in Kaufman's 
 
 Frames are half-overlapped with the root of a Hann window, whose squares sum to one: what is summed over frames is then
 what is summed over samples. Delays bend a window by up to (pi tau / length)^2 of its power, the bias that takes over
-at high ratios; frames are long for that reason. The covariance of the estimate is that of deterministic maximum
+at high ratios; frames are long for that reason. Seven microphones on 4 cm, 1 s: errors are 1.05 to 1.2 times the bound
+up to 60 dB; with two talkers bias leads from 70 dB on. What the window loses counts as noise, so stated deviations are
+too wide from 60 dB on, never too narrow. The covariance of the estimate is that of deterministic maximum
 likelihood [2]_, which is the Cramer-Rao bound but for bins whose signal is below the noise.
 
 .. [1] G. H. Golub and V. Pereyra, "Separable nonlinear least squares: the variable projection method and its

@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from tests.conftest import circle, delayed, speech
+from tests.test_sofa import free_field
 from unmix.array import Array
 from unmix.errors import InputError
 from unmix.jobs.limits import LimitsOptions, limits
@@ -92,6 +94,7 @@ def test_a_line_has_no_bound_where_bearings_are_mirrored() -> None:
         (circle(2), LimitsOptions(talkers=4), "3 microphones for 4 talkers"),
         (circle(6), LimitsOptions(separations_deg=(200.0,)), "0 to 180 deg"),
         (circle(6), LimitsOptions(lowest_hz=7000.0), "no third octave"),
+        (replace(circle(6), responses=free_field(circle(6))), LimitsOptions(), "free air"),
     ],
 )
 def test_what_is_refused(array: Array, options: LimitsOptions, what: str) -> None:

@@ -9,7 +9,7 @@ import pytest
 
 from tests.conftest import circle, delayed, speech
 from tests.test_sofa import free_field
-from unmix.errors import InputError, UnsolvableError
+from unmix.errors import InputError, UnmixWarning, UnsolvableError
 from unmix.jobs.solve import solve
 from unmix.metrics.leakage import leakage_of_outputs_db
 from unmix.model.delays import paths_from_bearings
@@ -81,3 +81,14 @@ def test_what_responses_cannot_do() -> None:
     wrong = msgspec.structs.replace(variant, solver=msgspec.structs.replace(variant.solver, method="kkt"))
     with pytest.raises(UnsolvableError, match="measured responses"):
         solve(still, wrong)
+
+
+def test_bearings_found_without_the_responses_are_said_to_be() -> None:
+    array = circle(4)
+    images = delayed(speech("novel-reader", 2.0)[None], paths_from_bearings(array, AZIMUTH[:1]), RATE)[0]
+    noise = 1e-4 * np.random.default_rng(0).standard_normal(images.shape)
+    scene = Scene.from_arrays(images + noise, replace(array, responses=free_field(array)), sample_rate=RATE)
+    with pytest.warns(UnmixWarning) as caught:
+        result = solve(scene, "model")
+    assert any("as if in free air" in str(w.message) for w in caught)
+    assert any("as if in free air" in line for line in result.warnings)

@@ -52,7 +52,8 @@ def plain_table(columns: Sequence[tuple[str, str]], rows: Sequence[Sequence[str]
 
 
 def solution_table(solution: Solution) -> Table:
-    """Who was separated, from where, how loud, and into which file."""
+    """Who was separated, from where, how loud, and into which file; dB SPL where the array's level is calibrated."""
+    full = solution.details.get("full_scale_db_spl")
     rows = [
         [
             talker.name,
@@ -60,6 +61,7 @@ def solution_table(solution: Solution) -> Table:
             number(talker.elevation_deg, 1),
             "far" if talker.distance_m is None else number(talker.distance_m, 2),
             number(decibels(talker.peak * talker.scale), 1),
+            *([] if full is None else [number(_sound_pressure(talker.peak, full), 1)]),
             talker.file or "",
         ]
         for talker in solution.talkers
@@ -70,6 +72,7 @@ def solution_table(solution: Solution) -> Table:
         ("elevation\ndeg", "right"),
         ("distance\nm", "right"),
         ("peak\ndB FS", "right"),
+        *([] if full is None else [("peak\ndB SPL", "right")]),
         ("file", "left"),
     ]
     return plain_table(columns, rows)
@@ -173,6 +176,12 @@ def number(value: float | None, digits: int, *, signed: bool = False) -> str:
     if value is None or not math.isfinite(value):
         return UNDEFINED
     return f"{round(value, digits) + 0.0:{'+' if signed else ''}.{digits}f}"  # no "-0.0"
+
+
+def _sound_pressure(peak: float, full_scale_db_spl: float) -> float | None:
+    """Peak level re 20 uPa: a full-scale sine of `full_scale_db_spl` peaks 3 dB above its level."""
+    level = decibels(peak)
+    return None if level is None else level + full_scale_db_spl + 10.0 * math.log10(2.0)
 
 
 def decibels(magnitude: float) -> float | None:

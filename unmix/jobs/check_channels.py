@@ -17,6 +17,8 @@ DC_SHARE, DC_LEAST = 0.1, 1e-3
 HUM_DB = 8.0
 LOW_LEVEL_DB = -65.0
 LOW_SNR_DB = 15.0
+POOR_SNR_DB = 6.0
+"""In a reverberant room, several talkers who never pause reach no more than about 10 dB."""
 NOISY_DB = 10.0
 
 
@@ -62,7 +64,8 @@ def quiet_findings(readings: Sequence[ChannelReading], alive: NDArray[np.bool_])
     snr = float(np.median(loud - floor))
     if snr < LOW_SNR_DB:
         yield Finding(
-            "noise", "warning", f"talkers stand only {snr:.0f} dB above the noise floor, or never pause",
+            "noise", "warning" if snr < POOR_SNR_DB else "note",
+            f"talkers stand only {snr:.0f} dB above the noise floor, or never pause",
             "all channels", 0.7, "move closer, or quieten the room; `noise_only_s` lets the noise be measured",
             value=snr, unit="dB",
         )  # fmt: skip

@@ -195,6 +195,11 @@ def limits(array: Array, options: LimitsOptions | None = None) -> Limits:
 
 
 def _check(array: Array, o: LimitsOptions) -> None:
+    if array.responses is not None:
+        raise InputError(
+            "array: limits are computed for microphones in free air; give an array file with positions instead of "
+            "measured responses"
+        )
     if array.channels < o.talkers or o.talkers < 2:
         raise InputError(
             f"array: {array.channels} microphones for {o.talkers} talkers; limits of a separation need two talkers or "

@@ -241,6 +241,8 @@ def describe(
             "expansion_error_db": d.error_db,
             "expansion_band_hz": d.band_edge * rate / 2,
         }
+    if scene.array.full_scale_db_spl is not None:
+        details["full_scale_db_spl"] = scene.array.full_scale_db_spl
     if assembly.trusted_hz is not None:
         details["trusted_hz"] = assembly.trusted_hz
     if assembly.bank is not None:

@@ -34,6 +34,10 @@ Floats = NDArray[np.float64]
 Progress = Callable[[float], None]
 
 SHORTEST_S = 0.1
+POSITIONS_ALONE = (
+    "bearings were found from the microphones' positions as if in free air, not from the measured responses: give "
+    "`azimuth_deg`"
+)
 
 
 def solve(scene: Scene, variant: str | Path | Variant = DEFAULT, *, progress: Progress | None = None) -> Solution:
@@ -124,7 +128,8 @@ def _located(scene: Scene) -> tuple[Scene, tuple[str, ...]]:
     placed = tuple(t for t in filled.talkers if t.located)
     if not placed:
         raise InputError(f"{scene.title}: no talker was found in the recording; check it, or give `azimuth_deg`")
-    return replace(filled, talkers=placed), located.warnings
+    heads = () if scene.array.responses is None else (POSITIONS_ALONE,)
+    return replace(filled, talkers=placed), (*located.warnings, *heads)
 
 
 def _on_one_clock(scene: Scene) -> tuple[Scene, tuple[str, ...]]:

@@ -22,8 +22,14 @@ if TYPE_CHECKING:
     from unmix.batch.run import BatchResult, run_batch
     from unmix.export.files import read_bank
     from unmix.export.job import export_bank
+    from unmix.jobs.calibrate import calibrate, calibrate_blindly, calibrate_level, measure_responses
+    from unmix.jobs.calibration import Calibration
+    from unmix.jobs.check import check
+    from unmix.jobs.findings import Checked
     from unmix.jobs.grade import grade, grade_files, grade_scene
     from unmix.jobs.grade_real import AloneGrades, CloseGrades, grade_alone, grade_close
+    from unmix.jobs.limits import Limits, LimitsOptions
+    from unmix.jobs.limits import limits as array_limits
     from unmix.jobs.locate import locate
     from unmix.jobs.located import Located
     from unmix.jobs.render import Rendered
@@ -35,6 +41,7 @@ if TYPE_CHECKING:
     from unmix.render.compose import RenderedScene, render_scene
     from unmix.render.spec import RenderSpec
     from unmix.scene import Scene, Talker
+    from unmix.sofa import Responses, read_sofa, write_sofa
     from unmix.track import Orientation, Track
     from unmix.variant import Variant, load_variant
 
@@ -42,10 +49,14 @@ __all__ = [
     "AloneGrades",
     "Array",
     "BatchResult",
+    "Calibration",
+    "Checked",
     "CloseGrades",
     "FileError",
     "Grades",
     "InputError",
+    "Limits",
+    "LimitsOptions",
     "LiveSeparator",
     "Located",
     "MissingExtraError",
@@ -54,6 +65,7 @@ __all__ = [
     "RenderSpec",
     "Rendered",
     "RenderedScene",
+    "Responses",
     "Scene",
     "Solution",
     "Talker",
@@ -63,6 +75,11 @@ __all__ = [
     "UnsolvableError",
     "Variant",
     "__version__",
+    "array_limits",
+    "calibrate",
+    "calibrate_blindly",
+    "calibrate_level",
+    "check",
     "export_bank",
     "grade",
     "grade_alone",
@@ -71,22 +88,29 @@ __all__ = [
     "grade_scene",
     "load_variant",
     "locate",
+    "measure_responses",
     "read_audio",
     "read_bank",
+    "read_sofa",
     "render_scene",
     "render_to_folder",
     "run_batch",
     "solve",
     "solve_to_folder",
     "write_audio",
+    "write_sofa",
 ]
 
 _LAZY = {
     "AloneGrades": "unmix.jobs.grade_real",
     "Array": "unmix.array",
     "BatchResult": "unmix.batch.run",
+    "Calibration": "unmix.jobs.calibration",
+    "Checked": "unmix.jobs.findings",
     "CloseGrades": "unmix.jobs.grade_real",
     "Grades": "unmix.metrics.grades",
+    "Limits": "unmix.jobs.limits",
+    "LimitsOptions": "unmix.jobs.limits",
     "LiveSeparator": "unmix.live.separator",
     "Located": "unmix.jobs.located",
     "Orientation": "unmix.track",
@@ -94,11 +118,18 @@ _LAZY = {
     "RenderSpec": "unmix.render.spec",
     "Rendered": "unmix.jobs.render",
     "RenderedScene": "unmix.render.compose",
+    "Responses": "unmix.sofa",
     "Scene": "unmix.scene",
     "Solution": "unmix.jobs.solution",
     "Talker": "unmix.scene",
     "Track": "unmix.track",
     "Variant": "unmix.variant",
+    # `unmix.limits` is a folder too.
+    "array_limits": "unmix.jobs.limits:limits",
+    "calibrate": "unmix.jobs.calibrate",
+    "calibrate_blindly": "unmix.jobs.calibrate",
+    "calibrate_level": "unmix.jobs.calibrate",
+    "check": "unmix.jobs.check",
     "export_bank": "unmix.export.job",
     "grade": "unmix.jobs.grade",
     "grade_alone": "unmix.jobs.grade_real",
@@ -107,8 +138,10 @@ _LAZY = {
     "grade_scene": "unmix.jobs.grade",
     "load_variant": "unmix.variant",
     "locate": "unmix.jobs.locate",
+    "measure_responses": "unmix.jobs.calibrate",
     "read_audio": "unmix.audio",
     "read_bank": "unmix.export.files",
+    "read_sofa": "unmix.sofa",
     "render_scene": "unmix.render.compose",
     # `unmix.render` is the folder of that stage; the job goes by the name of what it does.
     "render_to_folder": "unmix.jobs.render:render",
@@ -116,6 +149,7 @@ _LAZY = {
     "solve": "unmix.jobs.solve",
     "solve_to_folder": "unmix.jobs.solve",
     "write_audio": "unmix.audio",
+    "write_sofa": "unmix.sofa",
 }
 
 

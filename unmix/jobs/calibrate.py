@@ -142,6 +142,8 @@ def measure_responses(
     window_s  how much behind the earliest direct sound is kept as the array's own
 
     `Calibration.responses` are the windowed responses, `measured` T20 and direct-to-reverberant ratio of the whole.
+
+    Raises InputError when a take does not hold the sweep or its source has no bearing.
     """
     began = time.perf_counter()
     given = _same_array([scenes] if isinstance(scenes, Scene) else list(scenes))

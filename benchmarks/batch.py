@@ -149,7 +149,7 @@ from unmix.batch.run import missing
 from unmix.batch.scores import Scores
 from unmix.batch.store import Part, Store, encode_part
 from unmix.metrics.grades import FIGURES
-from unmix.batch.work import PARTS_OF_A_GRADE
+from unmix.batch.rows import PARTS_OF_A_GRADE
 
 path, out = Path(sys.argv[1]), Path(sys.argv[2])
 clock = time.perf_counter()

@@ -124,7 +124,11 @@ class Plan(_Strict, kw_only=True, frozen=True):
     ] = []
     vary: Annotated[list[VaryTable], Meta(description="fields to vary")] = []
     metrics: Annotated[
-        list[str], Meta(min_length=1, description="figures whose gains are analysed; the first one ranks")
+        list[str],
+        Meta(
+            min_length=1,
+            description="figures whose gains are analysed, or leakage_alone_db, or scores; the first one ranks",
+        ),
     ] = msgspec.field(default_factory=lambda: ["stoi", "sir_db", "sdr_db"])
     against: Annotated[
         Literal["early", "image", "dry", "plain"] | None,
@@ -158,5 +162,5 @@ def _check(plan: Plan, path: Path) -> None:
             raise InputError(f"{path}: key `vary[{index}].fields`: paired lists of different lengths ({said})")
     names = [metric.name for metric in plan.metric]
     for name in names:
-        if name in (*FIGURES, *SPEECH_FIGURES) or names.count(name) > 1:
+        if name in (*FIGURES, *SPEECH_FIGURES, "leakage_alone_db") or names.count(name) > 1:
             raise InputError(f"{path}: key `metric`: {name!r} is taken; choose another name")

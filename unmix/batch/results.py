@@ -13,9 +13,9 @@ from typing import IO, Any
 import msgspec
 
 from unmix.batch.items import Items
+from unmix.batch.rows import PARTS_OF_A_GRADE
 from unmix.batch.scores import Scores
 from unmix.batch.store import Part, Store
-from unmix.batch.work import PARTS_OF_A_GRADE
 from unmix.errors import FileError, InputError
 from unmix.files import write_aside
 from unmix.metrics.grades import FIGURES
@@ -46,6 +46,7 @@ _ITEM = {
 }
 _TALKER = {
     "leakage_db": "DOUBLE",
+    "leakage_alone_db": "DOUBLE",
     "offset_s": "DOUBLE",
     "drift_ppm": "DOUBLE",
     "azimuth_deg": "DOUBLE",

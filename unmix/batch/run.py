@@ -209,6 +209,7 @@ def _planned(path: Path, yes: bool) -> tuple[Plan, Items, Scores]:
 def _metrics(plan: Plan, items: Items, scores: Scores, path: Path) -> tuple[Metric, ...]:
     """The plan's metrics, by the columns they stand in."""
     known = {name: Metric(name, f"{name}_gain") for name in (*FIGURES, *SPEECH_FIGURES)}
+    known["leakage_alone_db"] = Metric("leakage_alone_db", "leakage_alone_db", higher_is_better=False)
     known |= {m.name: Metric(m.name, f"{m.name}_gain", m.higher_is_better) for m in items.metrics}
     known |= {name: Metric(name, name, higher) for name, higher in scores.columns.items()}
     for name in plan.metrics:

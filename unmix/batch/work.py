@@ -8,16 +8,15 @@ import time
 import traceback
 import warnings
 from collections import OrderedDict
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-from numpy.typing import NDArray
-
 from unmix.batch.digests import Stamp, unchanged
 from unmix.batch.memory import PeakMemory
 from unmix.batch.metrics import OwnMetric
+from unmix.batch.rows import alone_columns, item_columns, signals_of, talker_columns, unreferenced_rows
 from unmix.batch.store import Part
 from unmix.errors import FileError, UnmixError
 from unmix.jobs.grade import grader_of_scene
@@ -25,17 +24,12 @@ from unmix.jobs.solution import Solution
 from unmix.jobs.solve import solve
 from unmix.metrics.assignment import match_names
 from unmix.metrics.grader import Grader
-from unmix.metrics.grades import FIGURES, Figures, Grades, TalkerGrade
-from unmix.metrics.speech_figures import SPEECH_FIGURES
+from unmix.metrics.grades import Grades
 from unmix.scene import Scene
 from unmix.variant import Variant
 
-__all__ = ["PARTS_OF_A_GRADE", "Task", "failed", "run_task"]
+__all__ = ["Task", "failed", "run_task"]
 
-Floats = NDArray[np.float64]
-
-PARTS_OF_A_GRADE = ("", "_before", "_gain", "_best_mic", "_gain_over_best_mic")
-"""Endings of a figure's columns: after, before, and the gain; the best microphone, and the gain over that."""
 KEPT = 2
 """Scenes whose references stay prepared: items come scene by scene."""
 
@@ -60,8 +54,10 @@ class Task:
 
 @dataclass(frozen=True)
 class _Loaded:
+    """A scene with its references prepared; `grader` None when no talker has one."""
+
     scene: Scene
-    grader: Grader
+    grader: Grader | None
     truth: dict[str, dict[str, Any]]
 
 
@@ -96,17 +92,28 @@ def _run(task: Task) -> Part:
     with PeakMemory() as memory:
         solution = solve(loaded.scene, task.variant)
         began = time.perf_counter()
-        grades = _grade(loaded.grader, solution)
-        own = [_own(loaded.grader, solution, grades, metric) for metric in task.metrics]
+        rows, grades = _graded(loaded, solution, task.metrics)
+        leaks = alone_columns(loaded.scene, solution)
         grade_time_s = time.perf_counter() - began
     _check_unchanged(task)
+    measured = {"grade_time_s": grade_time_s, "peak_memory_mb": memory.mb}
     return Part(
-        item=_item_columns(loaded, solution, grades) | {"grade_time_s": grade_time_s, "peak_memory_mb": memory.mb},
-        talkers=[
-            _talker_columns(grade, loaded, solution) | {k: v for row in own for k, v in row[index].items()}
-            for index, grade in enumerate(grades.talkers)
-        ],
+        item=item_columns(loaded.scene, solution, grades) | measured,
+        talkers=[row | leaks.get(row["talker"], {}) | loaded.truth.get(row["talker"], {}) for row in rows],
     )
+
+
+def _graded(
+    loaded: _Loaded, solution: Solution, metrics: Sequence[OwnMetric]
+) -> tuple[list[dict[str, Any]], Grades | None]:
+    """A row for each talker, the user's own figures with it, and the grades; none without references."""
+    if loaded.grader is None:
+        return unreferenced_rows(solution), None
+    grades = _grade(loaded.grader, solution)
+    rows = [talker_columns(grade, solution) for grade in grades.talkers]
+    for metric in metrics:
+        rows = [row | more for row, more in zip(rows, _own(loaded.grader, solution, grades, metric), strict=True)]
+    return rows, grades
 
 
 def _check_unchanged(task: Task) -> None:
@@ -125,7 +132,9 @@ def _load(task: Task) -> _Loaded:
         scene = Scene.load(task.path)
         while len(_kept) >= KEPT:
             _kept.popitem(last=False)
-        _kept[key] = _Loaded(scene, grader_of_scene(scene, against=task.against), _truth(Path(task.path)))
+        references = task.against is not None or any(talker.references for talker in scene.talkers)
+        grader = grader_of_scene(scene, against=task.against) if references else None
+        _kept[key] = _Loaded(scene, grader, _truth(Path(task.path)))
     _kept.move_to_end(key)
     return _kept[key]
 
@@ -141,8 +150,8 @@ def _truth(scene: Path) -> dict[str, dict[str, Any]]:
 def _grade(grader: Grader, solution: Solution) -> Grades:
     matched = _matched(grader, solution)
     if matched is None:
-        return grader.grade(_signals(solution), match="best", speech=True)
-    return grader.grade(_signals(solution), matched=matched, speech=True)
+        return grader.grade(signals_of(solution), match="best", speech=True)
+    return grader.grade(signals_of(solution), matched=matched, speech=True)
 
 
 def _matched(grader: Grader, solution: Solution) -> list[int | None] | None:
@@ -151,16 +160,10 @@ def _matched(grader: Grader, solution: Solution) -> list[int | None] | None:
     return None if None in matched else matched
 
 
-def _signals(solution: Solution) -> Floats:
-    if solution.signals is None:
-        raise TypeError("the solution's signals are not in memory")
-    return solution.signals
-
-
 def _own(grader: Grader, solution: Solution, grades: Grades, metric: OwnMetric) -> list[dict[str, float | None]]:
     """The user's figure of each talker, before and after."""
     matched = [talker.estimate for talker in grades.talkers]
-    references, estimates, before = grader.aligned(_signals(solution), matched)
+    references, estimates, before = grader.aligned(signals_of(solution), matched)
     rows = []
     for k, e in enumerate(matched):
         after = None if e is None else metric(estimates[e], references[k], grader.sample_rate)
@@ -168,45 +171,3 @@ def _own(grader: Grader, solution: Solution, grades: Grades, metric: OwnMetric) 
         gain = None if after is None or first is None else after - first
         rows.append({metric.name: after, f"{metric.name}_before": first, f"{metric.name}_gain": gain})
     return rows
-
-
-def _item_columns(loaded: _Loaded, solution: Solution, grades: Grades) -> dict[str, Any]:
-    return {
-        "against": grades.against,
-        "duration_s": loaded.scene.recording.duration_s,
-        "sample_rate": solution.sample_rate,
-        "channels": loaded.scene.array.channels,
-        "talkers": len(grades.talkers),
-        "method": solution.method,
-        "latency_ms": solution.latency_ms,
-        "margin_s": solution.margin_s,
-        "fallbacks": " | ".join(solution.fallbacks) or None,
-        "warnings": " | ".join((*solution.warnings, *grades.warnings)) or None,
-        "solve_time_s": solution.wall_time_s,
-        "real_time_factor": solution.real_time_factor,
-    }
-
-
-def _talker_columns(grade: TalkerGrade, loaded: _Loaded, solution: Solution) -> dict[str, Any]:
-    parts: tuple[Figures | None, ...] = (
-        grade, grade.unprocessed, grade.gain, grade.best_microphone, grade.gain_over_best
-    )  # fmt: skip
-    columns: dict[str, Any] = {"talker": grade.name}
-    for ending, part in zip(PARTS_OF_A_GRADE, parts, strict=True):
-        columns |= {f"{figure}{ending}": None if part is None else getattr(part, figure) for figure in FIGURES}
-    if grade.speech is not None:
-        understood = (grade.speech.after, grade.speech.before, grade.speech.gain)
-        for ending, of in zip(PARTS_OF_A_GRADE, understood, strict=False):
-            columns |= {f"{figure}{ending}": getattr(of, figure) for figure in SPEECH_FIGURES}
-    leaks = [value for value in (grade.leakage_db or {}).values() if value is not None]
-    azimuth = None if grade.estimate is None else solution.talkers[grade.estimate].azimuth_deg
-    columns |= {
-        "leakage_db": max(leaks, default=None),
-        "offset_s": grade.offset_s,
-        "drift_ppm": grade.drift_ppm,
-        "azimuth_deg": azimuth,
-        "t20_s": None,
-        "drr_db": None,
-        "undefined": " | ".join(f"{name}: {why}" for name, why in sorted(grade.undefined.items())) or None,
-    }
-    return columns | loaded.truth.get(grade.name, {})

@@ -75,3 +75,20 @@ def test_fields_are_explained(run: Run) -> None:
     assert fields["metrics"]["meaning"] and fields["vary[].how"]["default"] == "'grid'"
     assert all(field["meaning"] for field in fields.values())
     assert "render[].snr_db" in run("batch", "--explain").out
+
+
+def test_the_ranking_fits_a_terminal_of_80_columns(tmp_path: Path) -> None:
+    from rich.console import Console
+
+    from unmix.batch.run import run_batch
+    from unmix.cli.batch_tables import ranking_table
+
+    plan = write_plan(tmp_path, PLAN.replace('"sir_db", "stoi"', '"stoi", "sir_db", "sdr_db"'))
+    analysis = run_batch(plan, tmp_path / "out").analysis
+    console = Console(width=80, record=True, highlight=False)
+    with console.capture() as captured:
+        console.print(ranking_table(analysis, narrow=True))
+    lines = captured.get().splitlines()
+    assert max(map(len, lines)) <= 80
+    [best] = [line for line in lines if "model" in line]
+    assert best.count("[") == 1 and "…" not in best and best.split()[:2] == ["1", "model"]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -18,6 +19,7 @@ __all__ = ["command"]
 
 IN_PART = 3
 MOST_FAILURES = 5
+WIDE = 130
 
 
 @click.command("batch")
@@ -123,7 +125,8 @@ def _print(result: BatchResult, out: Path, *, reported: bool) -> None:
 
     ran = f"{result.ran:,} run now in {clock(result.seconds)}" if result.ran else "none of them run now"
     say(f"{result.plan.title or 'Batch'}: {result.items:,} items, {ran}")
-    print_table(ranking_table(result.analysis))
+    narrow = sys.stdout.isatty() and shutil.get_terminal_size().columns < WIDE
+    print_table(ranking_table(result.analysis, narrow=narrow))
     for line in ranking_lines(result.analysis):
         say(line)
     if result.comparison is not None:

@@ -21,21 +21,29 @@ MOST_ROWS = 40
 MOST_LINES = 6
 
 
-def ranking_table(analysis: Analysis) -> Table:
-    """Variants, best first by the first metric; a line under each group that cannot be told apart."""
-    first = analysis.metrics[0]
+def ranking_table(analysis: Analysis, *, narrow: bool = False) -> Table:
+    """Variants, best first by the first metric; a line under each group that cannot be told apart.
+
+    narrow  for a terminal of 80 columns: intervals of the first metric only, no costs
+    """
+    first, *others = analysis.metrics
     ranking = analysis.rankings[first.name]
+    whole = (first,) if narrow else analysis.metrics
     columns = [("group", "right"), ("variant", "left")]
-    columns += [(f"{_head(m)}\nmean [{_percent(ranking)}]", "right") for m in analysis.metrics]
-    columns += [("scenes", "right"), ("failed", "right"), ("x real\ntime", "right"), ("latency\nms", "right")]
+    columns += [(f"{_head(m)}\nmean [{_percent(ranking)}]", "right") for m in whole]
+    columns += [(f"{_head(m).replace(' ', chr(10), 1)}", "right") for m in others if narrow]
+    columns += [("scenes", "right")]
+    columns += [] if narrow else [("failed", "right"), ("x real\ntime", "right"), ("latency\nms", "right")]
     table = plain_table(columns, [])
     shown = ranking.variants[:MOST_ROWS]
     for at, variant in enumerate(shown):
         cost = analysis.costs[variant.name]
         cells = [str(variant.group) if variant.group else "–", variant.name]
-        cells += [_interval(_of(analysis.rankings[m.name], variant.name).interval, m) for m in analysis.metrics]
-        cells += [str(variant.interval.scenes), str(cost.failures)]
-        cells += [number(cost.real_time_factor, 2), number(cost.latency_ms, 0)]
+        intervals = [(m, _of(analysis.rankings[m.name], variant.name).interval) for m in analysis.metrics]
+        cells += [_interval(interval, m) if m in whole else _mean(interval, m) for m, interval in intervals]
+        cells += [str(variant.interval.scenes)]
+        costs = [str(cost.failures), number(cost.real_time_factor, 2), number(cost.latency_ms, 0)]
+        cells += [] if narrow else costs
         last = at + 1 < len(shown) and shown[at + 1].group != variant.group
         table.add_row(*cells, style="bold" if variant.group == 1 else None, end_section=last)
     return table
@@ -57,13 +65,19 @@ def _of(ranking: Ranking, name: str) -> Ranked:
 
 
 def _interval(interval: Interval, metric: Metric) -> str:
-    digits = 1 if metric.name.endswith("_db") else 2
-    signed = metric.column.endswith("_gain")
-    mean = number(interval.mean, digits, signed=signed)
+    mean = _mean(interval, metric)
     if interval.low is None or interval.high is None:
         return mean
-    bounds = (number(bound, digits, signed=signed) for bound in (interval.low, interval.high))
-    return f"{mean} [{' '.join(bounds)}]"
+    return f"{mean} [{_number(interval.low, metric)} {_number(interval.high, metric)}]"
+
+
+def _mean(interval: Interval, metric: Metric) -> str:
+    return _number(interval.mean, metric)
+
+
+def _number(value: float | None, metric: Metric) -> str:
+    digits = 1 if metric.name.endswith("_db") else 2
+    return number(value, digits, signed=metric.column.endswith("_gain"))
 
 
 def ranking_lines(analysis: Analysis) -> Iterator[str]:

@@ -200,6 +200,15 @@ def test_a_late_channel() -> None:
     assert "order" not in alarms(result)
 
 
+@pytest.mark.parametrize("odd", [0, 5])
+def test_a_channel_of_another_recording(odd: int) -> None:
+    def change(y: np.ndarray) -> np.ndarray:
+        y[odd] = speech("digits", SECONDS) - speech("digits", SECONDS).mean()
+        return y
+
+    assert only(checked(change), "unrelated").channels == (odd,)
+
+
 @pytest.mark.parametrize("ppm", [40.0, -80.0])
 def test_a_drifting_clock(ppm: float) -> None:
     def change(y: np.ndarray) -> np.ndarray:

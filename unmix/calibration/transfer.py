@@ -92,7 +92,7 @@ def measure_transfer(samples: Floats, reference: int, sample_rate: int, *, where
     snr = (lead - noise) / np.maximum(noise * len(samples), 1e-300)
     used = snr > LEAST_SNR
     step = float(frequency[1] - frequency[0])
-    _check(covariance, gain, sign, used, step, where)
+    _check_bandwidth(used, step, where)
     second = _second(covariance * np.outer(np.exp(-gain), np.exp(-gain)), used, frequency)
     if second > MOST_SECOND:
         raise InputError(
@@ -168,9 +168,7 @@ def _variance(h: Complexes, lead: Floats, noise: Floats, frames: float, referenc
     return np.asarray(variance)
 
 
-def _check(
-    covariance: Complexes, gain: Floats, sign: NDArray[np.int64], used: NDArray[np.bool_], step: float, where: str
-) -> None:
+def _check_bandwidth(used: NDArray[np.bool_], step: float, where: str) -> None:
     width = np.count_nonzero(used) * step
     if width < LEAST_BANDWIDTH_HZ:
         raise InputError(

@@ -243,6 +243,11 @@ def _same_array(scenes: list[Scene]) -> list[Scene]:
     if not scenes:
         raise InputError("no scene was given")
     first = scenes[0]
+    if first.array.responses is not None:
+        raise InputError(
+            f"{first.title}: calibration is against microphone positions; give an array file with `positions_m` "
+            "instead of measured responses"
+        )
     for scene in scenes[1:]:
         if scene.array.positions_m.shape != first.array.positions_m.shape or not np.allclose(
             scene.array.positions_m, first.array.positions_m, atol=1e-6

@@ -18,7 +18,14 @@ from unmix.calibration.clocks import ClockFit, ClockMeter
 from unmix.calibration.order import FieldMeter, FieldReading
 from unmix.health import SILENT_DBFS
 from unmix.jobs.check_channels import channel_findings, quiet_findings
-from unmix.jobs.check_pairs import clock_findings, copy_findings, field_findings, peak_findings, unsynchronised
+from unmix.jobs.check_pairs import (
+    clock_findings,
+    copy_findings,
+    field_findings,
+    peak_findings,
+    unrelated_findings,
+    unsynchronised,
+)
 from unmix.jobs.findings import ChannelFigures, Checked, Finding
 from unmix.limits.ambiguity import ambiguity_hz
 from unmix.limits.ladder import noise_gain, responses
@@ -62,6 +69,7 @@ def check(scene: Scene, *, progress: Progress | None = None) -> Checked:
     findings += quiet_findings(measured.readings, measured.alive)
     findings += copy_findings(measured.gram, measured.alive)
     findings += clock_findings(measured.clocks, measured.late, scene)
+    findings += unrelated_findings(measured.clocks, measured.alive, scene)
     findings += field_findings(measured.field, measured.alive & ~measured.late, _expected_spread_db(scene))
     if measured.field.sign is None:
         findings += peak_findings(measured.clocks, measured.alive & ~measured.late, scene)

@@ -21,6 +21,7 @@ __all__ = [
     "field_findings",
     "longest_delay",
     "peak_findings",
+    "unrelated_findings",
     "unsynchronised",
 ]
 
@@ -30,6 +31,7 @@ _SAME = 1e-12
 _SLACK_S = 1e-4
 """Delays beyond the geometry that a peak between two samples, or a reflection next to a microphone, may give."""
 DRIFT_DEVIATIONS = 5.0
+UNRELATED_FROM_S = 4.0
 LEAST_DRIFT_PPM = 0.2
 GAIN_DB, LOST_DB = 1.5, 15.0
 SURE_COHERENCE = 0.3
@@ -101,6 +103,22 @@ def clock_findings(clocks: Sequence[ClockFit | None], late: NDArray[np.bool_], s
                 min(0.999, 0.75 + 0.01 * clock.chunks), "synchronise the recorders; `unmix calibrate` finds the delay",
                 (m,), 1e3 * clock.delay_s, "ms",
             )  # fmt: skip
+
+
+def unrelated_findings(clocks: Sequence[ClockFit | None], alive: NDArray[np.bool_], scene: Scene) -> Iterator[Finding]:
+    """Channels that share no sound with the others, as far as the correlations tell."""
+    reference = scene.array.reference_channel
+    if scene.recording.duration_s < UNRELATED_FROM_S or not alive[reference]:
+        return
+    others = [m for m in map(int, np.flatnonzero(alive)) if m != reference]
+    lone = [m for m in others if clocks[m] is None]
+    if len(others) > 1 and 2 * len(lone) > len(others):
+        lone = [reference]
+    for m in lone:
+        yield Finding(
+            "unrelated", "unfit", "no sound in common with the other channels", f"channel {m}", 0.8,
+            "is it from the same recording, at the same sample rate? else check cable and clock, or leave it out", (m,),
+        )  # fmt: skip
 
 
 def peak_findings(clocks: Sequence[ClockFit | None], trusted: NDArray[np.bool_], scene: Scene) -> Iterator[Finding]:

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from tests.cli.conftest import Run
+from tests.conftest import speech
+from unmix.audio import write_audio
 from unmix.report.page import kind_of_page
 from unmix.report.scene_page import UNGRADED
 
@@ -106,3 +109,44 @@ def test_a_folder_that_holds_nothing_is_one_line(
 def test_a_report_is_replaced_only_when_told(run: Run, solved: Path) -> None:
     assert run("report", solved).status == 1
     assert run("report", solved, "--overwrite").status == 0
+
+
+@pytest.fixture
+def real(tmp_path: Path) -> Path:
+    """A scene whose talkers are alone at times; its references are close microphones, its estimates leak at -30 dB."""
+    talkers = np.array([speech("novel-reader", 6.0), speech("card-reader", 6.0)])
+    talkers[0, 3 * 16000 :] = 0.0
+    talkers[1, : 2 * 16000] = 0.0
+    write_audio(tmp_path / "mix.wav", np.repeat(talkers.sum(axis=0)[None], 2, axis=0), 16000)
+    text = '[recording]\nfile = "mix.wav"\n[array]\npositions_m = [[0, 0, 0], [0.05, 0, 0]]\n'
+    for k, (name, active) in enumerate((("mate", [[0.0, 3.0]]), ("pilot", [[2.0, 6.0]]))):
+        write_audio(tmp_path / f"{name}.wav", (talkers[k] + 0.1 * talkers[1 - k])[None], 16000)
+        write_audio(tmp_path / "out" / f"{name}.wav", (talkers[k] + 0.03 * talkers[1 - k])[None], 16000)
+        text += f'[[talker]]\nname = "{name}"\nazimuth_deg = {60 * k}\nreference = "{name}.wav"\nactive_s = {active}\n'
+    (tmp_path / "scene.toml").write_text(text)
+    return tmp_path
+
+
+def test_a_recording_without_references_has_its_leakage_told(run: Run, real: Path) -> None:
+    common = ("grade", real / "scene.toml", "--estimates", real / "out", "--alone")
+    ran = run(*common, "--out", real / "alone")
+    assert (ran.status, "grades.json and report.html" in ran.out) == (0, True)
+    text = (real / "alone" / "report.html").read_text(encoding="utf-8")
+    assert "Leakage where one talker is alone</h2>" in text
+    assert "pilot, speaking alone, comes out of mate’s file 30 dB below the own file" in text
+    assert "cannot say how good a talker&#39;s own voice sounds" in text
+    again = run("report", real / "alone", "--out", real / "again.html", "--pseudonyms")
+    assert again.status == 0
+    text = (real / "again.html").read_text(encoding="utf-8")
+    assert "Talker B, speaking alone" in text and "pilot" not in text
+    assert 'id="audio-after-1"' in text
+    assert run(*common, "--out", real / "none", "--no-report").status == 0
+    assert not (real / "none" / "report.html").exists()
+
+
+def test_close_microphones_stand_with_what_they_claim(run: Run, real: Path) -> None:
+    ran = run("grade", real / "scene.toml", "--estimates", real / "out", "--close", "--out", real / "close")
+    assert ran.status == 0
+    text = (real / "close" / "report.html").read_text(encoding="utf-8")
+    assert "Bleed of the close microphones</h2>" in text and "whose bleed was estimated" in text
+    assert "can be understood" in text

@@ -12,12 +12,14 @@ from pathlib import Path
 import numpy as np
 import pytest
 import soundfile
+from markupsafe import escape
 
 from tests.conftest import speech
 from tests.report.conftest import NAMES, RATE
-from unmix.audio import Samples, write_audio
+from unmix.audio import Samples, read_audio, write_audio
 from unmix.errors import FileError, InputError
 from unmix.jobs.grade import read_grades
+from unmix.report.health import health_of
 from unmix.report.levels import STEP_S, frame_powers, spoken, telling_stretch
 from unmix.report.loudness import loudness
 from unmix.report.material import SceneMaterial, material_of_folder, pseudonyms
@@ -208,3 +210,34 @@ def test_words_follow_the_figures(solved: Path) -> None:
     assert talker_verdict(worse).headline == "cannot be understood, worse than before"
     unknown = talker_verdict(replace(talker, stoi=None, undefined={"stoi": "silent"}))
     assert unknown.level == "unknown" and "silent" in unknown.sentence
+
+
+def test_the_health_check_is_in_the_report(material: SceneMaterial) -> None:
+    from dataclasses import replace
+
+    sound = scene_sound(material, megabytes=5.0)
+    found = health_of(material, sound)
+    assert found is not None and found.of == "the whole recording"
+    text = scene_report(material, audio=False)
+    assert "Health of the recording" in text
+    for finding, _ in found.findings:
+        assert str(escape(finding.remedy)) in text
+    assert health_of(replace(material, scene=None), sound) is None
+
+
+def test_a_damaged_channel_is_a_warning_at_the_top(solved: Path, tmp_path: Path) -> None:
+    shutil.copytree(solved, tmp_path / "s")
+    rows, rate = read_audio(tmp_path / "s" / "mix.wav")
+    rows[3] = 0.0
+    write_audio(tmp_path / "s" / "mix.wav", rows, rate, overwrite=True)
+    text = scene_report(material_of_folder(tmp_path / "s" / "out"), audio=False)
+    top = text[: text.index("Look and listen")]
+    assert re.search(r"\d+ warnings?</strong>", top) and "silent" in top
+
+
+def test_a_long_recording_is_checked_where_it_is_shown(
+    material: SceneMaterial, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("unmix.report.health.LONGEST_S", 3.0)
+    found = health_of(material, scene_sound(material, megabytes=1.0))
+    assert found is not None and found.of == "the stretch shown above"

@@ -91,9 +91,9 @@ def command(
     if alone or close:
         if scene is None or estimates is None or (alone and close):
             raise click.UsageError("give SCENE and --estimates DIR with --alone or --close, one of them")
-        _grade_real(
-            scene, estimates, against if close else None, out, close=close, overwrite=overwrite, as_json=as_json
-        )
+        kind = against if close else None
+        shown = {"overwrite": overwrite, "as_json": as_json, "report": not no_report}
+        _grade_real(scene, estimates, kind, out, close=close, **shown)
         return
     from unmix.files import refuse_to_replace
     from unmix.jobs.grade import grade_files, grade_scene, grades_tree
@@ -136,23 +136,38 @@ def command(
 
 
 def _grade_real(
-    scene: Path, estimates: Path, against: str | None, out: Path | None, *, close: bool, overwrite: bool, as_json: bool
+    scene: Path,
+    estimates: Path,
+    against: str | None,
+    out: Path | None,
+    *,
+    close: bool,
+    overwrite: bool,
+    as_json: bool,
+    report: bool,
 ) -> None:
     """Grade a recording that has no clean references, and say what the figures can claim."""
     from unmix.cli.tables import alone_table, bleed_table
-    from unmix.files import refuse_to_replace, write_json
+    from unmix.files import path_from, refuse_to_replace, write_json
     from unmix.jobs.grade_real import AloneGrades, grade_alone, grade_close
     from unmix.scene import Scene
 
     if out is not None:
         refuse_to_replace(out / "grades.json", overwrite=overwrite)
+        if report:
+            refuse_report(out, overwrite=overwrite, renew=True)
     loaded = Scene.load(scene)
     with progress_bar("grading"):
         graded = grade_close(loaded, estimates, against=against) if close else grade_alone(loaded, estimates)
+    tree, reported = graded.to_dict(), None
     if out is not None:
-        write_json(out / "grades.json", graded.to_dict(), overwrite=overwrite)
+        tree |= {"scene": path_from(out, scene), "estimates": path_from(out, estimates)}
+        write_json(out / "grades.json", tree, overwrite=overwrite)
+        grades = None if isinstance(graded, AloneGrades) else graded.grades
+        if report:
+            reported = write_report(lambda: _graded_scene(loaded, estimates, grades, tree), out, overwrite=True)
     if as_json:
-        print_json(graded.to_dict())
+        print_json(tree)
         return
     if isinstance(graded, AloneGrades):
         noise = "taken off" if graded.noise_taken_off else "counted as leakage, since noise_only_s is not given"
@@ -165,15 +180,17 @@ def _grade_real(
     for claim in graded.claims:
         say(claim)
     if out is not None:
-        say(f"Written to {out}: grades.json")
+        say(f"Written to {out}: grades.json{f' and {REPORT}' if reported else ''}")
 
 
-def _graded_scene(scene: Scene, estimates: Path, grades: Grades) -> SceneMaterial:
+def _graded_scene(
+    scene: Scene, estimates: Path, grades: Grades | None, real: dict[str, Any] | None = None
+) -> SceneMaterial:
     """What the report on a graded scene is made of."""
     from unmix.report.material import material_of_scene, read_solution
 
     solution = read_solution(estimates / "solution.json")
-    return material_of_scene(scene, estimates, solution=solution, grades=grades)
+    return material_of_scene(scene, estimates, solution=solution, grades=grades, real=real)
 
 
 def _graded_files(

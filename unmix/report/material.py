@@ -43,6 +43,8 @@ class SceneMaterial:
     outputs     the talkers' own files
     references  clean speech, by talker
     solution    the content of `solution.json`
+    real        what grading without clean references says (`unmix.jobs.grade_real`), as plain values: leakage where one
+                talker is alone, or the bleed of close microphones
     notes       what the reader should know about the report itself
     """
 
@@ -56,6 +58,7 @@ class SceneMaterial:
     references: dict[str, Path] = field(default_factory=dict)
     solution: dict[str, Any] | None = None
     grades: Grades | None = None
+    real: dict[str, Any] | None = None
     notes: tuple[str, ...] = ()
 
 
@@ -65,6 +68,7 @@ def material_of_scene(
     *,
     solution: Solution | dict[str, Any] | None = None,
     grades: Grades | None = None,
+    real: dict[str, Any] | None = None,
     notes: tuple[str, ...] = (),
 ) -> SceneMaterial:
     """A scene with the talker signals in a folder and what `solve` and `grade` said of them."""
@@ -81,6 +85,7 @@ def material_of_scene(
         references=_references(scene, grades),
         solution=tree,
         grades=grades,
+        real=real,
         notes=notes,
     )
 
@@ -153,9 +158,10 @@ def material_of_folder(folder: Path, *, scene: Path | None = None) -> SceneMater
             "`grade`, `batch` or `demo` wrote"
         )
     tree = read_solution(found / "solution.json")
-    grades = read_grades(found) if (found / "grades.json").exists() else None
+    real = _real(found / "grades.json")
+    grades = read_grades(found) if (found / "grades.json").exists() and "alone_s" not in (real or {}) else None
     notes: list[str] = []
-    if tree is not None and grades is not None and _older(found / "grades.json", found / "solution.json"):
+    if tree is not None and (grades or real) is not None and _older(found / "grades.json", found / "solution.json"):
         notes.append("grades.json is older than solution.json and may not belong to it; grade again")
     graded = _pointers(found / "grades.json")
     loaded = _scene(found, (tree or graded).get("scene"), scene, notes)
@@ -164,11 +170,11 @@ def material_of_folder(folder: Path, *, scene: Path | None = None) -> SceneMater
         signals = found / graded["estimates"]
         tree = read_solution(signals / "solution.json")
     if loaded is not None:
-        return material_of_scene(loaded, signals, solution=tree, grades=grades, notes=tuple(notes))
+        return material_of_scene(loaded, signals, solution=tree, grades=grades, real=real, notes=tuple(notes))
     names = _names(tree, grades, None)
     title = folder.resolve().name
     outputs = _outputs(names, signals, tree)
-    return SceneMaterial(title, names, outputs=outputs, solution=tree, grades=grades, notes=tuple(notes))
+    return SceneMaterial(title, names, outputs=outputs, solution=tree, grades=grades, real=real, notes=tuple(notes))
 
 
 def _older(a: Path, b: Path) -> bool:
@@ -190,6 +196,16 @@ def read_solution(path: Path) -> dict[str, Any] | None:
     if not known:
         raise FileError(f"{path}: is not a solution as written by this version; solve again")
     return dict(tree)
+
+
+def _real(path: Path) -> dict[str, Any] | None:
+    """The content of a `grades.json` that was graded without clean references; None for any other."""
+    try:
+        tree = json.loads(path.read_text(encoding="utf-8"))
+    except (OSError, UnicodeDecodeError, json.JSONDecodeError):
+        return None  # what is wrong with it is said where grades are read
+    known = isinstance(tree, dict) and "claims" in tree and ({"leakage", "alone_s"} <= set(tree) or "bleed" in tree)
+    return tree if known else None
 
 
 def _pointers(path: Path) -> dict[str, Any]:
@@ -230,6 +246,7 @@ def pseudonyms(material: SceneMaterial, *, known: Sequence[str] = ()) -> SceneMa
         references={other.get(name, name): path for name, path in material.references.items()},
         solution=None if material.solution is None else _rename_tree(material.solution, other, keep=("settings",)),
         grades=None if grades is None else Grades.from_dict(_rename_tree(grades.to_dict(), other)),
+        real=None if material.real is None else _rename_tree(material.real, other),
         notes=tuple(rename(note, other) for note in material.notes),
     )
 

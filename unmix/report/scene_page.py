@@ -15,8 +15,10 @@ from unmix.metrics.grades import FIGURES, Figures, Grades
 from unmix.metrics.intervals import Interval
 from unmix.metrics.words import CAUTION
 from unmix.report.figures import embedded_svg
+from unmix.report.health import Health, health_of
 from unmix.report.material import SceneMaterial, pseudonyms
 from unmix.report.page import PageFile, render_page, versions, write_page
+from unmix.report.real import leakage_verdicts, real_tables
 from unmix.report.scene_figures import conditioning_figure, scene_figure, verdict_figure
 from unmix.report.scene_sound import MICROPHONE, OUTPUT, SceneSound, picture_of, scene_sound, timeline_rows
 from unmix.report.spectrogram import RANGE_DB
@@ -74,6 +76,7 @@ def scene_report(
         material = pseudonyms(material)
     sound = scene_sound(material, megabytes=sound_mb)
     verdicts = _verdicts(material)
+    health = health_of(material, sound)
     pictures, colours = picture_of(sound) if sound is not None else ([], "")
     player = player_of(sound) if sound is not None and audio else None
     return render_page(
@@ -82,16 +85,18 @@ def scene_report(
         kind=_kind(material, audio=audio, hide_names=hide_names),
         title=material.title,
         subtitle=_subtitle(material),
-        headline=_headline(verdicts, material.grades),
+        headline=_headline(verdicts, material),
         verdicts=verdicts,
         graded=material.grades is not None,
-        warnings=_warnings(material, sound),
+        warnings=_warnings(material, sound, health),
         pictures=pictures,
         colours=colours,
         sound=player,
         views=scene_views(material, sound),
         **_drawings(material, verdicts),
         figures=_figures(material.grades) if material.grades is not None else None,
+        real=real_tables(material.real),
+        health=health,
         speech=_speech(material.grades) if material.grades is not None else None,
         done=_done(material),
         settings=_settings(material),
@@ -99,7 +104,7 @@ def scene_report(
 
 
 def _kind(material: SceneMaterial, *, audio: bool, hide_names: bool) -> str:
-    graded = "graded" if material.grades is not None else "not graded"
+    graded = "graded" if (material.grades or material.real) is not None else "not graded"
     return f"scene, {graded}, {'with' if audio else 'without'} sound, {'without' if hide_names else 'with'} names"
 
 
@@ -125,14 +130,17 @@ def _subtitle(material: SceneMaterial) -> str:
 def _verdicts(material: SceneMaterial) -> list[Verdict]:
     if material.grades is not None:
         return [talker_verdict(talker) for talker in material.grades.talkers]
+    if material.real is not None and "leakage" in material.real:
+        return leakage_verdicts(material.names, material.real)
     sentence = "No clean speech to compare with: listen below, or give references and grade."
     return [Verdict(name, "unknown", "not graded", sentence) for name in material.names]
 
 
-def _headline(verdicts: list[Verdict], grades: Grades | None) -> str:
+def _headline(verdicts: list[Verdict], material: SceneMaterial) -> str:
     """The answer to the reader's first question."""
+    grades = material.grades
     if grades is None:
-        return "Not graded yet"
+        return "Not graded yet" if material.real is None else "Leakage where one talker is alone"
     many, understood = len(verdicts), sum(v.level == "good" for v in verdicts)
     before = [t.unprocessed.stoi for t in grades.talkers]
     was = ""
@@ -146,8 +154,10 @@ def _headline(verdicts: list[Verdict], grades: Grades | None) -> str:
     return f"{who} can be understood after separation{was}"
 
 
-def _warnings(material: SceneMaterial, sound: SceneSound | None) -> list[str]:
+def _warnings(material: SceneMaterial, sound: SceneSound | None, health: Health | None) -> list[str]:
     lines: list[str] = list(material.notes)
+    if health is not None:
+        lines += health.warnings
     if material.solution is not None:
         lines += material.solution["warnings"]
     if sound is not None:

@@ -11,7 +11,7 @@ from tests.calibration.rig import RATE, Faults, take
 from tests.cli.conftest import Run
 from tests.conftest import circle
 from unmix.array import Array
-from unmix.audio import write_audio
+from unmix.audio import read_audio, write_audio
 
 SCENE = """
 [recording]
@@ -82,3 +82,23 @@ def test_a_tone(run: Run, folder: Path) -> None:
 )
 def test_options_that_do_not_go_together(run: Run, folder: Path, options: list[str]) -> None:
     assert run("calibrate", folder / "front.toml", *options).status == 2
+
+
+def test_recorders_are_put_onto_one_clock(run: Run, folder: Path) -> None:
+    rng = np.random.default_rng(23)
+    none = Faults(np.zeros(5), np.zeros(5), np.ones(5), np.zeros((5, 3)))
+    y = take(circle(4), none, np.radians(20.0), 0.0, rng, seconds=12.0)
+    y[3] = np.roll(y[3], 1600)
+    n = np.arange(y.shape[1], dtype=float)
+    y[2] = np.interp(n * (1 - 50e-6), n, y[2])
+    write_audio(folder / "front.wav", y, RATE, overwrite=True)
+    refused = run("calibrate", folder / "front.toml", "--out", folder / "fitted.toml")
+    assert refused.status == 1 and "--repaired" in refused.err
+    alone = run("calibrate", folder / "front.toml", "--repaired", folder / "alone.wav", "--json")
+    assert [round(c["drift_ppm"]) for c in alone.json["clocks"]] == [50, 0]
+    ran = run("calibrate", folder / "front.toml", "--repaired", folder / "one.wav", "--out", folder / "fitted.toml")
+    assert ran.status == 0, ran.err
+    assert "Channel 2" in ran.out and "Channel 3: +100." in ran.out
+    fitted = Array.load(folder / "fitted.toml")
+    assert np.abs(fitted.delay_s).max() < 1e-5
+    assert np.array_equal(read_audio(folder / "alone.wav")[0], read_audio(folder / "one.wav")[0])

@@ -26,7 +26,7 @@ __all__ = ["command"]
     "--repaired",
     type=existing_file,
     metavar="FILE",
-    help="First resample drifting recorders onto one clock, into FILE.",
+    help="First resample drifting recorders onto one clock, into FILE; without --out nothing more.",
 )
 @click.option(
     "--tone-level", type=click.FloatRange(20.0, 180.0), metavar="DB_SPL",
@@ -75,6 +75,9 @@ def command(
 
         loaded[0], reports = put_on_one_clock(loaded[0], repaired, overwrite=overwrite)
         clocks = tuple(reports)
+        if out is None and sweep is None:
+            _report_clocks(clocks, repaired, as_json)
+            return
     found = _found(loaded, positions, blind, tone_level, tone_channel, sweep, window_ms)
     found = replace(found, clocks=clocks)
     written = [] if repaired is None else [repaired]
@@ -94,6 +97,25 @@ def command(
         say(f"Written: {path}")
 
 
+def _report_clocks(clocks: tuple[ClockReport, ...], repaired: Path, as_json: bool) -> None:
+    """What was put onto one clock, when that was all that was asked for."""
+    if as_json:
+        print_json({"clocks": [vars(c) for c in clocks], "repaired": str(repaired)})
+        return
+    _print_clocks(clocks)
+    if not clocks:
+        say("All channels run on one clock; they were copied as they are")
+    say(f"Written: {repaired}")
+
+
+def _print_clocks(clocks: tuple[ClockReport, ...]) -> None:
+    for clock in clocks:
+        say(
+            f"Channel {clock.channel}: {1e3 * clock.delay_s:+.3f} ms and {clock.drift_ppm:+.2f} +- "
+            f"{clock.drift_std_ppm:.2f} ppm, put onto the reference's clock"
+        )
+
+
 def _check_options(
     scenes: int,
     out: Path | None,
@@ -109,7 +131,7 @@ def _check_options(
         raise click.UsageError("--blind, --tone-level and --sweep are three different recordings; give one of them.")
     if (sweep is None) != (responses is None):
         raise click.UsageError("--sweep FILE and --responses SOFA belong together.")
-    if sweep is None and out is None:
+    if sweep is None and out is None and (repaired is None or blind or tone_level is not None):
         raise click.UsageError("Give --out ARRAY, the array file to write.")
     if sweep is not None and out is not None:
         raise click.UsageError("--sweep writes --responses; for corrections run again without --sweep.")
@@ -146,11 +168,7 @@ def _print(found: Calibration) -> None:
     """Tables for people."""
     from unmix.cli.tables import number, plain_table
 
-    for clock in found.clocks:
-        say(
-            f"Channel {clock.channel}: {1e3 * clock.delay_s:+.3f} ms and {clock.drift_ppm:+.2f} +- "
-            f"{clock.drift_std_ppm:.2f} ppm, put onto the reference's clock"
-        )
+    _print_clocks(found.clocks)
     if found.tone_hz is not None:
         say(f"Tone at {found.tone_hz:.0f} Hz: full scale is {found.array.full_scale_db_spl:.1f} dB SPL")
         return

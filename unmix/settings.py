@@ -131,6 +131,12 @@ class PredictionSettings(_Strict, kw_only=True, frozen=True):
         int, Meta(ge=0, le=5, description="reweightings after the refinement, by the power of the separated talkers")
     ] = 1
     taps_again: Annotated[int, Meta(ge=1, le=40, description="frames that predict, after the refinement")] = 8
+    recursive: Annotated[
+        bool, Meta(description="frame by frame with forgetting, for streaming; without refinement and post only")
+    ] = False
+    forgetting_s: Annotated[
+        float, Meta(ge=0.1, le=600.0, description="recursive: time constant of what is remembered")
+    ] = 10.0
     floor_db: Annotated[
         float, Meta(ge=-120.0, le=-10.0, description="lowest weight, below the loudest frame of each frequency")
     ] = -50.0
@@ -218,7 +224,7 @@ class SegmentSettings(_Strict, kw_only=True, frozen=True):
     ] = 4.0
     most_turn_deg: Annotated[
         float, Meta(ge=0.0, description="bearings that turn by more within a segment: the model alone")
-    ] = 60.0
+    ] = 150.0
     context_s: Annotated[
         float, Meta(ge=0.1, le=10.0, description="sound before the segment that is processed with it")
     ] = 1.0
@@ -226,18 +232,16 @@ class SegmentSettings(_Strict, kw_only=True, frozen=True):
 
 
 class LowLatencySettings(_Strict, kw_only=True, frozen=True):
-    """The streaming form: short synthesis frames, statistics updated frame by frame."""
+    """The streaming form: the separating matrix learned from past frames, filters that see little of the future."""
 
-    analysis_s: Annotated[
-        float, Meta(ge=0.004, le=0.128, description="analysis frame; sets the frequency resolution")
-    ] = 0.032
-    synthesis_s: Annotated[float, Meta(ge=0.002, le=0.064, description="synthesis frame; sets the latency")] = 0.016
-    hop_s: Annotated[float, Meta(ge=0.001, le=0.032, description="frame advance")] = 0.008
-    prediction_taps: Annotated[
-        int, Meta(ge=0, le=20, description="recursive prediction of late reverberation; 0: none")
-    ] = 0
-    prediction_delay: Annotated[int, Meta(ge=1, le=20, description="frames left alone")] = 4
-    forgetting_s: Annotated[float, Meta(ge=0.1, le=60.0, description="time constant of the statistics")] = 4.0
+    look_ahead_s: Annotated[float, Meta(ge=0.0, le=0.1, description="future that the filters see")] = 0.012
+    block_s: Annotated[float, Meta(ge=0.0005, le=0.05, description="samples filtered at once; adds to the latency")] = (
+        0.004
+    )
+    forgetting_s: Annotated[float, Meta(ge=0.1, le=600.0, description="time constant of the statistics")] = 4.0
+    prior_s: Annotated[
+        float, Meta(ge=0.0, le=60.0, description="seconds of sound that the bearings alone count for at first")
+    ] = 0.5
 
 
 class RoomSettings(_Strict, kw_only=True, frozen=True):

@@ -11,7 +11,7 @@ from msgspec import Meta
 from unmix.errors import FileError, InputError
 from unmix.explain import FieldInfo, explain_fields
 from unmix.files import read_toml
-from unmix.settings import ModelSettings, RoomSettings, SolverSettings
+from unmix.settings import LowLatencySettings, ModelSettings, RoomSettings, SolverSettings, TransformSettings
 
 __all__ = ["DEFAULT", "PRESETS", "Variant", "describe_fields", "load_variant"]
 
@@ -74,6 +74,18 @@ PRESETS: dict[str, Variant] = {
             name="full",
             summary="refined, then a filter driven by who speaks when, and each talker's early sound restored",
             room=RoomSettings(),
+        ),
+        Variant(
+            name="low-latency",
+            summary="separating matrix learned on the way, 16 ms late: no dereverberation, no post filter, no judging",
+            room=RoomSettings(
+                transform=TransformSettings(overlap=2),
+                prediction=None,
+                learned=None,
+                post=None,
+                judge=False,
+                low_latency=LowLatencySettings(),
+            ),
         ),
     )
 }

@@ -42,11 +42,13 @@ class Start:
     model      (frequencies, K, M): the constrained solution's separating matrix
     look       (frequencies, M, K): relative responses of the bearings, one at the reference channel
     warm       (frequencies, K, M): rows of the previous segment's matrix, None at the beginning
+    course     responses of the bearings over equal parts of the segment, where something moves
     """
 
     model: Complexes
     look: Complexes
     warm: Complexes | None = None
+    course: tuple[Complexes, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -95,7 +97,7 @@ def run_chain(
         if settings.learned is not None:
             steps.append(_constrained(z, responses, settings.learned, bands))
         if settings.judge:
-            verdict = judge(x, start.look, responses, rows, frequencies_hz, bands)
+            verdict = judge(x, start.course or (start.look,), responses, rows, frequencies_hz, bands)
     carried = None if refined is None else independent_start(refined.matrix[:, : refined.talkers])
     if verdict is not None and not verdict.helps:
         return ChainResult(None, carried, responses, refined, verdict, np.zeros((len(STAGES), start.model.shape[1])))
@@ -111,13 +113,13 @@ def _finished(
     talkers = np.empty((f, k, x.shape[2]), x.dtype)
 
     def finish(b: slice) -> Reals:
-        outputs = [steps[0][b] @ x[b], *(rows[b] @ z[b] for rows in steps)]
+        outputs: list[Complexes] = [steps[0][b] @ x[b], *(rows[b] @ z[b] for rows in steps)]
         names = list(STAGES[: len(steps)])
         if settings.post is not None:
             filtered, early = _post(
                 x[b], z[b], steps[-1][b], outputs[-1], settings.post, settings.prediction, reference
             )
-            outputs += [filtered, early]
+            outputs.extend((filtered, early))
             names += STAGES[3:]
         talkers[b] = outputs[-1]
         changed = np.zeros((len(STAGES), k))

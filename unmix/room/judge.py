@@ -18,6 +18,7 @@ Both limits were chosen on rendered scenes; the tables print hits and false alar
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import cast
 
@@ -68,12 +69,17 @@ class Verdict:
 
 
 def judge(
-    x: Complexes, look: Complexes, learned: Complexes, rows: Complexes, frequencies_hz: Floats, bands: Bands
+    x: Complexes,
+    course: Sequence[Complexes],
+    learned: Complexes,
+    rows: Complexes,
+    frequencies_hz: Floats,
+    bands: Bands,
 ) -> Verdict:
     """Judge one segment.
 
     x        (frequencies, M, frames), the recording as it came
-    look     (frequencies, M, K) relative responses of the bearings
+    course   (frequencies, M, K) relative responses of the bearings, over equal parts of the segment
     learned  (frequencies, M, K) relative responses that the refined matrix implies
     rows     (frequencies, K, M) the refined separating matrix, at the reference channel
     """
@@ -81,11 +87,13 @@ def judge(
 
     def measure(b: slice) -> tuple[Reals, Reals, Reals]:
         total = power(x[b]).sum(axis=1)
-        return total - _inside(x[b], look[b]), total - _inside(x[b], learned[b]), power(rows[b] @ x[b])
+        parts = np.array_split(np.arange(x.shape[2]), len(course))
+        by_look = np.concatenate([_inside(x[b][:, :, t], a[b]) for t, a in zip(parts, course, strict=True)], axis=1)
+        return total - by_look, total - _inside(x[b], learned[b]), power(rows[b] @ x[b])
 
     parts = bands.each(measure)
     by_look, by_learned, talkers = (np.concatenate([p[i] for p in parts])[chosen] for i in range(3))
-    if len(by_look) == 0 or x.shape[1] <= look.shape[2]:
+    if len(by_look) == 0 or x.shape[1] <= learned.shape[2]:
         return Verdict(np.inf, 0.0)
     tiny = float(np.finfo(np.float32).tiny)
     gain = 10.0 * np.log10((float(by_look.sum()) + tiny) / (float(by_learned.sum()) + tiny))

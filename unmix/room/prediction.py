@@ -15,7 +15,11 @@ alternating with lambda [1]_ [2]_. The recursive form is the same with exponenti
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from typing import Any
+
 import numpy as np
+from numpy.typing import NDArray
 
 from unmix.room.linalg import adjoint, lagged, loaded, power, safe_solve, weighted_conjugate
 from unmix.room.stft import Complexes, Reals
@@ -24,6 +28,7 @@ from unmix.settings import PredictionSettings
 __all__ = ["RecursivePrediction", "predict", "usable_taps"]
 
 _LOADING = 1e-6
+_STATE = ("inverse", "filter", "past", "level")
 
 
 def usable_taps(taps: int, channels: int, frames: int) -> int:
@@ -74,7 +79,10 @@ class RecursivePrediction:
         self._level = np.full(frequencies, 1e-10, np.float32)
 
     def step(self, x: Complexes) -> Complexes:
-        """Take one frame (frequencies, channels); return it without its predicted part."""
+        """Take one frame (frequencies, channels); return it without its predicted part.
+
+        Where the prediction would add power, which it does while it has little to go by, the frame is left as it is.
+        """
         f = len(x)
         s = self._past[:, self._delay - 1 : self._delay - 1 + self._taps].reshape(f, -1, 1)
         z = x - (adjoint(self._filter) @ s)[:, :, 0]
@@ -84,10 +92,24 @@ class RecursivePrediction:
         gain = ps / (self._forgetting * lam[:, None, None] + (adjoint(s) @ ps).real)
         inverse = (self._inverse - gain @ adjoint(ps)) / self._forgetting
         inverse = 0.5 * (inverse + adjoint(inverse))
-        self._inverse = self._bounded(inverse)
-        self._filter = self._filter + gain @ np.conjugate(z[:, None, :])
+        # Contiguous, so that a state put back computes in the same order.
+        self._inverse = np.ascontiguousarray(self._bounded(inverse))
+        self._filter = np.ascontiguousarray(self._filter + gain @ np.conjugate(z[:, None, :]))
         self._past = np.concatenate([x[:, None].astype(np.complex64), self._past[:, :-1]], axis=1)
-        return z
+        adds = power(z).sum(axis=1) > power(x).sum(axis=1)
+        return np.where(adds[:, None], x, z)
+
+    def state(self) -> dict[str, NDArray[Any]]:
+        """Everything that depends on the frames so far."""
+        return {name: getattr(self, f"_{name}").copy() for name in _STATE}
+
+    def restore(self, state: Mapping[str, NDArray[Any]]) -> None:
+        """Go on from a state; raises KeyError or ValueError when it is not one of this form's."""
+        for name in _STATE:
+            if state[name].shape != getattr(self, f"_{name}").shape:
+                raise ValueError(f"{name}: shape {state[name].shape} is not {getattr(self, f'_{name}').shape}")
+        for name in _STATE:
+            setattr(self, f"_{name}", state[name].copy())
 
     def _bounded(self, inverse: Complexes) -> Complexes:
         """Forgetting without excitation lets the inverse grow without end: hold its largest diagonal."""

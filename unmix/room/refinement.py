@@ -28,7 +28,7 @@ from unmix.room.linalg import adjoint, loaded, power, safe_solve
 from unmix.room.stft import Complexes, Reals
 from unmix.settings import RefinementSettings
 
-__all__ = ["Refined", "independent_start", "look_penalty", "refine", "scaled", "update_rows"]
+__all__ = ["Refined", "independent_start", "look_penalty", "refine", "scaled", "scaled_rows", "update_rows"]
 
 _LOADING = 1e-6
 _FLOOR = 1e-6
@@ -135,6 +135,18 @@ def scaled(matrix: Complexes, talkers: int, reference: int) -> tuple[Complexes, 
     rows = at_reference[:, :, None] * matrix[:, :talkers]
     safe = np.where(np.abs(at_reference) > 1e-12, at_reference, 1.0)
     return rows, inverse[:, :, :talkers] / safe[:, None, :]
+
+
+def scaled_rows(w: Complexes, covariance: Complexes, reference: int) -> Complexes:
+    """Rows (frequencies, K, M) projected back to the reference channel by least squares.
+
+    Row k's output is scaled by E[x_ref y_k^*] of what remains of it beside the other talkers: the reference channel's
+    regression on all outputs, C W^H (W C W^H)^-1, which equals what the whole matrix's inverse gives.
+    """
+    cw = covariance @ adjoint(w)
+    gram = loaded(w @ cw, _LOADING)
+    at_reference = adjoint(safe_solve(gram, adjoint(cw[:, reference : reference + 1])))
+    return np.asarray(np.swapaxes(at_reference, 1, 2) * w)
 
 
 def update_rows(w: Complexes, v: Complexes, covariance: Complexes, held: Complexes) -> int:

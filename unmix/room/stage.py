@@ -40,10 +40,12 @@ class Look:
 
     rows       (frequencies, K, M): separating matrix of the constrained solution
     responses  (frequencies, M, K): relative responses of the bearings, one at the reference channel
+    course     the same over equal parts of the stretch, where something moves; else empty
     """
 
     rows: Complexes
     responses: Complexes
+    course: tuple[Complexes, ...] = ()
 
 
 Turned = Callable[[float, float], float]
@@ -251,7 +253,7 @@ class RoomStage:
         frequencies_hz = self._transform.frequencies_hz
         look = self._look(frequencies_hz, start_s, stop_s)
         # Rows learned where talkers stood a segment ago mislead once they have moved on.
-        start = Start(look.rows, look.responses.astype(x.dtype), None if self._turned else self._warm)
+        start = Start(look.rows, look.responses.astype(x.dtype), None if self._turned else self._warm, look.course)
         with self._bands.running() as bands:
             result = run_chain(x, start, self._settings, self._reference, bands, frequencies_hz)
         self._warm, self._responses = result.rows, result.responses

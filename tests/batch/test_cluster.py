@@ -17,7 +17,7 @@ from tests.batch.conftest import PLAN, rows_of, write_plan
 from tests.batch.test_run import OWN, SLOW
 from unmix.batch import cluster
 from unmix.batch.run import BatchResult, Progress, run_batch
-from unmix.errors import InputError
+from unmix.errors import FileError, InputError, UnmixWarning
 
 # What the library says of ports in use and of workers that are gone is no matter here.
 pytestmark = pytest.mark.filterwarnings("ignore")
@@ -71,6 +71,22 @@ def test_failures_come_back_and_other_versions_are_refused(
     monkeypatch.setattr(cluster, "numerics_version", lambda: str(os.getpid()))  # another one in each process
     with pytest.raises(InputError, match="has another version of unmix; install the same there"):
         run_batch(plan, tmp_path / "again", cluster=scheduler.scheduler_address)
+
+
+def test_a_scheduler_that_goes_away_and_has_no_workers(tmp_path: Path) -> None:
+    from distributed import LocalCluster
+
+    plan = write_plan(tmp_path)
+    with LocalCluster(n_workers=0, processes=False, dashboard_address=None) as started:
+        threading.Timer(3.0, started.close).start()
+        with (
+            pytest.warns(UnmixWarning, match="no worker is connected yet; waiting"),
+            pytest.raises(
+                FileError, match=r"the scheduler is gone .*; what was finished is kept: start it and run again"
+            ),
+        ):
+            run_batch(plan, tmp_path / "out", cluster=started.scheduler_address)
+    assert run_batch(plan, tmp_path / "out", workers=1).ran == 6
 
 
 def test_a_scheduler_that_does_not_answer(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -8,10 +8,13 @@ scheduler, which gives them to others.
 from __future__ import annotations
 
 import contextlib
+import logging
 import tempfile
 import time
+import warnings
 from collections import OrderedDict
 from collections.abc import Iterator, Sequence
+from concurrent.futures import CancelledError
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -22,7 +25,7 @@ from unmix.batch.items import Items
 from unmix.batch.scenes import SceneSource
 from unmix.batch.store import Part, Store, encode_part, render_source
 from unmix.batch.work import Task, failed, run_task
-from unmix.errors import FileError, InputError, MissingExtraError
+from unmix.errors import FileError, InputError, MissingExtraError, UnmixWarning
 
 __all__ = ["ClusterEngine"]
 
@@ -54,11 +57,13 @@ class ClusterEngine:
         self._names: dict[str, str] = {}
         self._seen: dict[str, tuple[str, float]] = {}
         self._looked = 0.0
+        self._began = time.monotonic()
 
     def run(self, pending: Sequence[int]) -> Iterator[list[Outcome]]:
         """Do the pending items; yields what has ended, now and then an empty list.
 
-        Raises FileError when parts cannot be written here, or the scheduler is gone.
+        Raises FileError when parts cannot be written here, or the scheduler is gone. Without a worker it waits for
+        one, with a warning.
         """
         flight = _Flight()
         for index in pending:
@@ -72,12 +77,25 @@ class ClusterEngine:
                 if not flight.items:
                     return
                 yield [self._keep(flight, future) for future in self._ended(flight)]
+        except FileError:
+            raise
+        except (OSError, CancelledError) as error:
+            line = (str(error).splitlines() or [type(error).__name__])[0]
+            raise FileError(
+                f"{self._address}: the scheduler is gone ({line}); what was finished is kept: start it and run again"
+            ) from None
         finally:
             self._close(flight)
 
     def _prepare(self) -> None:
         """Have the scheduler bear with dying workers, and see that the workers compute what is computed here."""
         self._client.run_on_scheduler(_bear_failures, ALLOWED_FAILURES)
+        if not self._client.nthreads():
+            warnings.warn(
+                f"{self._address}: no worker is connected yet; waiting. Start some with `dask worker {self._address}`",
+                UnmixWarning,
+                stacklevel=2,
+            )
         other = [
             worker for worker, version in self._client.run(numerics_version).items() if version != numerics_version()
         ]
@@ -107,10 +125,6 @@ class ClusterEngine:
         with contextlib.suppress(TimeoutError), self._client.as_current():
             ended: Any = wait(list(flight.items), timeout=TICK_S, return_when=FIRST_COMPLETED)  # type: ignore[no-untyped-call]
             return list(ended.done)
-        if self._client.status not in ("running", "connecting"):
-            raise FileError(
-                f"{self._address}: the scheduler is gone; what was finished is kept, start it and run again to go on"
-            )
         return []
 
     def _keep(self, flight: _Flight, future: Any) -> Outcome:
@@ -137,6 +151,8 @@ class ClusterEngine:
             with contextlib.suppress(OSError, TimeoutError):
                 at = {key: worker for worker, keys in self._client.processing().items() for key in keys}
                 self._seen = {k: (worker, self._seen.get(k, ("", now))[1]) for k, worker in at.items()}
+        if not self._client.nthreads():
+            return [Running("no worker is connected", self._address, now - self._began)]
         found = [
             Running(self._names[key], f"worker {worker}", now - since)
             for key, (worker, since) in self._seen.items()
@@ -151,6 +167,8 @@ class ClusterEngine:
 
 
 def _connect(address: str) -> Any:
+    # What goes wrong is said here, in one line; the library would say it in fifty.
+    logging.getLogger("distributed").setLevel(logging.CRITICAL)
     try:
         from distributed import Client
     except ImportError:

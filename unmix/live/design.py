@@ -16,11 +16,12 @@ from unmix.live.refit import refit
 from unmix.model.delays import Paths, paths_from_bearings
 from unmix.model.noise import Spectra
 from unmix.scene import Scene, Talker
+from unmix.settings import RoomSettings
 from unmix.solvers.assemble import assemble
 from unmix.solvers.stationary import FilterBank
 from unmix.variant import Variant
 
-__all__ = ["Designer", "check_is_filters", "check_runs_live", "noise_spectra"]
+__all__ = ["Designer", "check_is_filters", "check_runs_live", "is_causal", "is_recursive", "noise_spectra"]
 
 Floats = NDArray[np.float64]
 
@@ -95,11 +96,22 @@ class Designer:
 _USE = "use a variant that is filters alone, such as model or linear-constraint"
 
 
+def is_recursive(room: RoomSettings) -> bool:
+    """Whether a room stage predicts late reverberation frame by frame and does nothing that needs more."""
+    recursive = room.prediction is not None and room.prediction.recursive
+    return room.low_latency is None and recursive and room.refinement is None and room.post is None
+
+
+def is_causal(room: RoomSettings) -> bool:
+    """Whether a room stage runs chunk by chunk."""
+    return room.low_latency is not None or is_recursive(room)
+
+
 def check_is_filters(variant: Variant, *, spectra: Spectra | None) -> None:
     """Raise UnsolvableError, with the reason and the remedy, for a variant that is more than filters."""
     cannot = _cannot(variant, "be exported as filters")
-    if variant.room is not None and variant.room.low_latency is not None:
-        raise UnsolvableError(f"{cannot}: its filters are learned while it runs; {_USE}")
+    if variant.room is not None and is_causal(variant.room):
+        raise UnsolvableError(f"{cannot}: what it does is learned while it runs; {_USE}")
     _check(variant, cannot, spectra)
 
 
@@ -114,7 +126,7 @@ def _cannot(variant: Variant, what: str) -> str:
 
 def _check(variant: Variant, cannot: str, spectra: Spectra | None) -> None:
     room = variant.room
-    if room is not None and room.low_latency is None:
+    if room is not None and not is_causal(room):
         raise UnsolvableError(
             f"{cannot}: its room stage refines each segment of {room.segments.length_s:g} s from all of it, so that a "
             f"sample would wait that long; {_USE}, or low-latency"

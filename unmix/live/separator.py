@@ -49,8 +49,9 @@ class LiveSeparator:
     talkers : sequence of Talker
         Who sits where, `unmix.Talker.at("mate", 20.0)`; at rest until `set_bearings` or `source` says otherwise.
     variant : str, path or Variant
-        One that is filters alone, `model` (or the same with constraint `propagated`) or a baseline; or one that
-        learns its filters while it runs, such as `low-latency`, whose block comes on top of its look-ahead.
+        One that is filters alone, `model` (or the same with constraint `propagated`) or a baseline; or one
+        whose room stage runs frame by frame: `low-latency`, whose block comes on top of its look-ahead, or `dereverb`
+        with recursive prediction.
     sample_rate : int
         In hertz, of everything pushed.
     noise : (channels, samples) array, optional
@@ -234,15 +235,15 @@ class LiveSeparator:
 
     def _make_stage(self) -> LiveStage:
         room = self.variant.room
-        if room is not None and room.low_latency is not None:
-            from unmix.live.adaptive import AdaptiveStage
+        if room is None:
+            return BankStage(self._design, self.talkers, fade=self._fade, lookahead=self._lookahead)
+        from unmix.live.adaptive import CausalRoomStage
 
-            own = room.low_latency
-            if self._lookahead is not None:
-                bound = min(own.look_ahead_s, self._lookahead / self.sample_rate)
-                own = msgspec.structs.replace(own, look_ahead_s=bound)
-            return AdaptiveStage(self._design, msgspec.structs.replace(room, low_latency=own), self.talkers)
-        return BankStage(self._design, self.talkers, fade=self._fade, lookahead=self._lookahead)
+        own = room.low_latency
+        if own is not None and self._lookahead is not None:
+            bound = min(own.look_ahead_s, self._lookahead / self.sample_rate)
+            room = msgspec.structs.replace(room, low_latency=msgspec.structs.replace(own, look_ahead_s=bound))
+        return CausalRoomStage(self._design, room, self.talkers)
 
     def _advance(self, samples: Floats) -> Floats:
         out = self._stage.push(samples)

@@ -1,0 +1,109 @@
+"""The causal forms of the room stage as live stages: told of talkers, they take of each what the model knows.
+
+Both forms start from and are held to the bearings: filters that are learned on the way (`low-latency`), and late
+reverberation predicted recursively (`dereverb` with `room.prediction.recursive`).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from functools import partial
+
+import numpy as np
+from numpy.typing import NDArray
+
+from unmix.live.design import Designer, is_recursive
+from unmix.live.stage import State
+from unmix.room.frames import RecursiveDereverberation
+from unmix.room.low_latency import AdaptiveFilters, Bearings
+from unmix.scene import Talker
+from unmix.settings import RoomSettings
+from unmix.solvers.baselines import steering
+from unmix.solvers.pose import check_solvable, pose
+from unmix.solvers.stationary import solution_response
+
+__all__ = ["CausalRoomStage"]
+
+Floats = NDArray[np.float64]
+
+FOLLOWED = np.radians(15.0)
+"""Talkers who turn by less have moved on, and what was learned of them stays; others are somewhere else."""
+
+
+class CausalRoomStage:
+    """A room stage of fixed latency for talkers."""
+
+    def __init__(self, design: Designer, settings: RoomSettings, talkers: Sequence[Talker]) -> None:
+        self._design, self._seats = design, tuple(talkers)
+        known = partial(self._known, talkers)
+        rate, array = design.sample_rate, design.array
+        self._stage: AdaptiveFilters | RecursiveDereverberation
+        if is_recursive(settings):
+            self._stage = RecursiveDereverberation(settings, known, sample_rate=rate, channels=array.channels)
+        else:
+            self._stage = AdaptiveFilters(settings, known, sample_rate=rate, reference=array.reference_channel)
+
+    @property
+    def latency(self) -> int:
+        """Samples by which what comes out is late."""
+        return self._stage.latency
+
+    @property
+    def talkers(self) -> int:
+        """Number of talkers."""
+        return self._stage.talkers
+
+    def push(self, chunk: Floats) -> Floats:
+        """Take (channels, n) samples; return (talkers, n)."""
+        return self._stage.push(chunk)
+
+    def flush(self) -> Floats:
+        """The last `latency` samples; what was learned is forgotten."""
+        return self._stage.flush()
+
+    def steer(self, talkers: Sequence[Talker]) -> None:
+        """Go along with talkers who moved a little; start anew from bearings that are others."""
+        known = self._known(talkers, self._stage.frequencies_hz)
+        if max(map(_turn, self._seats, talkers)) < FOLLOWED:
+            self._stage.follow(known)
+        else:
+            self._stage.steer(known)
+        self._seats = tuple(talkers)
+
+    def state(self) -> State:
+        """What was heard and learned, and where the talkers are."""
+        seats = [[t.azimuth or 0.0, t.elevation, np.nan if t.distance_m is None else t.distance_m] for t in self._seats]
+        return {**{f"stage.{name}": value for name, value in self._stage.state().items()}, "seats": np.array(seats)}
+
+    def restore(self, state: State) -> None:
+        """Go on from a state."""
+        seats = tuple(
+            Talker(t.name, float(azimuth), float(elevation), float(distance) if np.isfinite(distance) else None)
+            for t, (azimuth, elevation, distance) in zip(self._seats, state["seats"], strict=True)
+        )
+        inner = {name.removeprefix("stage."): v for name, v in state.items() if name.startswith("stage.")}
+        self._stage.restore(inner)
+        if seats != self._seats:
+            self._stage.follow(self._known(seats, self._stage.frequencies_hz))
+        self._seats = seats
+
+    def _known(self, talkers: Sequence[Talker], frequencies_hz: Floats) -> Bearings:
+        """What the model knows of talkers. Raises UnsolvableError where their bearings coincide."""
+        design = self._design
+        paths = design.paths(talkers)
+        check_solvable(paths)
+        posed = pose(
+            design.variant,
+            paths,
+            design.array,
+            sample_rate=design.sample_rate,
+            temperature_c=design.temperature_c,
+            spectra=design.spectra,
+        )
+        omega = np.asarray(2.0 * np.pi * frequencies_hz / design.sample_rate, np.float64)
+        return Bearings(solution_response(posed.problem, omega), steering(paths, omega, design.sample_rate))
+
+
+def _turn(old: Talker, new: Talker) -> float:
+    around = abs(float(np.angle(np.exp(1j * ((new.azimuth or 0.0) - (old.azimuth or 0.0))))))
+    return max(around, abs(new.elevation - old.elevation))

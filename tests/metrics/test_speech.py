@@ -181,3 +181,21 @@ def test_disagreement_is_said() -> None:
         "mate: measures disagree: STOI and ESTOI got better, bits worse; listen to decide"
     ]
     assert lines(-0.1, 0.1, 30.0)[0].startswith("mate: measures disagree: ESTOI and bits got better, STOI worse")
+
+
+def test_of_a_long_recording_the_loudest_stretch_is_looked_at(
+    talkers: Floats, rng: np.random.Generator, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Six seconds of which three are asked for: the louder half, and its figures."""
+    loud = talkers * np.where(np.arange(talkers.shape[1]) < 3 * RATE, 0.05, 1.0)
+    estimates = loud + 0.1 * loud[::-1]
+    monkeypatch.setattr("unmix.metrics.speech.LONGEST_S", 3.0)
+    part = Grader(loud, sample_rate=RATE, names=["a", "b"]).grade(estimates, speech=True).talkers[0].speech
+    monkeypatch.undo()
+    half = Grader(loud[:, 3 * RATE :], sample_rate=RATE, names=["a", "b"])
+    alone = half.grade(estimates[:, 3 * RATE :], speech=True).talkers[0].speech
+    assert part is not None and alone is not None
+    assert 2.0 < part.speech_s <= 3.0
+    # The loudest three seconds begin within a frame or so of the middle.
+    assert part.after.bits_per_s == pytest.approx(alone.after.bits_per_s, rel=0.05)
+    assert part.after.equivalent_snr_db == pytest.approx(alone.after.equivalent_snr_db, abs=0.5)

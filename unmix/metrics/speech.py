@@ -17,6 +17,7 @@ from unmix.metrics.bench import Bench
 from unmix.metrics.equivalent import EquivalentRatio
 from unmix.metrics.grades import Figures
 from unmix.metrics.information import InformationReference
+from unmix.metrics.intelligibility import SpeechReference
 from unmix.metrics.segments import SegmentGains, segment_gains
 from unmix.metrics.speech_figures import SPEECH_FIGURES, SpeechFigures, SpeechGrade
 from unmix.metrics.words import words_dantale_percent, words_ieee_percent
@@ -26,6 +27,10 @@ __all__ = ["SpeechBench", "disagreements"]
 Floats = NDArray[np.float64]
 
 
+LONGEST_S = 300.0
+"""Of a longer recording, equivalent ratio and bits are of the stretch of this length in which the talker is loudest."""
+
+
 class SpeechBench:
     """Figures of understanding on one bench; what depends on its references is computed once."""
 
@@ -33,13 +38,28 @@ class SpeechBench:
         self._bench = bench
 
     @cached_property
+    def _stretches(self) -> list[slice]:
+        """What is looked at for each talker: all of it, or the loudest stretch of a long recording."""
+        return [_loudest(s, round(LONGEST_S * self._bench.sample_rate)) for s in self._bench.references]
+
+    @cached_property
     def _information(self) -> list[InformationReference]:
-        return [InformationReference(s, self._bench.sample_rate) for s in self._bench.references]
+        rate = self._bench.sample_rate
+        return [InformationReference(s[p], rate) for s, p in zip(self._bench.references, self._stretches, strict=True)]
+
+    @cached_property
+    def _speech(self) -> list[SpeechReference]:
+        whole, rate = self._bench.speech, self._bench.sample_rate
+        return [
+            speech if p.stop - p.start == s.size else SpeechReference(s[p], rate)
+            for s, p, speech in zip(self._bench.references, self._stretches, whole, strict=True)
+        ]
 
     @cached_property
     def _equivalent(self) -> list[EquivalentRatio]:
-        speech = self._bench.speech
-        return [EquivalentRatio(self._bench.references, k, speech[k]) for k in range(len(speech))]
+        return [
+            EquivalentRatio(self._bench.references[:, p], k, self._speech[k]) for k, p in enumerate(self._stretches)
+        ]
 
     def speech_s(self, talker: int) -> float:
         """Seconds of speech that the measure in bits rests on; 0 when it is undefined."""
@@ -54,8 +74,11 @@ class SpeechBench:
             words = words_ieee_percent(known.stoi), words_dantale_percent(known.stoi)
         else:
             undefined |= dict.fromkeys(SPEECH_FIGURES[:2], known.undefined.get("stoi", "STOI is undefined"))
-        ratio, why_no_ratio = self._equivalent[talker].ratio_db(known.stoi)
-        bits, why_no_bits = self._information[talker].bits_per_s(signal)
+        part = self._stretches[talker]
+        whole = part.stop - part.start == signal.size
+        stoi = known.stoi if whole else self._speech[talker].compare(signal[part]).stoi
+        ratio, why_no_ratio = self._equivalent[talker].ratio_db(stoi)
+        bits, why_no_bits = self._information[talker].bits_per_s(signal[part])
         sir, why_no_sir = self._weighted(signal, known, talker)
         for name, why in zip(SPEECH_FIGURES[2:], (why_no_ratio, why_no_sir, why_no_bits), strict=True):
             if why is not None:
@@ -79,6 +102,15 @@ class SpeechBench:
     def segments(self, after: Floats, before: Floats, talker: int) -> SegmentGains:
         """Gains over segments of 3 s."""
         return segment_gains(self._bench.references[talker], after, before, self._bench.sample_rate)
+
+
+def _loudest(reference: Floats, length: int) -> slice:
+    """The stretch of `length` samples with the most energy, or all of a shorter signal."""
+    if reference.size <= length:
+        return slice(0, reference.size)
+    energy = np.concatenate([[0.0], np.cumsum(np.square(np.nan_to_num(reference)))])
+    start = int(np.argmax(energy[length:] - energy[:-length]))
+    return slice(start, start + length)
 
 
 NOTICEABLE = {"STOI": 0.02, "ESTOI": 0.02, "bits": 0.05}

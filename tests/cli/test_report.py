@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from tests.batch.conftest import PLAN, write_plan
 from tests.cli.conftest import Run
 from tests.conftest import speech
 from unmix.audio import write_audio
@@ -150,3 +151,33 @@ def test_close_microphones_stand_with_what_they_claim(run: Run, real: Path) -> N
     text = (real / "close" / "report.html").read_text(encoding="utf-8")
     assert "Bleed of the close microphones</h2>" in text and "whose bleed was estimated" in text
     assert "can be understood" in text
+
+
+def test_a_picture_of_before_and_after(run: Run, scene: Path, solved: Path) -> None:
+    common = ("grade", scene, "--estimates", solved, "--no-report")
+    assert run(*common, "--plot", scene.parent / "p.svg").status == 0
+    picture = (scene.parent / "p.svg").read_text(encoding="utf-8")
+    assert "Chief Pilot" in picture and "intelligibility (STOI)" in picture
+    assert run(*common, "--plot", scene.parent / "p.svg").status == 1
+    ran = run(*common, "--plot", scene.parent / "p.doc")
+    assert ran.status == 1 and "pictures are written as" in ran.err
+
+
+def test_a_batch_renews_its_report_when_it_has_more_to_say(run: Run, tmp_path: Path) -> None:
+    plan = write_plan(tmp_path, PLAN)
+    out = tmp_path / "out"
+    assert run("batch", plan, "--out", out, "--workers", "1", "--no-report").status == 0
+    assert not (out / "report.html").exists()
+    assert "report.html" in run("batch", plan, "--out", out, "--workers", "1").out
+    first = (out / "report.html").stat().st_mtime_ns
+    assert run("batch", plan, "--out", out, "--workers", "1").status == 0
+    assert (out / "report.html").stat().st_mtime_ns == first
+    assert run("report", out, "--no-audio", "--overwrite").status == 0
+    plan.write_text(PLAN.replace('"sir_db", "stoi"', '"stoi", "sir_db"'))
+    assert run("batch", plan, "--out", out, "--workers", "1").status == 0
+    text = (out / "report.html").read_text(encoding="utf-8")
+    assert "STOI gain: mean over scenes" in text and 'id="audio-best' not in text
+    (out / "report.html").write_text("mine")
+    ran = run("batch", plan, "--out", out, "--workers", "1")
+    assert ran.status == 0 and "no report was written" in ran.err
+    assert (out / "report.html").read_text() == "mine"

@@ -83,8 +83,7 @@ def _run(plan: Path, out: Path, as_json: bool, *, yes: bool, no_report: bool, **
     with progress_bar("starting") as report:
         result = run_batch(plan, out, yes=yes, progress=lambda progress: _show(progress, report), **options)
         report(1.0, "writing the report")
-        current = not result.ran and (out / REPORT).exists()
-        reported = None if no_report or current else write_batch_report(out)
+        reported = None if no_report else write_batch_report(out)
     if as_json:
         print_json(result.to_dict())
     else:

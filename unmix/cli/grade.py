@@ -50,6 +50,7 @@ __all__ = ["command", "print_grades"]
 @click.option("--keep-all", is_flag=True, help="Keep listeners who did not recognise the hidden reference.")
 @click.option("--cross-check", is_flag=True, help="Recompute with mir_eval and print the largest difference.")
 @click.option("--out", type=existing_file, metavar="DIR", help="Folder for grades.json and the report.")
+@click.option("--plot", type=existing_file, metavar="FILE", help="Picture of before and after (svg, png or pdf).")
 @no_report_option
 @overwrite_option
 @json_option
@@ -70,6 +71,7 @@ def command(
     keep_all: bool,
     cross_check: bool,
     out: Path | None,
+    plot: Path | None,
     no_report: bool,
     overwrite: bool,
     as_json: bool,
@@ -88,12 +90,14 @@ def command(
     if key is not None or keep_all:
         raise click.UsageError("--key and --keep-all belong to --listeners")
     _check_usage(scene, estimates, references, given)
+    if plot is not None and alone:
+        raise click.UsageError("--plot draws figures before and after; with --alone there are none")
     if alone or close:
         if scene is None or estimates is None or (alone and close):
             raise click.UsageError("give SCENE and --estimates DIR with --alone or --close, one of them")
         kind = against if close else None
         shown = {"overwrite": overwrite, "as_json": as_json, "report": not no_report}
-        _grade_real(scene, estimates, kind, out, close=close, **shown)
+        _grade_real(scene, estimates, kind, out, plot, close=close, **shown)
         return
     from unmix.files import refuse_to_replace
     from unmix.jobs.grade import grade_files, grade_scene, grades_tree
@@ -109,6 +113,8 @@ def command(
     if out is not None and not no_report:
         refuse_to_replace(out / "grades.json", overwrite=overwrite)
         refuse_report(out, overwrite=overwrite, renew=True)
+    if plot is not None:
+        _check_plot(plot, overwrite)
     loaded = None if scene is None else Scene.load(scene)
     with progress_bar("grading"):
         if loaded is not None and estimates is not None:
@@ -117,6 +123,8 @@ def command(
             grades = grade_files(
                 given, references, unprocessed=unprocessed, unprocessed_channel=unprocessed_channel, **options
             )
+    if plot is not None:
+        _draw(grades, plot, overwrite)
     reported = None
     if out is not None and not no_report:
 
@@ -140,6 +148,7 @@ def _grade_real(
     estimates: Path,
     against: str | None,
     out: Path | None,
+    plot: Path | None,
     *,
     close: bool,
     overwrite: bool,
@@ -156,9 +165,13 @@ def _grade_real(
         refuse_to_replace(out / "grades.json", overwrite=overwrite)
         if report:
             refuse_report(out, overwrite=overwrite, renew=True)
+    if plot is not None:
+        _check_plot(plot, overwrite)
     loaded = Scene.load(scene)
     with progress_bar("grading"):
         graded = grade_close(loaded, estimates, against=against) if close else grade_alone(loaded, estimates)
+    if plot is not None and not isinstance(graded, AloneGrades):
+        _draw(graded.grades, plot, overwrite)
     tree, reported = graded.to_dict(), None
     if out is not None:
         tree |= {"scene": path_from(out, scene), "estimates": path_from(out, estimates)}
@@ -181,6 +194,22 @@ def _grade_real(
         say(claim)
     if out is not None:
         say(f"Written to {out}: grades.json{f' and {REPORT}' if reported else ''}")
+
+
+def _check_plot(plot: Path, overwrite: bool) -> None:
+    """Say what is wrong with a picture's place before the work."""
+    from unmix.files import refuse_to_replace
+    from unmix.report.figures import check_format
+
+    check_format(plot)
+    refuse_to_replace(plot, overwrite=overwrite)
+
+
+def _draw(grades: Grades, plot: Path, overwrite: bool) -> None:
+    from unmix.report.figures import save_figure
+    from unmix.report.scene_figures import verdict_figure
+
+    save_figure(verdict_figure(grades), plot, overwrite=overwrite)
 
 
 def _graded_scene(

@@ -60,6 +60,7 @@ def write_batch_report(folder: Path) -> Path | None:
     When that fails the batch stands all the same, and a warning says what happened.
     """
     from unmix.report.batch_material import material_of_batch
+    from unmix.report.batch_page import kind_of_batch
     from unmix.report.batch_page import write_batch_report as write
     from unmix.report.page import kind_of_page
 
@@ -69,7 +70,10 @@ def write_batch_report(folder: Path) -> Path | None:
         if path.exists() and not kind.startswith("batch"):
             raise FileError(f"{path} is not a batch's; move it, or name another file: unmix report {folder} --out FILE")
         options = {"audio": "without sound" not in kind, "hide_names": "without names" in kind}
-        return write(material_of_batch(folder), path, overwrite=True, **options).path
+        material = material_of_batch(folder)
+        if kind == kind_of_batch(material, **options):
+            return path
+        return write(material, path, overwrite=True, **options).path
     except UnmixError as error:
         warnings.warn(f"no report was written: {error}", UnmixWarning, stacklevel=2)
         return None

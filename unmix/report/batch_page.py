@@ -5,6 +5,7 @@ rows and rankings -> who won -> pictures -> best, median and worst scene, separa
 
 from __future__ import annotations
 
+import hashlib
 import json
 import tempfile
 import warnings
@@ -30,7 +31,7 @@ from unmix.report.words import figure_text, understandable
 from unmix.scene import Scene
 from unmix.variant import Variant
 
-__all__ = ["BATCH_SOUND_MB", "batch_report", "telling_scenes", "write_batch_report"]
+__all__ = ["BATCH_SOUND_MB", "batch_report", "kind_of_batch", "telling_scenes", "write_batch_report"]
 
 BATCH_SOUND_MB = 10.0
 """Room for the sound of the three scenes, of the fifteen megabytes the page should stay below."""
@@ -65,6 +66,7 @@ def batch_report(
 ) -> str:
     """The report as HTML; parameters as of `write_batch_report`."""
     notes: list[str] = []
+    kind = kind_of_batch(material, audio=audio, hide_names=hide_names)
     details = _details(material, notes, sound_mb / 3.0, hide_names=hide_names)
     if hide_names:
         material = _without_names(material)
@@ -74,7 +76,7 @@ def batch_report(
     return render_page(
         "batch.html",
         ["player.js", "tables.js", "batch.js"],
-        kind=f"batch, {'with' if audio else 'without'} sound, {'without' if hide_names else 'with'} names",
+        kind=kind,
         title=material.title,
         subtitle=_subtitle(material),
         headline=_headline(material),
@@ -96,6 +98,13 @@ def batch_report(
         by_scene={d["scene"]: d["key"] for d in shown},
         **_drawings(material),
     )
+
+
+def kind_of_batch(material: BatchMaterial, *, audio: bool, hide_names: bool) -> str:
+    """What the page calls itself: a batch that says the same again needs no new one."""
+    said = repr((material.title, material.rankings, material.total, material.missing, versions()))
+    digest = hashlib.blake2b(said.encode("utf-8", "replace"), digest_size=8).hexdigest()
+    return f"batch, {'with' if audio else 'without'} sound, {'without' if hide_names else 'with'} names, of {digest}"
 
 
 def _subtitle(material: BatchMaterial) -> str:

@@ -128,15 +128,8 @@ def embedded_svg(figure: Figure, name: str, title: str, description: str) -> str
     body = text[text.index("<svg") :]
     body = re.sub(r"<metadata>.*?</metadata>\s*", "", body, flags=re.DOTALL)
     used = set(re.findall(r"(?:url\(#|href=\"#)([^\")]+)", body)) & set(re.findall(r'\sid="([^"]*)"', body))
-
-    def named(match: re.Match[str]) -> str:
-        return f"{match.group(1)}{name}-{match.group(2)}" if match.group(2) in used else match.group(0)
-
-    body = re.sub(r'\s+id="([^"]*)"', lambda m: m.group(0) if m.group(1) in used else "", body)
-    body = re.sub(r"(\sid=\"|url\(#|href=\"#)([^\")]+)", named, body)
-    for colour, variable in _page_colours().items():
-        body = re.sub(re.escape(colour), f"var({variable}, {colour})", body, flags=re.IGNORECASE)
-    body = re.sub(r'font: (?:[\w.]+ )?([\d.]+)px [^;"]*', r"font-size: \1px", body)
+    # Only tags are touched: what stands between them is text, and a name may look like anything.
+    body = re.sub(r"<[^>]*>", lambda tag: _tag_for_a_page(tag.group(0), name, used), body)
     view = re.search(r'viewBox="([^"]+)"', body)
     label = (
         f'<svg class="figure" viewBox="{view.group(1) if view else ""}" role="img" '
@@ -145,6 +138,19 @@ def embedded_svg(figure: Figure, name: str, title: str, description: str) -> str
         f'<desc id="{name}-desc">{html.escape(description)}</desc>'
     )
     return re.sub(r"\n\s*", "\n", label + body[body.index(">") + 1 :])
+
+
+def _tag_for_a_page(tag: str, name: str, used: set[str]) -> str:
+    """A tag with its ids made unique by `name`, colours as the page's variables, and the page's typeface."""
+
+    def named(match: re.Match[str]) -> str:
+        return f"{match.group(1)}{name}-{match.group(2)}" if match.group(2) in used else match.group(0)
+
+    tag = re.sub(r'\s+id="([^"]*)"', lambda m: m.group(0) if m.group(1) in used else "", tag)
+    tag = re.sub(r"(\sid=\"|url\(#|href=\"#)([^\")]+)", named, tag)
+    for colour, variable in _page_colours().items():
+        tag = re.sub(re.escape(colour), f"var({variable}, {colour})", tag, flags=re.IGNORECASE)
+    return re.sub(r'font: (?:[\w.]+ )?([\d.]+)px [^;"]*', r"font-size: \1px", tag)
 
 
 def _page_colours() -> dict[str, str]:

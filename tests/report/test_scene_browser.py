@@ -167,3 +167,20 @@ def test_a_loop_jumps_back_exactly_and_without_a_click(open_page: Open, ramps: P
     assert list(np.round(np.diff(seams[seams > 100]) / RATE, 2)) == [0.5, 0.5]
     step = np.abs(np.diff(samples)).max()
     assert step < 0.05 * samples.max()
+
+
+def test_going_elsewhere_and_pausing_do_not_click(open_page: Open, ramps: Path) -> None:
+    page = open_page(ramps, bypass_csp=True)
+    page.evaluate(TAP)
+    page.evaluate("player.seek(3)")
+    page.evaluate("player.play()")
+    for seconds in (3.2, 3.4, 3.1):
+        page.wait_for_timeout(200)
+        page.evaluate(f"player.seek({seconds})")
+    page.wait_for_timeout(200)
+    page.evaluate("player.stop()")
+    page.wait_for_timeout(200)
+    samples = np.array(page.evaluate("window.heard"))
+    assert samples.max() > 0.1 and np.abs(samples[-500:]).max() == 0.0
+    # A fade of 6 ms at this rate changes by about a hundredth of the signal per sample; a click is all of it.
+    assert np.abs(np.diff(samples)).max() < 0.05 * samples.max()

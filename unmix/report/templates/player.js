@@ -38,9 +38,7 @@ class Player {
       this.context = new Context();  // this browser plays at its own rate only; decoding resamples
     }
     this.master = this.context.createGain();
-    this.seam = this.context.createGain();
     this.master.gain.value = this._volume();
-    this.seam.connect(this.master);
     this.master.connect(this.context.destination);
     this.buffers = new Map();
     await Promise.all(this.signals.map(async (signal) => {
@@ -70,8 +68,9 @@ class Player {
     this.from = this.offset;
     this.repeat = repeat ? [...this.loop] : null;
     this.seamDone = at;
-    this.seam.gain.cancelScheduledValues(0);
-    this.seam.gain.setValueAtTime(0, context.currentTime);
+    this.seam = context.createGain();  // one for each start, so that what is fading out goes on fading
+    this.seam.connect(this.master);
+    this.seam.gain.value = 0;
     this.seam.gain.setValueAtTime(0, at);
     this.seam.gain.linearRampToValueAtTime(1, at + Player.EDGE_S);
     this.voices = this.signals.map((signal) => {
@@ -136,6 +135,8 @@ class Player {
     this.seam.gain.setValueAtTime(this.seam.gain.value, now);
     this.seam.gain.linearRampToValueAtTime(0, now + Player.EDGE_S);
     this.voices.forEach(({ source }) => source.stop(now + 2 * Player.EDGE_S));
+    const faded = this.seam;
+    setTimeout(() => faded.disconnect(), 100);
     clearInterval(this.timer);
     this.playing = false;
     this.voices = null;

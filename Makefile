@@ -9,7 +9,7 @@ PIP := $(BIN)/python -m pip --disable-pip-version-check
 # One BLAS thread per process: small matrices are slower with more, and the tests run in two processes.
 THREADS := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 MKL_NUM_THREADS=1
 
-.PHONY: demo test lint tables clean
+.PHONY: demo test lint tables readme clean
 .DEFAULT_GOAL := demo
 
 demo: $(VENV)/.installed
@@ -25,6 +25,9 @@ lint: $(VENV)/.installed-dev
 
 tables: $(VENV)/.installed-dev
 	$(THREADS) $(BIN)/python benchmarks/tables.py $(ARGS)
+
+readme: $(VENV)/.installed-dev
+	$(THREADS) $(BIN)/python docs/readme.py
 
 clean:
 	rm -rf $(VENV) demo_out build dist *.egg-info .pytest_cache .mypy_cache .ruff_cache .hypothesis

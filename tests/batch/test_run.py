@@ -8,6 +8,7 @@ import subprocess
 import sys
 import time
 from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -16,9 +17,14 @@ from tests.batch.conftest import PLAN, SPEC, Inline, rows_of, write_plan
 from tests.conftest import SPEECH, delayed, speech
 from unmix.array import Array
 from unmix.audio import write_audio
+from unmix.batch.feed import task_of
+from unmix.batch.items import plan_items
+from unmix.batch.local import _answer
+from unmix.batch.plan import Plan
 from unmix.batch.results import MEASURED_COLUMNS, query
 from unmix.batch.run import BatchResult, Progress, run_batch
-from unmix.errors import InputError
+from unmix.batch.store import Part, Store
+from unmix.errors import FileError, InputError
 from unmix.model.delays import paths_from_bearings
 
 SLOW = """
@@ -219,6 +225,30 @@ def test_a_scene_that_cannot_be_rendered_fails_its_items(tmp_path: Path) -> None
     result = run_batch(plan, tmp_path / "out", workers=1)
     assert result.written.failures == 3
     assert all("outside the room" in why for why in result.written.failed.values())
+
+
+def test_a_full_disk_ends_the_batch_with_nothing_lost(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The answer of a worker whose scene cannot be written, and a part that cannot be: the same, in its words."""
+    plan = write_plan(tmp_path)
+    items = plan_items(Plan.load(plan), plan)
+    store = Store(tmp_path / "out")
+    store.open()
+
+    def full(*_: object, **__: object) -> None:
+        raise FileError("mix.wav: cannot be written (No space left on device); is the disk full?")
+
+    monkeypatch.setattr("unmix.batch.store.render_source", full)
+    kind, said = _answer(store, "render", items.scenes[0])
+    assert kind == "rendered" and isinstance(said, Part) and said.passing
+    monkeypatch.setattr("shutil.disk_usage", lambda path: SimpleNamespace(free=1e6))
+    kind, said = _answer(store, "render", items.scenes[0])
+    assert kind == "unwritable" and "the disk is full (1 MB left)" in said
+    assert not list((tmp_path / "out" / "scenes").iterdir())
+    monkeypatch.undo()
+    task = task_of(items, 0, str(store.render(items.scenes[0])))
+    monkeypatch.setattr(Store, "write", full)
+    kind, said = _answer(store, "item", task)
+    assert kind == "unwritable" and "is the disk full" in said
 
 
 TOUCHING = """

@@ -47,6 +47,7 @@ def test_done_in_part(run: Run, tmp_path: Path) -> None:
     ran = run("batch", plan, "--out", tmp_path / "out")
     assert ran.status == 3
     assert "Failed: spec/seed 3 x bad: " in ran.out
+    assert "One scene cannot tell variants apart" in ran.out
     tree = run("batch", plan, "--out", tmp_path / "out", "--json")
     assert tree.status == 3 and list(tree.json["failed"]) == ["spec/seed 3 x bad"]
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 import contextlib
 import multiprocessing
 import os
+import shutil
 import signal
 import time
 from collections.abc import Iterable, Iterator
@@ -28,6 +29,8 @@ __all__ = ["LocalEngine", "usable_cores"]
 
 MOST_DEATHS = 3
 """A job that outlives so many workers is given up; so is a worker that never gets ready."""
+FULL_BYTES = 32e6
+"""Where a scene cannot be written and less than this is free, the disk is full, and no other scene will fit."""
 TICK_S = 0.5
 PATIENCE_S = 5.0
 ONE_THREAD = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
@@ -217,6 +220,9 @@ def _answer(store: Store, kind: str, job: Any) -> tuple[str, Any]:
         try:
             return "rendered", str(store.render(job))
         except Exception as error:  # noqa: BLE001  a scene that cannot be rendered must not end the batch
+            free = shutil.disk_usage(store.folder).free
+            if isinstance(error, FileError) and free < FULL_BYTES:
+                return "unwritable", f"{store.folder}: the disk is full ({free / 1e6:.0f} MB left); make room"
             return "rendered", failed(error)
     part = run_task(job)
     try:

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["change_lines", "change_table", "clock", "ranking_lines", "ranking_table"]
 
+FEWEST_SCENES = 2
 MOST_ROWS = 40
 MOST_LINES = 6
 
@@ -93,6 +94,9 @@ def ranking_lines(analysis: Analysis) -> Iterator[str]:
         f"(Wilcoxon's signed ranks, corrected for {ranking.tests} pairs by Holm's method). Talkers of a scene are "
         "averaged."
     )
+    if analysis.scenes < FEWEST_SCENES:
+        yield "One scene cannot tell variants apart; the order is this scene's alone. Add scenes."
+        return
     best = known[0]
     for peer in best.peers[:MOST_LINES]:
         pair = ranking.pair(best.name, peer)

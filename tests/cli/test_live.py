@@ -23,7 +23,8 @@ from unmix.scene import Scene
 
 Live = Callable[..., tuple[Ran, bytes]]
 BEARINGS = ("--bearing", "20,0,1.2", "--bearing", "110,0,1.2")
-RAW = ("--format", "f32le", "--rate", RATE, "--channels", 5)
+MODEL = ("--variant", "model")
+RAW = ("--format", "f32le", "--rate", RATE, "--channels", 5, *MODEL)
 
 
 def recording() -> bytes:
@@ -74,9 +75,20 @@ def test_a_scene_through_the_pipe_is_the_file_jobs(live: Live, scene: Path) -> N
 
 def test_wav_in_wav_out_and_an_array_file(live: Live, scene: Path) -> None:
     sent = wav_header(PipeFormat("f32le", RATE, 5)) + recording()
-    ran, out = live(sent, scene.parent / "array.toml", *BEARINGS, "--aligned", "--output-format", "wav")
+    ran, out = live(sent, scene.parent / "array.toml", *MODEL, *BEARINGS, "--aligned", "--output-format", "wav")
     assert ran.status == 0
     assert np.abs(decoded(out[44:]) - whole(scene)).max() < 2e-7
+
+
+def test_the_default_is_low_latency(live: Live, scene: Path) -> None:
+    ran, out = live(wav_header(PipeFormat("f32le", RATE, 5)) + recording(), scene, "--aligned")
+    assert ran.status == 0
+    assert (
+        "variant low-latency" in ran.err and "latency 256 samples (16.0 ms) as stated, 256, 256 as measured" in ran.err
+    )
+    expected = solve(Scene.load(scene), "low-latency").signals
+    assert expected is not None
+    assert np.abs(decoded(out[44:]) - expected).max() < 2e-7
 
 
 def test_json_stands_on_standard_output_and_audio_in_the_file(live: Live, scene: Path) -> None:
@@ -210,10 +222,10 @@ def test_terminated_in_the_middle_the_state_is_kept(scene: Path) -> None:
     assert process.wait() == 143
     for stream in (process.stdin, process.stdout, process.stderr):
         stream.close()
-    separator = LiveSeparator.from_scene(Scene.load(scene))
+    separator = LiveSeparator.from_scene(Scene.load(scene), "model")
     separator.restore(state.read_bytes())
     assert separator.position == 8000
-    calm = LiveSeparator.from_scene(Scene.load(scene))
+    calm = LiveSeparator.from_scene(Scene.load(scene), "model")
     sound = PipeFormat("f32le", RATE, 5).decode(recording())
     assert np.allclose(decoded(first), calm.push(sound[:, :8000]), rtol=0, atol=1e-7)
     # Chunks of another size: equal but for rounding.

@@ -191,7 +191,7 @@ def test_a_source_steers_the_same_whatever_the_chunks() -> None:
     walk = Track(np.array([0.0, 1.0]), np.radians([20.0, 60.0]), np.zeros(2), np.full(2, 1.2))
     talkers = [Talker("mate", track=walk), Talker.at("pilot", 120.0, distance_m=1.2)]
     scene = Scene.from_arrays(recording(), ARRAY, talkers, sample_rate=RATE)
-    one, other = LiveSeparator.from_scene(scene), LiveSeparator.from_scene(scene)
+    one, other = LiveSeparator.from_scene(scene, "model"), LiveSeparator.from_scene(scene, "model")
     a, b = carried(one, recording(), [32]), carried(other, recording(), [4096, 5])
     assert np.allclose(a, b, rtol=0, atol=1e-12)
     azimuth = one.talkers[0].azimuth

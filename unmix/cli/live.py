@@ -34,7 +34,7 @@ _TOLD_SHARE = 1e-4
 @bearing_option
 @click.option(
     "--variant",
-    default="model",
+    default="low-latency",
     show_default=True,
     shell_complete=complete_variant,
     metavar="NAME_OR_FILE",

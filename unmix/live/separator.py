@@ -49,9 +49,9 @@ class LiveSeparator:
     talkers : sequence of Talker
         Who sits where, `unmix.Talker.at("mate", 20.0)`; at rest until `set_bearings` or `source` says otherwise.
     variant : str, path or Variant
-        One that is filters alone, `model` (or the same with constraint `propagated`) or a baseline; or one
-        whose room stage runs frame by frame: `low-latency`, whose block comes on top of its look-ahead, or `dereverb`
-        with recursive prediction.
+        One whose room stage runs frame by frame: `low-latency`, whose block comes on top of its look-ahead, or
+        `dereverb` with recursive prediction; or one that is filters alone: `model` (or the same with constraint
+        `propagated`), or a baseline.
     sample_rate : int
         In hertz, of everything pushed.
     noise : (channels, samples) array, optional
@@ -75,7 +75,7 @@ class LiveSeparator:
         self,
         array: Array,
         talkers: Sequence[Talker],
-        variant: str | Variant = "model",
+        variant: str | Variant = "low-latency",
         *,
         sample_rate: int,
         temperature_c: float = 20.0,
@@ -101,7 +101,7 @@ class LiveSeparator:
 
     @classmethod
     def from_scene(
-        cls, scene: Scene, variant: str | Variant = "model", *, lookahead_s: float | None = None
+        cls, scene: Scene, variant: str | Variant = "low-latency", *, lookahead_s: float | None = None
     ) -> LiveSeparator:
         """A separator for a scene's array and talkers; talkers with a track are followed along it."""
         if scene.orientation is not None:

@@ -20,6 +20,7 @@ sys.path.insert(0, str(Path(__file__).parent))
 TABLES = {
     "anechoic": "the delay model without reverberation, beside what its singular values allow",
     "rooms": "every preset in rooms, beside the baselines and the marks that know the truth",
+    "verdict": "how often the room stage is right about whether it helps",
     "bearings": "finding, counting and following talkers, beside the Cramer-Rao bound",
     "arrays": "knowing the array: limits, calibration, health check, a measured head",
     "speed": "how fast and how large",

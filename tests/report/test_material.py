@@ -49,6 +49,13 @@ def test_a_folder_that_moved_says_what_is_missing(solved: Path, tmp_path: Path) 
     assert again.scene is not None and again.notes == ()
 
 
+def test_a_scene_nobody_has_separated_is_shown(solved: Path) -> None:
+    found = material_of_folder(solved)
+    assert found.outputs == {} and set(found.references) == set(NAMES)
+    text = scene_report(found)
+    assert "Not separated yet" in text and 'id="audio-mic"' in text and 'id="audio-after' not in text
+
+
 def test_stale_grades_are_pointed_out(solved: Path, tmp_path: Path) -> None:
     import os
 

@@ -62,7 +62,7 @@ def command(
 ) -> None:
     """Turn the folder of a job into one HTML file that opens anywhere.
 
-    FOLDER is what `solve`, `grade`, `batch` or `demo` wrote. The file needs no network, carries pictures and sound
+    FOLDER is what `solve`, `grade`, `batch`, `demo` or `render` wrote. The file needs no network, carries pictures and sound
     inside itself, and prints. With --listening it is a page for listeners, and a key that tells which signal was which:
     keep the key, send the page, and read the answers with `unmix grade --listeners`.
     """

@@ -143,7 +143,7 @@ def find_solution(folder: Path) -> Path | None:
 
 
 def material_of_folder(folder: Path, *, scene: Path | None = None) -> SceneMaterial:
-    """Everything a folder that `solve`, `grade` or `demo` wrote holds.
+    """Everything a folder that `solve`, `grade`, `demo` or `render` wrote holds.
 
     scene  the scene file, where the folder does not say or it has moved
 
@@ -153,10 +153,7 @@ def material_of_folder(folder: Path, *, scene: Path | None = None) -> SceneMater
         raise FileError(f"{folder}: no such folder; name one that `solve`, `grade`, `batch` or `demo` wrote")
     found = find_solution(folder)
     if found is None:
-        raise InputError(
-            f"{folder}: holds neither solution.json nor grades.json nor results.parquet; name a folder that `solve`, "
-            "`grade`, `batch` or `demo` wrote"
-        )
+        return _unsolved(folder, scene)
     tree = read_solution(found / "solution.json")
     real = _real(found / "grades.json")
     grades = read_grades(found) if (found / "grades.json").exists() and "alone_s" not in (real or {}) else None
@@ -175,6 +172,26 @@ def material_of_folder(folder: Path, *, scene: Path | None = None) -> SceneMater
     title = folder.resolve().name
     outputs = _outputs(names, signals, tree)
     return SceneMaterial(title, names, outputs=outputs, solution=tree, grades=grades, real=real, notes=tuple(notes))
+
+
+def _unsolved(folder: Path, given: Path | None) -> SceneMaterial:
+    """A scene that nobody has separated yet, as `render` leaves it."""
+    path = given if given is not None else folder / "scene.toml"
+    if not path.exists():
+        raise InputError(
+            f"{folder}: holds neither solution.json nor grades.json nor results.parquet nor scene.toml; name a folder "
+            "that `solve`, `grade`, `batch`, `demo` or `render` wrote"
+        )
+    scene = Scene.load(path)
+    return SceneMaterial(
+        title=scene.title,
+        names=_names(None, None, scene),
+        scene=scene,
+        seats=scene.talkers,
+        recording=scene.recording,
+        reference_channel=scene.array.reference_channel,
+        references=_references(scene, None),
+    )
 
 
 def _older(a: Path, b: Path) -> bool:

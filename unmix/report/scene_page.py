@@ -132,6 +132,10 @@ def _verdicts(material: SceneMaterial) -> list[Verdict]:
         return [talker_verdict(talker) for talker in material.grades.talkers]
     if material.real is not None and "leakage" in material.real:
         return leakage_verdicts(material.names, material.real)
+    if material.solution is None and not material.outputs:
+        return [
+            Verdict(name, "unknown", "not separated", "Nobody has separated this scene yet.") for name in material.names
+        ]
     sentence = "No clean speech to compare with: listen below, or give references and grade."
     return [Verdict(name, "unknown", "not graded", sentence) for name in material.names]
 
@@ -140,7 +144,9 @@ def _headline(verdicts: list[Verdict], material: SceneMaterial) -> str:
     """The answer to the reader's first question."""
     grades = material.grades
     if grades is None:
-        return "Not graded yet" if material.real is None else "Leakage where one talker is alone"
+        if material.real is not None:
+            return "Leakage where one talker is alone"
+        return "Not graded yet" if material.solution is not None or material.outputs else "Not separated yet"
     many, understood = len(verdicts), sum(v.level == "good" for v in verdicts)
     before = [t.unprocessed.stoi for t in grades.talkers]
     was = ""

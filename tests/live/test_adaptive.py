@@ -61,7 +61,7 @@ def test_latency_is_as_stated_and_below_twenty_milliseconds() -> None:
 @pytest.mark.parametrize("variant", [LOW, recursive()], ids=lambda v: v.name)
 def test_output_is_the_file_jobs(variant: Variant) -> None:
     separator = LiveSeparator(ARRAY, seats(), variant, sample_rate=RATE)
-    sound = recording()
+    sound = recording()[:, :16000]
     parts = [separator.push(sound[:, at : at + 700]) for at in range(0, sound.shape[1], 700)]
     out = np.concatenate([*parts, separator.flush()], axis=1)[:, separator.latency_samples :]
     whole = solve(Scene.from_arrays(sound, ARRAY, seats(), sample_rate=RATE), variant).signals

@@ -127,9 +127,7 @@ def measure_tradeoffs(
     if len(talkers) < 2:
         raise InputError(f"{len(talkers)} talkers: a trade-off in SIR needs two at least")
     if array.responses is not None:
-        raise InputError(
-            "trade-offs are measured on rendered speech; give the array without its measured responses"
-        )
+        raise InputError("trade-offs are measured on rendered speech; give the array without its measured responses")
     chosen = [load_variant(variant) for variant in variants]
     rendered = _rendered(array, talkers, sample_rate, t20_s, seconds, seed)
     grader = Grader(

@@ -78,7 +78,7 @@ def choose_kind(available: Mapping[str, Sequence[str]], against: str | None) -> 
         raise InputError(f"there is no reference kind {against!r}; choose among {', '.join(kinds)}")
     for name, has in available.items():
         if not has:
-            raise InputError(f"talker {name!r} has no reference; add `reference` or `references` to grade against")
+            raise InputError(f"talker {name!r} has no reference; add `reference`, or grade without any: --alone")
         if against is not None and against not in has:
             raise InputError(f"talker {name!r} has no {against} reference, only {', '.join(sorted(has))}")
     if against is not None:

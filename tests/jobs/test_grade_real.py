@@ -3,17 +3,24 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from pathlib import Path
 
+import msgspec
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 
+from tests.conftest import circle, delayed
 from tests.metrics.test_alone import NAMES, RATE, SPOKEN, bleeding, turns
 from unmix.audio import write_audio
 from unmix.errors import InputError
+from unmix.jobs.grade import grade
 from unmix.jobs.grade_real import grade_alone, grade_close
-from unmix.scene import Scene
+from unmix.jobs.solve import solve, solve_to_folder
+from unmix.model.delays import paths_from_bearings
+from unmix.scene import Scene, Talker
+from unmix.variant import PRESETS
 
 Floats = NDArray[np.float64]
 __all__ = ["turns"]
@@ -92,3 +99,37 @@ def test_what_cannot_be_graded(scene: Path) -> None:
     (scene.parent / "out" / "pilot.wav").unlink()
     with pytest.raises(InputError, match="no signal is called 'pilot', only mate"):
         grade_alone(Scene.load(scene), scene.parent / "out")
+
+
+def test_real_figures_order_variants_as_the_true_ones_do(
+    tmp_path: Path, turns: Floats, rng: np.random.Generator
+) -> None:
+    """Anechoic, where the variants are far enough apart that any other order would be wrong."""
+    array = circle(5)
+    paths = paths_from_bearings(array, np.radians([20.0, 95.0]), 0.0, 1.2)
+    mixture = delayed(turns, paths, RATE).sum(axis=0)
+    mixture += 2e-4 * rng.standard_normal(mixture.shape)
+    close, _ = bleeding(turns, rng)
+    talkers = []
+    for k, name in enumerate(NAMES):
+        write_audio(tmp_path / f"{name}.wav", close[k : k + 1], RATE)
+        azimuth = float(np.radians([20.0, 95.0][k]))
+        talkers.append(Talker(name, azimuth, 0.0, 1.2, None, list(SPOKEN[name]), {"plain": tmp_path / f"{name}.wav"}))
+    scene = replace(Scene.from_arrays(mixture, array, talkers, sample_rate=RATE), noise_only_s=[(11.2, 12.0)])
+    weak, model = PRESETS["model"], PRESETS["model"]
+    weak = msgspec.structs.replace(weak, name="weak", solver=msgspec.structs.replace(weak.solver, prior_weight=0.1))
+    true, alone, judged = [], [], []
+    for variant in (PRESETS["reference-mic"], PRESETS["delay-and-sum"], weak, model):
+        solve_to_folder(scene, tmp_path / variant.name, variant)
+        signals = solve(scene, variant).signals
+        assert signals is not None
+        grades = grade(signals, turns, sample_rate=RATE, unprocessed=mixture[0], speech=False)
+        true.append(np.mean([t.sir_db for t in grades.talkers]))
+        leakage = grade_alone(scene, tmp_path / variant.name).leakage
+        alone.append(-np.mean([item.interval.mean for item in leakage]))
+        against_close = grade_close(scene, tmp_path / variant.name).grades
+        judged.append(np.mean([t.sir_db for t in against_close.talkers]))
+    assert np.all(np.diff(true) > 0.5)
+    assert np.all(np.diff(alone) > 0.0)
+    assert np.all(np.diff(judged) > 0.0)
+    np.testing.assert_allclose(alone[1:3], true[1:3], atol=2.0)  # not far from the figure itself, either

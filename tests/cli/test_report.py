@@ -11,6 +11,7 @@ from tests.batch.conftest import PLAN, write_plan
 from tests.cli.conftest import Run
 from tests.conftest import speech
 from unmix.audio import write_audio
+from unmix.jobs.listening import read_key
 from unmix.report.page import kind_of_page
 from unmix.report.scene_page import UNGRADED
 
@@ -181,3 +182,31 @@ def test_a_batch_renews_its_report_when_it_has_more_to_say(run: Run, tmp_path: P
     ran = run("batch", plan, "--out", out, "--workers", "1")
     assert ran.status == 0 and "no report was written" in ran.err
     assert (out / "report.html").read_text() == "mine"
+
+
+def test_a_listening_test_and_its_key(run: Run, scene: Path, solved: Path) -> None:
+    other = scene.parent / "other"
+    assert run("solve", scene, "--out", other, "--variant", "delay-and-sum", "--no-report").status == 0
+    page = scene.parent / "test" / "page.html"
+    common = ("report", solved, "--with", other, "--listening", "scale", "--talker", "mate", "--out", page)
+    ran = run(*common, "--json")
+    assert ran.status == 0, ran.err
+    assert ran.json["key"] == str(page.parent / "listening-key.json")
+    (trial,) = read_key(page.parent / "listening-key.json").trials
+    assert sorted(trial.stimuli.values()) == ["delay-and-sum", "microphone", "model", "reference"]
+    text = page.read_text(encoding="utf-8")
+    assert not any(word in text for word in ("delay-and-sum", "Chief", "scene.toml"))
+    again = run(*common)
+    assert again.status == 1 and "exists already" in again.err
+    assert run("report", solved, "--with", other).status == 2
+    assert run("report", solved, "--listening", "pairs", "--variant", "model").status == 2
+
+
+def test_two_folders_of_one_variant_are_told_apart(run: Run, scene: Path, solved: Path) -> None:
+    again = scene.parent / "again"
+    assert run("solve", scene, "--out", again, "--variant", "model", "--no-report").status == 0
+    page = scene.parent / "test" / "page.html"
+    ran = run("report", solved, "--with", again, "--listening", "pairs", "--out", page)
+    assert ran.status == 0
+    names = set(read_key(page.parent / "listening-key.json").trials[0].stimuli.values())
+    assert names == {f"model ({solved})", f"model ({again})", "microphone", "reference"}

@@ -14,8 +14,9 @@ import pytest
 from tests.batch.conftest import SPEC, write_plan
 from tests.report.conftest import Open, accessibility_findings, wait_until
 from unmix.batch.run import run_batch
-from unmix.errors import FileError
+from unmix.errors import FileError, InputError
 from unmix.report.batch_figures import unit_of
+from unmix.report.batch_listening import takes_of_batch
 from unmix.report.batch_material import BatchMaterial, _spacing, is_batch, material_of_batch
 from unmix.report.batch_page import batch_report, write_batch_report
 from unmix.report.page import kind_of_page
@@ -110,6 +111,19 @@ def test_pseudonyms_and_silence(batch: BatchMaterial, tmp_path: Path) -> None:
     assert str(kind_of_page(page.path)).startswith("batch, without sound, without names, of ")
     assert "onerror" not in text and "pilot" not in text
     assert '"Talker B"' in text and 'id="audio-' not in text
+
+
+def test_takes_for_listening_come_from_the_telling_scenes(batch: BatchMaterial) -> None:
+    takes = takes_of_batch(batch, variants=["model", "delay-and-sum"], talkers=["mate"])
+    assert {take.talker for take in takes} == {"mate"}
+    assert len({take.scene for take in takes}) == 3
+    assert list(takes[0].conditions) == ["reference", "model", "delay-and-sum", "microphone"]
+    one = takes_of_batch(batch, scenes=[batch.scenes[1]], variants=["model"])
+    assert [(take.scene, take.talker) for take in one] == [(batch.scenes[1], "mate"), (batch.scenes[1], NASTY)]
+    with pytest.raises(InputError, match="there is no variant 'full' to listen to"):
+        takes_of_batch(batch, variants=["full"])
+    with pytest.raises(InputError, match="none of the scenes has a talker called nobody"):
+        takes_of_batch(batch, variants=["model"], talkers=["nobody"])
 
 
 def test_names_of_figures() -> None:

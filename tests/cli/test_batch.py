@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from tests.batch.conftest import PLAN, inline, write_plan
@@ -93,3 +94,27 @@ def test_the_ranking_fits_a_terminal_of_80_columns(tmp_path: Path) -> None:
     assert max(map(len, lines)) <= 80
     [best] = [line for line in lines if "model" in line]
     assert best.count("[") == 1 and "…" not in best and best.split()[:2] == ["1", "model"]
+
+
+def test_who_is_ahead_is_said_with_the_interval_and_its_certainty(tmp_path: Path) -> None:
+    from tests.batch.test_results import make_results
+    from unmix.batch.ranking import Metric, analyse
+    from unmix.cli.batch_tables import ranking_lines
+
+    rng = np.random.default_rng(8)
+    gains = {"good": 0.3, "as good": 0.3, "bad": 0.1}
+    scenes = [f"s{s}" for s in range(30)]
+    noise = rng.normal(0.0, 0.02, (30, 3))
+    rows = [
+        f"('{scene}', '{name}', 'x', NULL, {gain + noise[s, v]})"
+        for s, scene in enumerate(scenes)
+        for v, (name, gain) in enumerate(gains.items())
+    ]
+    folder = make_results(tmp_path / "made-up", ", ".join(rows))
+    lines = list(
+        ranking_lines(analyse(folder, [Metric("stoi", "stoi_gain")], scenes=scenes, variants=list(gains), seed=0))
+    )
+    [ahead] = [line for line in lines if "is ahead of bad by" in line]
+    assert "+0.20 [" in ahead or "+0.21 [" in ahead
+    assert "(p < 0.001, effect size" in ahead
+    assert any("cannot be told apart on 30 scenes" in line for line in lines)

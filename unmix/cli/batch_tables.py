@@ -20,6 +20,7 @@ __all__ = ["change_lines", "change_table", "clock", "ranking_lines", "ranking_ta
 FEWEST_SCENES = 2
 MOST_ROWS = 40
 MOST_LINES = 6
+MOST_LEADERS = 3
 
 
 def ranking_table(analysis: Analysis, *, narrow: bool = False) -> Table:
@@ -98,6 +99,7 @@ def ranking_lines(analysis: Analysis) -> Iterator[str]:
         yield "One scene cannot tell variants apart; the order is this scene's alone. Add scenes."
         return
     best = known[0]
+    yield from _beaten(ranking, first)
     for peer in best.peers[:MOST_LINES]:
         pair = ranking.pair(best.name, peer)
         if pair is None:
@@ -114,6 +116,18 @@ def ranking_lines(analysis: Analysis) -> Iterator[str]:
         yield f"With so few scenes, intervals hold the true mean in {said} of cases, by simulation."
     if len(ranking.variants) > MOST_ROWS:
         yield f"{len(ranking.variants) - MOST_ROWS} more variants stand in batch.json."
+
+
+def _beaten(ranking: Ranking, metric: Metric) -> Iterator[str]:
+    """How much the best variant is ahead of the best of each group below, for the first few."""
+    leaders = {v.group: v.name for v in reversed(ranking.variants) if v.group}
+    for group in range(2, 2 + MOST_LEADERS):
+        pair = ranking.pair(leaders[1], leaders[group]) if group in leaders else None
+        if pair is None or pair.interval.mean is None or pair.p_corrected is None:
+            continue
+        p = "p < 0.001" if pair.p_corrected < 0.001 else f"p = {pair.p_corrected:.3f}"
+        effect = "" if pair.effect is None else f", effect size {abs(pair.effect):.1f}"
+        yield f"{pair.a} is ahead of {pair.b} by {_interval(pair.interval, metric)} ({p}{effect})."
 
 
 def change_table(comparison: Comparison) -> Table:

@@ -40,6 +40,11 @@ if TYPE_CHECKING:
     from unmix.metrics.grades import Grades
     from unmix.render.compose import RenderedScene, render_scene
     from unmix.render.spec import RenderSpec
+    from unmix.report.figures import bearing_figure, save_figure
+    from unmix.report.page import PageFile
+    from unmix.report.scene_figures import conditioning_figure, scene_figure, verdict_figure
+    from unmix.report.spectrogram import spectrogram_figure
+    from unmix.report.write import write_report
     from unmix.scene import Scene, Talker
     from unmix.sofa import Responses, read_sofa, write_sofa
     from unmix.track import Orientation, Track
@@ -61,6 +66,7 @@ __all__ = [
     "Located",
     "MissingExtraError",
     "Orientation",
+    "PageFile",
     "Recording",
     "RenderSpec",
     "Rendered",
@@ -76,10 +82,12 @@ __all__ = [
     "Variant",
     "__version__",
     "array_limits",
+    "bearing_figure",
     "calibrate",
     "calibrate_blindly",
     "calibrate_level",
     "check",
+    "conditioning_figure",
     "export_bank",
     "grade",
     "grade_alone",
@@ -95,9 +103,14 @@ __all__ = [
     "render_scene",
     "render_to_folder",
     "run_batch",
+    "save_figure",
+    "scene_figure",
     "solve",
     "solve_to_folder",
+    "spectrogram_figure",
+    "verdict_figure",
     "write_audio",
+    "write_report",
     "write_sofa",
 ]
 
@@ -114,6 +127,7 @@ _LAZY = {
     "LiveSeparator": "unmix.live.separator",
     "Located": "unmix.jobs.located",
     "Orientation": "unmix.track",
+    "PageFile": "unmix.report.page",
     "Recording": "unmix.audio",
     "RenderSpec": "unmix.render.spec",
     "Rendered": "unmix.jobs.render",
@@ -126,10 +140,12 @@ _LAZY = {
     "Variant": "unmix.variant",
     # `unmix.limits` is a folder too.
     "array_limits": "unmix.jobs.limits:limits",
+    "bearing_figure": "unmix.report.figures",
     "calibrate": "unmix.jobs.calibrate",
     "calibrate_blindly": "unmix.jobs.calibrate",
     "calibrate_level": "unmix.jobs.calibrate",
     "check": "unmix.jobs.check",
+    "conditioning_figure": "unmix.report.scene_figures",
     "export_bank": "unmix.export.job",
     "grade": "unmix.jobs.grade",
     "grade_alone": "unmix.jobs.grade_real",
@@ -146,9 +162,14 @@ _LAZY = {
     # `unmix.render` is the folder of that stage; the job goes by the name of what it does.
     "render_to_folder": "unmix.jobs.render:render",
     "run_batch": "unmix.batch.run",
+    "save_figure": "unmix.report.figures",
+    "scene_figure": "unmix.report.scene_figures",
     "solve": "unmix.jobs.solve",
     "solve_to_folder": "unmix.jobs.solve",
+    "spectrogram_figure": "unmix.report.spectrogram",
+    "verdict_figure": "unmix.report.scene_figures",
     "write_audio": "unmix.audio",
+    "write_report": "unmix.report.write",
     "write_sofa": "unmix.sofa",
 }
 

@@ -14,6 +14,7 @@ import pytest
 import soundfile
 from markupsafe import escape
 
+import unmix
 from tests.conftest import speech
 from tests.report.conftest import NAMES, RATE
 from unmix.audio import Samples, read_audio, write_audio
@@ -54,6 +55,16 @@ def test_a_scene_nobody_has_separated_is_shown(solved: Path) -> None:
     assert found.outputs == {} and set(found.references) == set(NAMES)
     text = scene_report(found)
     assert "Not separated yet" in text and 'id="audio-mic"' in text and 'id="audio-after' not in text
+
+
+def test_the_same_from_python(solved: Path, tmp_path: Path) -> None:
+    page = unmix.write_report(solved / "out", tmp_path / "r.html", audio=False, hide_names=True)
+    assert isinstance(page, unmix.PageFile) and page.bytes == page.path.stat().st_size
+    assert kind_of_page(page.path) == "scene, graded, without sound, without names"
+    with pytest.raises(unmix.FileError, match="exists already"):
+        unmix.write_report(solved / "out", page.path)
+    unmix.save_figure(unmix.verdict_figure(read_grades(solved / "out")), tmp_path / "v.svg")
+    assert "intelligibility" in (tmp_path / "v.svg").read_text(encoding="utf-8")
 
 
 def test_stale_grades_are_pointed_out(solved: Path, tmp_path: Path) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import click
 
@@ -62,9 +62,9 @@ def command(
 ) -> None:
     """Turn the folder of a job into one HTML file that opens anywhere.
 
-    FOLDER is what `solve`, `grade`, `batch`, `demo` or `render` wrote. The file needs no network, carries pictures and sound
-    inside itself, and prints. With --listening it is a page for listeners, and a key that tells which signal was which:
-    keep the key, send the page, and read the answers with `unmix grade --listeners`.
+    FOLDER is what `solve`, `grade`, `batch`, `demo` or `render` wrote. The file needs no network, carries pictures and
+    sound inside itself, and prints. With --listening it is a page for listeners, and a key that tells which signal was
+    which: keep the key, send the page, and read the answers with `unmix grade --listeners`.
     """
     if listening is None and (others or variants or talkers):
         raise click.UsageError("--with, --variant and --talker belong to --listening")
@@ -73,21 +73,20 @@ def command(
         _say_listening(page, key, as_json)
         return
     from unmix.files import refuse_to_replace
-    from unmix.report.batch_material import is_batch, material_of_batch
-    from unmix.report.batch_page import write_batch_report
-    from unmix.report.material import material_of_folder
-    from unmix.report.scene_page import write_scene_report
+    from unmix.report.write import write_report
 
     path = folder / REPORT if out is None else out
     refuse_to_replace(path, overwrite=overwrite)
-    options: dict[str, Any] = {"audio": not no_audio, "hide_names": pseudonyms, "overwrite": overwrite}
-    if sound_mb is not None:
-        options["sound_mb"] = sound_mb
     with progress_bar("writing the report"):
-        if is_batch(folder):
-            page = write_batch_report(material_of_batch(folder), path, **options)
-        else:
-            page = write_scene_report(material_of_folder(folder, scene=scene), path, **options)
+        page = write_report(
+            folder,
+            path,
+            scene=scene,
+            audio=not no_audio,
+            hide_names=pseudonyms,
+            sound_mb=sound_mb,
+            overwrite=overwrite,
+        )
     if as_json:
         print_json({"file": str(page.path), "bytes": page.bytes})
         return

@@ -105,11 +105,12 @@ def check_format(path: Path) -> None:
         raise InputError(f"{path}: pictures are written as {', '.join(FORMATS)}; choose one of these endings")
 
 
-def save_figure(figure: Figure, path: Path, *, overwrite: bool = False) -> None:
+def save_figure(figure: Figure, path: str | Path, *, overwrite: bool = False) -> None:
     """Write a figure in the format of the file's suffix; the same figure gives the same bytes.
 
     Raises InputError for an unknown suffix, FileError when the file exists and ``overwrite`` is not given.
     """
+    path = Path(path)
     check_format(path)
     dates: dict[str, dict[str, Any]] = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": {}}
     with styled(), write_aside(path, overwrite=overwrite) as aside:
@@ -163,7 +164,7 @@ def bearing_figure(located: Located) -> Figure:
     """Bearing against time with activity, beside the score around the array.
 
     Heavy where a talker speaks, thin where not; grey dots are single detections; hollow marks and dotted lines are
-    directions the array cannot tell from the talker's.
+    directions the array cannot tell from the talker's. `save_figure` writes it, and raises what writing does.
     """
     with styled():
         figure = new_figure(9.0, 3.8)

@@ -27,7 +27,10 @@ FAR_M = 1.5
 
 
 def verdict_figure(grades: Grades) -> Figure:
-    """Each talker before (hollow) and after (filled), for intelligibility and for how far down the others are."""
+    """Each talker before (hollow) and after (filled), for intelligibility and for how far down the others are.
+
+    `save_figure` writes it, and raises what writing does.
+    """
     talkers = grades.talkers
     with styled():
         figure = new_figure(5.6, 0.95 + 0.36 * len(talkers))
@@ -61,7 +64,10 @@ def _dumbbell(ax: Axes, k: int, before: float | None, after: float | None) -> No
 
 
 def scene_figure(talkers: Sequence[Talker], array: Array) -> Figure:
-    """The scene from above, the front up and left on the left: bearings, tracks, and the array itself enlarged."""
+    """The scene from above, the front up and left on the left: bearings, tracks, and the array itself enlarged.
+
+    Who has no bearing is left out. `save_figure` writes it, and raises what writing does.
+    """
     reach = _reach(talkers)
     with styled():
         figure = new_figure(5.6, 3.1)
@@ -125,7 +131,10 @@ def _microphones(ax: Axes, array: Array) -> None:
 def conditioning_figure(conditioning: dict[str, Any], names: Sequence[str]) -> Figure:
     """Condition of the delay model and each talker's noise gain over frequency, in thirds of an octave.
 
-    conditioning  as it stands in `solution.json`
+    conditioning  as it stands in `solution.json`, and in `Solution.conditioning`
+    names         the talkers, in order
+
+    `save_figure` writes it, and raises what writing does.
     """
     from matplotlib.ticker import LogLocator, NullFormatter
 

@@ -81,7 +81,12 @@ def _chunk(kind: bytes, data: bytes) -> bytes:
 def spectrogram_figure(
     signals: Floats, sample_rate: int, names: Sequence[str], *, start_s: float = 0.0, top_db: float | None = None
 ) -> Figure:
-    """Spectrograms of (signals, samples) below each other, on one scale of levels."""
+    """Spectrograms of (signals, samples) below each other, on one scale of levels.
+
+    start_s  time of the first sample; top_db  level of the brightest colour, by default the highest there is
+
+    `save_figure` writes it, and raises what writing does.
+    """
     levels = [spectrogram_db(signal, sample_rate) for signal in signals]
     top = max(float(level.max()) for level in levels) if top_db is None else top_db
     extent = (start_s, start_s + signals.shape[1] / sample_rate, 0.0, sample_rate / 2000.0)

@@ -96,4 +96,4 @@ def _others(grade: TalkerGrade) -> str:
 
 
 def _change(gain_db: float) -> str:
-    return f"{gain_db:.0f} dB further down" if gain_db >= 0.0 else f"{-gain_db:.0f} dB less than before"
+    return f"{gain_db:.0f} dB further down than before" if gain_db >= 0.0 else f"{-gain_db:.0f} dB less than before"

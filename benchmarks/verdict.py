@@ -6,7 +6,7 @@ Two figures are judged against the truth of rendered scenes (7 microphones, real
 voices and rooms drawn from seeds that the limits were not chosen on):
 
 - *The model alone is better*: true where the whole chain, left unjudged, loses more than 0.01 of mean STOI against the
-  model alone.
+  model alone, false where it gains more than that. What lies between is counted apart: either answer is as good.
 - *Somebody speaks whom the scene does not name*: true where the last talker was left out of the scene.
 
 Hits are the share of true cases that were named, false alarms the share of the others.
@@ -101,15 +101,16 @@ def main() -> None:
     print_table(f"The room stage's verdict, {options.scenes} scenes a row", columns, table)
     everything = [(label, *f) for label, found in rows.items() for f in found]
     worse = [f[2] for f in everything if f[1] < -0.01]
-    better = [f[2] for f in everything if f[1] >= -0.01]
+    even = [f[2] for f in everything if abs(f[1]) <= 0.01]
+    better = [f[2] for f in everything if f[1] > 0.01]
     stranger = [f[4] for f in everything if "not named" in f[0]]
     known = [f[4] for f in everything if "not named" not in f[0]]
     print_table(
         "Rates",
-        ["verdict", "hits", "false alarms"],
+        ["verdict", "hits", "false alarms", "said where both are as good"],
         [
-            ["the model alone is better", rate(worse), rate(better)],
-            ["somebody speaks who is not named", rate(stranger), rate(known)],
+            ["the model alone is better", rate(worse), rate(better), rate(even)],
+            ["somebody speaks who is not named", rate(stranger), rate(known), ""],
         ],
     )
 

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import contextlib
 import logging
+import os
 import tempfile
 import time
 import warnings
@@ -25,6 +26,7 @@ from unmix.batch.items import Items
 from unmix.batch.scenes import SceneSource
 from unmix.batch.store import Part, Store, encode_part, render_source
 from unmix.batch.work import Task, failed, run_task
+from unmix.cores import THREADS_VARIABLE
 from unmix.errors import FileError, InputError, MissingExtraError, UnmixWarning
 
 __all__ = ["ClusterEngine"]
@@ -234,8 +236,9 @@ def _unpacked(digest: str, bundle: Bundle) -> str:
 
 @contextlib.contextmanager
 def _one_thread() -> Iterator[None]:
-    """One BLAS thread, as on this machine, so that results are the same."""
+    """One thread, of BLAS and of one's own, as on this machine, so that results are the same."""
     from threadpoolctl import threadpool_limits
 
+    os.environ[THREADS_VARIABLE] = "1"  # and left so: a worker's threads share its environment
     with threadpool_limits(1):
         yield

@@ -23,9 +23,10 @@ from typing import Any, NoReturn
 from unmix.batch.feed import Feed, Job, Outcome, Running, task_of
 from unmix.batch.items import Items
 from unmix.batch.store import Part, Store, encode_part
+from unmix.cores import THREADS_VARIABLE
 from unmix.errors import FileError, UnmixError
 
-__all__ = ["LocalEngine", "usable_cores"]
+__all__ = ["LocalEngine"]
 
 MOST_DEATHS = 3
 """A job that outlives so many workers is given up; so is a worker that never gets ready."""
@@ -33,14 +34,7 @@ FULL_BYTES = 32e6
 """Where a scene cannot be written and less than this is free, the disk is full, and no other scene will fit."""
 TICK_S = 0.5
 PATIENCE_S = 5.0
-ONE_THREAD = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
-
-
-def usable_cores() -> int:
-    """Cores this process may use."""
-    if hasattr(os, "sched_getaffinity"):
-        return len(os.sched_getaffinity(0))
-    return os.cpu_count() or 1
+ONE_THREAD = (THREADS_VARIABLE, "OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 
 
 @dataclass

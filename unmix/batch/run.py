@@ -17,12 +17,13 @@ from unmix.batch.compare import Comparison, compare
 from unmix.batch.feed import Outcome, Running
 from unmix.batch.forecast import Forecast, check_many, forecast
 from unmix.batch.items import MANY, Items, count_items, plan_items
-from unmix.batch.local import LocalEngine, usable_cores
+from unmix.batch.local import LocalEngine
 from unmix.batch.plan import Plan
 from unmix.batch.ranking import Analysis, Metric, analyse
 from unmix.batch.results import Written, figure_columns, write_results
 from unmix.batch.scores import Scores, read_scores
 from unmix.batch.store import Store
+from unmix.cores import usable_cores
 from unmix.errors import InputError
 from unmix.files import path_from, write_json
 from unmix.metrics.grades import FIGURES

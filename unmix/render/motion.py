@@ -16,6 +16,7 @@ from concurrent.futures import ThreadPoolExecutor
 import numpy as np
 from numpy.typing import NDArray
 
+from unmix.cores import usable_threads
 from unmix.render.convolve import convolve_responses
 from unmix.render.fine import FineClip
 from unmix.render.images import Images
@@ -93,7 +94,7 @@ def _near_sound(
             early += np.clip(0.5 + ahead / (_EARLY_FADE_S * sample_rate), 0.0, 1.0) * sound[reference]
         return heard[0][reference], early, np.sum(heard, axis=0)
 
-    with ThreadPoolExecutor(2) as pool:
+    with ThreadPoolExecutor(min(2, usable_threads())) as pool:
         parts = list(pool.map(chunk, starts))
     return (
         np.concatenate([p[0] for p in parts]),
@@ -143,7 +144,7 @@ def _tail_sound(
         sound = convolve_responses(clip[first : stop + LEAD], rows, LEAD, stop - first)[:, start - first :]
         return slice(start, stop), weight[start:stop] * sound
 
-    with ThreadPoolExecutor(2) as pool:
+    with ThreadPoolExecutor(min(2, usable_threads())) as pool:
         for knot, (place, sound) in enumerate(pool.map(block, range(len(knots_s)))):
             early[place] += sound[0]
             image[:, place] += sound[1:]

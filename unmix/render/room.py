@@ -22,6 +22,7 @@ import numpy as np
 import scipy.signal
 from numpy.typing import NDArray
 
+from unmix.cores import usable_threads
 from unmix.errors import InputError, UnsolvableError
 from unmix.metrics.decay import Decay, measure_decay
 from unmix.render.images import DEFAULT_JITTER_M, ImageField, Images, image_field
@@ -162,7 +163,7 @@ def responses(
         early = pulse_train(delay[soon], amplitude[soon], samples)
         return straight, early, pulse_train(delay, amplitude, samples), start / sample_rate
 
-    with ThreadPoolExecutor(2) as pool:
+    with ThreadPoolExecutor(min(2, usable_threads())) as pool:
         rows = list(pool.map(one, mics_m))
     direct_rows, early_rows, full_rows = (
         high_pass(np.stack([row[kind] for row in rows]), sample_rate, room.high_pass_hz) for kind in range(3)
@@ -243,7 +244,7 @@ def _walls_for_t20(blank: Room, t20_s: float, sources_m: Mapping[int, Floats], m
         def at_seat(seat: tuple[Images, Floats, Floats]) -> float:
             return _seat_t20(walls(x), *seat, sample_rate)
 
-        with ThreadPoolExecutor(2) as pool:
+        with ThreadPoolExecutor(min(2, usable_threads())) as pool:
             return float(np.mean(list(pool.map(at_seat, seats))))
 
     x = -math.log1p(-absorption_eyring(blank.size_m, t20_s, blank.speed_m_s))

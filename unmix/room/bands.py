@@ -6,12 +6,13 @@ the interpreter lock in both.
 
 from __future__ import annotations
 
-import os
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from contextlib import contextmanager
 from itertools import pairwise
 from typing import TypeVar
+
+from unmix.cores import usable_threads
 
 __all__ = ["Bands"]
 
@@ -22,12 +23,12 @@ class Bands:
     """Slices of the frequency axis and the threads that work on them.
 
     frequencies  number of frequencies
-    workers      threads; the number of cores when None
+    workers      threads; as many as the process may use when None
     widest       most frequencies in one slice: bounds the memory of whatever a slice needs
     """
 
     def __init__(self, frequencies: int, *, workers: int | None = None, widest: int = 128) -> None:
-        self.workers = max(1, workers or len(os.sched_getaffinity(0)))
+        self.workers = max(1, workers or usable_threads())
         count = max(self.workers, -(-frequencies // widest))
         count = min(frequencies, -(-count // self.workers) * self.workers)
         edges = [frequencies * i // count for i in range(count + 1)]

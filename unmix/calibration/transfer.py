@@ -7,8 +7,7 @@ leading eigenvector is h; with N independent frames, both the phase and the loga
     var(f) = lambda_1 sigma2 / (2 N (lambda_1 - sigma2)^2) (1 / |h_m|^2 + 1 / |h_r|^2),        |h|^2 = 1,
 
 to first order in the noise. Gain is the weighted mean of log |h_m / h_r|, delay the weighted slope of its phase through
-zero frequency or through pi (polarity). Deviations are widened by the misfit where reflections bend the phase, and by
-how many frequencies they bend alike.
+zero frequency or through pi (polarity). Reflections, which bend both, are a further error of their own (`_fitted`).
 
 Source of the eigenvector's variance: D. R. Brillinger, "Time Series: Data Analysis and Theory", 1975, theorem 9.2.4.
 """
@@ -41,6 +40,9 @@ LONGEST_COARSE_S = 16.0
 OVERLAP = 2.08
 """Neighbouring frequencies share Hann frames a quarter apart: each is that much better known than if it stood alone."""
 _ROUNDS = 4
+_HALVINGS = 40
+PLAIN_MISFIT = 1.5
+"""Misfit that chance alone explains."""
 
 
 @dataclass(frozen=True)
@@ -49,7 +51,7 @@ class Transfer:
 
     gain      natural logarithm of the gain; delay_s; sign +1 or -1
     *_std     standard deviations
-    misfit    (channels,) mean square residual of the phase over its variance; near 1 without reflections
+    misfit    (channels,) mean square residual of the phase over its noise's variance; near 1 without reflections
     snr_db    of the source over the noise, median over the frequencies used
     second    second eigenvalue over the first, weighted by power
     bandwidth_hz  of the frequencies at which the source stands out
@@ -99,15 +101,14 @@ def measure_transfer(samples: Floats, reference: int, sample_rate: int, *, where
             f"{where}: one source does not explain it ({100 * second:.0f} % of the power comes from elsewhere): two "
             "sources, or strong reflections; record one source alone, close by or in the open"
         )
-    delay, slope_std, turn, misfit = _slopes(ratio[used], variance[used], frequency[used])
-    widened = np.sqrt(np.maximum(misfit, 1.0))
-    gain_std = widened / np.sqrt(np.sum(1.0 / variance[used], axis=0))
+    delay, delay_std, turn, misfit = _slopes(ratio[used], variance[used], frequency[used])
+    rest, gain_std, _ = _fitted(np.log(np.abs(ratio[used])), np.ones(np.count_nonzero(used)), variance[used])
     at = np.arange(len(samples)) == reference
     return Transfer(
-        gain=gain,
+        gain=np.where(at, 0.0, gain + rest),
         gain_std=np.where(at, 0.0, gain_std),
         delay_s=np.where(at, 0.0, coarse / sample_rate + delay),
-        delay_std=np.where(at, 0.0, slope_std * widened),
+        delay_std=np.where(at, 0.0, delay_std),
         sign=sign * turn,
         misfit=np.where(at, 1.0, misfit),
         snr_db=float(10.0 * np.log10(np.median(snr[used]))),
@@ -212,11 +213,35 @@ def _slopes(ratio: Complexes, variance: Floats, frequency: Floats) -> tuple[Floa
     turn = np.where(score[best, channels] < 0.0, -1, 1)
     start = grid[best]
     rest = np.angle(phasor * turn * np.exp(1j * omega[:, None] * start))
-    information = np.sum(weight * omega[:, None] ** 2, axis=0)
-    slope = -np.sum(weight * omega[:, None] * rest, axis=0) / information
-    left = rest + omega[:, None] * slope
-    plain = np.sum(weight * left**2, axis=0) / max(1, len(omega) - 1)
-    # Reflections bend the phase over many frequencies alike; so much less is known than their number says.
-    alike = np.array([_stretch(row) for row in (np.sqrt(weight) * left).T])
-    misfit = np.where(OVERLAP * plain < 2.0, OVERLAP, np.maximum(alike, OVERLAP)) * plain
-    return start + slope, 1.0 / np.sqrt(information), turn, misfit
+    slope, std, misfit = _fitted(rest, -omega, variance)
+    return start + slope, std, turn, misfit
+
+
+def _fitted(data: Floats, basis: Floats, variance: Floats) -> tuple[Floats, Floats, Floats]:
+    """Factor a of data (frequencies, channels) = a basis + noise + reflections, its deviation, and the misfit of noise
+    alone.
+
+    Reflections are taken as a further error, as strong at all frequencies, of just the variance that explains the
+    misfit (the random effects of R. DerSimonian and N. Laird, "Meta-analysis in clinical trials", Control. Clin.
+    Trials 7, 1986). Clear frequencies then no longer outweigh all others, whose reflections are no stronger.
+    """
+    x = basis[:, None]
+
+    def fit(extra: Floats) -> tuple[Floats, Floats, Floats]:
+        weight = 1.0 / (variance + extra)
+        information = np.sum(weight * x**2, axis=0)
+        a = np.sum(weight * x * data, axis=0) / information
+        excess = OVERLAP * np.sum(weight * (data - a * x) ** 2, axis=0) / max(1, len(basis) - 1)
+        return np.asarray(a), np.asarray(information), np.asarray(excess)
+
+    a, information, misfit = fit(np.zeros(data.shape[1]))
+    low, high = np.zeros(data.shape[1]), OVERLAP * np.mean((data - a * x) ** 2, axis=0) * 4.0
+    for _ in range(_HALVINGS):
+        middle = 0.5 * (low + high)
+        too_small = fit(middle)[2] > 1.0
+        low, high = np.where(too_small, middle, low), np.where(too_small, high, middle)
+    extra = np.where(misfit > PLAIN_MISFIT, high, 0.0)
+    a, information, _ = fit(extra)
+    alike = np.array([_stretch(row) for row in ((data - a * x) / np.sqrt(variance + extra)).T])
+    wider = np.where(extra > 0.0, np.sqrt(np.maximum(alike, OVERLAP) / OVERLAP), 1.0)
+    return a, wider / np.sqrt(information), misfit

@@ -321,6 +321,6 @@ def _reflections(reports: Sequence[TakeReport]) -> list[str]:
     if not bent:
         return []
     return [
-        f"reflections bend the phase of {', '.join(bent)}: deviations are widened, yet not all of it is known; record "
-        "closer, in the open, or between absorbers"
+        f"reflections bend the phase of {', '.join(bent)}, and are most of the deviations: record closer, in the open, "
+        "or between absorbers"
     ]

@@ -7,6 +7,7 @@ import pytest
 
 import unmix.metrics.intelligibility as module
 from tests.conftest import speech
+from unmix.metrics import resampling
 from unmix.metrics.intelligibility import SpeechReference
 
 
@@ -53,7 +54,24 @@ def test_working_in_pieces_changes_nothing(rng: np.random.Generator, monkeypatch
     y = x + 0.03 * rng.standard_normal(x.size)
     whole = SpeechReference(x, 16000).compare(y)
     monkeypatch.setattr(module, "CHUNK", 50)
-    monkeypatch.setattr(module, "KEEP_SEGMENTS", 0)
+    monkeypatch.setattr(module, "SEGMENTS", 37)
+    monkeypatch.setattr(resampling, "KEEP", 0)
     pieces = SpeechReference(x, 16000).compare(y)
     assert pieces.stoi == pytest.approx(whole.stoi, abs=1e-12)
     assert pieces.estoi == pytest.approx(whole.estoi, abs=1e-12)
+
+
+def test_pauses_that_are_jumped_over_change_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
+    x = np.concatenate([speech("card-reader", 3.0), np.zeros(3 * 16000), speech("novel-reader", 3.0)])
+    y = x + 0.2 * np.roll(x, 4000)
+    jumped = SpeechReference(x, 16000).compare(y)
+    monkeypatch.setattr(module, "PAUSE", x.size)
+    assert SpeechReference(x, 16000).compare(y) == jumped
+
+
+def test_mixtures_are_judged_as_their_sum_is(rng: np.random.Generator) -> None:
+    s, n = speech("novel-reader", 6.0), speech("card-reader", 6.0)
+    reference = SpeechReference(s, 16000)
+    mixtures = reference.mixed(s, n)
+    for gain in (0.0, 0.03, -0.4, 1.0, 25.0):
+        assert mixtures.stoi(gain) == pytest.approx(reference.compare(s + gain * n).stoi, abs=1e-10)

@@ -14,7 +14,7 @@ from unmix.metrics.distortion import ReferenceSet
 from unmix.metrics.equivalent import EquivalentRatio
 from unmix.metrics.grader import Grader
 from unmix.metrics.grades import Figures, Grades
-from unmix.metrics.information import BANDS, HOP, PRODUCTION, RATE_HZ, STACK, InformationReference
+from unmix.metrics.information import BANDS, HOP, PRODUCTION, RATE_HZ, STACK, InformationReference, _covariance
 from unmix.metrics.intelligibility import SpeechReference
 from unmix.metrics.segments import segment_gains
 from unmix.metrics.speech import disagreements
@@ -199,3 +199,10 @@ def test_of_a_long_recording_the_loudest_stretch_is_looked_at(
     # The loudest three seconds begin within a frame or so of the middle.
     assert part.after.bits_per_s == pytest.approx(alone.after.bits_per_s, rel=0.05)
     assert part.after.equivalent_snr_db == pytest.approx(alone.after.equivalent_snr_db, abs=0.5)
+
+
+def test_covariance_of_stacked_frames_is_that_of_the_vectors(rng: np.random.Generator) -> None:
+    a, b = rng.standard_normal((2, 80, BANDS)) + 3.0
+    rows = [np.array([x[t : t + STACK].reshape(-1) for t in range(len(x) - STACK + 1)]) for x in (a, b)]
+    centred = [r - r.mean(axis=0) for r in rows]
+    assert _covariance(a, b) == pytest.approx(centred[0].T @ centred[1] / len(rows[0]), abs=1e-11)

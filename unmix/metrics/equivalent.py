@@ -44,18 +44,18 @@ class EquivalentRatio:
     """
 
     def __init__(self, references: Signals, talker: int, speech: SpeechReference) -> None:
-        self._reference = np.asarray(references[talker], dtype=np.float64)
         others = [s for k, s in enumerate(references) if k != talker and describe_unusable(s) is None]
         self.undefined: str | None = None
+        self._known: dict[int, float] = {}
         if speech.undefined is not None:
             self.undefined = speech.undefined
         elif not others:
             self.undefined = "no other talker has a reference to be mixed in"
         else:
-            self._others = np.sum(others, axis=0, dtype=np.float64)
-            self._ratio = float(np.linalg.norm(self._reference) / np.linalg.norm(self._others))
-        self._speech = speech
-        self._known: dict[int, float] = {}
+            own = np.asarray(references[talker], dtype=np.float64)
+            together = np.asarray(np.sum(others, axis=0, dtype=np.float64))
+            self._ratio = float(np.linalg.norm(own) / np.linalg.norm(together))
+            self._mixtures = speech.mixed(own, together)
 
     def ratio_db(self, stoi: float | None) -> tuple[float | None, str | None]:
         """The ratio in dB at which a mixture has this STOI; None with the reason."""
@@ -64,13 +64,13 @@ class EquivalentRatio:
         if stoi is None:
             return None, "STOI is undefined"
         low, high = 0, len(RATIOS_DB) - 1
-        if stoi <= self._stoi(low):
-            return None, f"less intelligible than with the others {-RATIOS_DB[0]:.0f} dB above the talker"
-        if stoi >= self._stoi(high):
-            return None, f"more intelligible than with the others {RATIOS_DB[-1]:.0f} dB below the talker"
         while high - low > 1:
             middle = (low + high) // 2
             low, high = (middle, high) if self._stoi(middle) < stoi else (low, middle)
+        if low == 0 and stoi <= self._stoi(low):
+            return None, f"less intelligible than with the others {-RATIOS_DB[0]:.0f} dB above the talker"
+        if high == len(RATIOS_DB) - 1 and stoi >= self._stoi(high):
+            return None, f"more intelligible than with the others {RATIOS_DB[-1]:.0f} dB below the talker"
         return self._between(stoi, low, high), None
 
     def _between(self, stoi: float, low: int, high: int) -> float:
@@ -82,6 +82,5 @@ class EquivalentRatio:
     def _stoi(self, point: int) -> float:
         if point not in self._known:
             gain = self._ratio * 10.0 ** (-RATIOS_DB[point] / 20.0)
-            heard = self._speech.compare(self._reference + gain * self._others)
-            self._known[point] = float("nan") if heard.stoi is None else heard.stoi
+            self._known[point] = self._mixtures.stoi(gain)
         return self._known[point]

@@ -52,7 +52,7 @@ FLOOR = 1e-10
 SHORTEST_S, ENOUGH_S = 2.0, 20.0
 CONSTANT = 1e-12
 CHUNK = 4096
-"""Vectors worked on at a time."""
+"""Frames worked on at a time."""
 
 
 class InformationReference:
@@ -76,14 +76,16 @@ class InformationReference:
         if x.size < FRAME:
             self.undefined = _too_short(0)
             return
-        energy_db = 20.0 * np.log10(np.linalg.norm(_frames(x) * _WINDOW, axis=1) + np.finfo(float).tiny)
+        energy_db = 20.0 * np.log10(_frame_norms(x) + np.finfo(float).tiny)
         self._speech = np.flatnonzero(energy_db > energy_db.max() - DYNAMIC_RANGE_DB)
         self.speech_s = self._speech.size * HOP / RATE_HZ
         if self.speech_s < SHORTEST_S:
             self.undefined = _too_short(self.speech_s)
             return
         self._clean = _heard(x, self._speech)
-        _, self._axes = np.linalg.eigh(_covariance(self._clean, self._clean))
+        covariance = _covariance(self._clean, self._clean)
+        _, self._axes = np.linalg.eigh(covariance)
+        self._own = np.einsum("ij,ij->j", self._axes, covariance @ self._axes)
 
     def bits_per_s(self, signal: Signals) -> tuple[float | None, str | None]:
         """What `signal` (samples,), aligned with the reference and as long, carries; None with the reason."""
@@ -99,8 +101,7 @@ class InformationReference:
 
     def _correlations(self, y: Floats) -> Floats:
         """Correlation of each uncorrelated part of the clean speech with that of y; 0 where one does not change."""
-        V = self._axes
-        own = np.einsum("ij,ij->j", V, _covariance(self._clean, self._clean) @ V)
+        V, own = self._axes, self._own
         other = np.einsum("ij,ij->j", V, _covariance(y, y) @ V)
         joint = np.einsum("ij,ij->j", V, _covariance(self._clean, y) @ V)
         moves = (own > CONSTANT * own.max()) & (other > CONSTANT * max(float(other.max()), np.finfo(float).tiny))
@@ -127,6 +128,12 @@ _WINDOW = np.hanning(FRAME + 2)[1:-1]
 
 def _frames(x: Floats) -> Floats:
     return np.lib.stride_tricks.sliding_window_view(x, FRAME)[::HOP]
+
+
+def _frame_norms(x: Floats) -> Floats:
+    frames = _frames(x)
+    parts = (frames[first : first + CHUNK] * _WINDOW for first in range(0, len(frames), CHUNK))
+    return np.concatenate([np.linalg.norm(part, axis=1) for part in parts])
 
 
 def _heard(x: Floats, chosen: NDArray[np.intp]) -> Floats:
@@ -165,19 +172,20 @@ def _masked(log: Floats) -> Floats:
 
 
 def _covariance(a: Floats, b: Floats) -> Floats:
-    """Covariance of the stacked vectors of a and of b, (STACK BANDS, STACK BANDS); means are taken off."""
-    size = STACK * BANDS
+    """Covariance of the stacked vectors of a and of b, (STACK BANDS, STACK BANDS); means are taken off.
+
+    Block (k, l) sums products of a, k frames on, with b, l frames on; block (k + 1, l + 1) is the same sum one frame
+    later, so that but for the first row and column each differs from its neighbour by two products.
+    """
     count = len(a) - STACK + 1
-    total, sum_a, sum_b = np.zeros((size, size)), np.zeros(size), np.zeros(size)
-    for first in range(0, count, CHUNK):
-        last = min(first + CHUNK, count)
-        A, B = (_stacked(x, first, last) for x in (a, b))
-        total += A.T @ B
-        sum_a += A.sum(axis=0)
-        sum_b += B.sum(axis=0)
-    return np.asarray(total / count - np.outer(sum_a / count, sum_b / count))
-
-
-def _stacked(x: Floats, first: int, last: int) -> Floats:
-    windows = np.lib.stride_tricks.sliding_window_view(x[first : last + STACK - 1], STACK, axis=0)
-    return windows.reshape(last - first, -1)
+    blocks = np.empty((STACK, STACK, BANDS, BANDS))
+    for k in range(STACK):
+        blocks[0, k] = a[:count].T @ b[k : k + count]
+        blocks[k, 0] = a[k : k + count].T @ b[:count]
+    for k in range(1, STACK):
+        entering, leaving = a[k - 1 + count, :, None], a[k - 1, :, None]
+        for m in range(1, STACK):
+            blocks[k, m] = blocks[k - 1, m - 1] + entering * b[m - 1 + count] - leaving * b[m - 1]
+    means = [np.array([x[k : k + count].mean(axis=0) for k in range(STACK)]).reshape(-1) for x in (a, b)]
+    size = STACK * BANDS
+    return np.asarray(blocks.transpose(0, 2, 1, 3).reshape(size, size) / count - np.outer(*means))

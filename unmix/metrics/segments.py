@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from unmix.metrics.intelligibility import SpeechReference
 from unmix.metrics.intervals import Interval, mean_intervals
 
-__all__ = ["SEGMENT_S", "SegmentGains", "segment_gains"]
+__all__ = ["SEGMENT_S", "SegmentGains", "SegmentReference", "segment_gains"]
 
 Floats = NDArray[np.float64]
 Signals = NDArray[np.floating[Any]]
@@ -49,17 +49,49 @@ class SegmentGains:
         return cls(**tree | {name: Interval(**tree[name]) for name in ("stoi", "estoi")})
 
 
+class SegmentReference:
+    """The reference's side, computed once for any number of signals.
+
+    Parameters
+    ----------
+    reference : (samples,)
+    sample_rate : int
+        In hertz.
+    """
+
+    def __init__(self, reference: Signals, sample_rate: int) -> None:
+        self._length = round(SEGMENT_S * sample_rate)
+        starts = np.arange(0, reference.size - self._length + 1, self._length)
+        speaks = _speaks(reference, starts, self._length, sample_rate)
+        spoken = [int(s) for s, so in zip(starts, speaks, strict=True) if so]
+        self._silent = len(starts) - len(spoken)
+        if len(spoken) > MOST_SEGMENTS:
+            spoken = [spoken[i] for i in np.linspace(0, len(spoken) - 1, MOST_SEGMENTS).round().astype(int)]
+        self._starts = spoken
+        self._speech = [SpeechReference(reference[s : s + self._length], sample_rate) for s in spoken]
+
+    def figures(self, signal: Signals) -> Floats:
+        """STOI and ESTOI of `signal` (samples,), aligned with the reference, in each segment: (segments, 2).
+
+        NaN where they are undefined.
+        """
+        heard = [
+            speech.compare(signal[s : s + self._length]) for s, speech in zip(self._starts, self._speech, strict=True)
+        ]
+        return np.array([(h.stoi, h.estoi) for h in heard], dtype=np.float64).reshape(-1, 2)
+
+    def gains(self, after: Floats, before: Floats) -> SegmentGains:
+        """Gains from what `figures` gave for two signals."""
+        gains = after - before
+        table = gains[np.isfinite(gains).all(axis=1)]
+        stoi, estoi = mean_intervals(table)
+        return SegmentGains(SEGMENT_S, len(table), self._silent, stoi, estoi)
+
+
 def segment_gains(reference: Signals, after: Signals, before: Signals, sample_rate: int) -> SegmentGains:
     """Gains of `after` over `before`, both (samples,) and aligned with the reference."""
-    length = round(SEGMENT_S * sample_rate)
-    starts = np.arange(0, reference.size - length + 1, length)
-    spoken = [s for s, speaks in zip(starts, _speaks(reference, starts, length, sample_rate), strict=True) if speaks]
-    if len(spoken) > MOST_SEGMENTS:
-        spoken = [spoken[i] for i in np.linspace(0, len(spoken) - 1, MOST_SEGMENTS).round().astype(int)]
-    gains = [g for s in spoken if (g := _gains(reference, after, before, slice(s, s + length), sample_rate))]
-    table = np.array(gains, dtype=np.float64).reshape(-1, 2)
-    stoi, estoi = mean_intervals(table)
-    return SegmentGains(SEGMENT_S, len(gains), len(starts) - len(spoken), stoi, estoi)
+    segments = SegmentReference(reference, sample_rate)
+    return segments.gains(segments.figures(after), segments.figures(before))
 
 
 def _speaks(reference: Signals, starts: NDArray[np.intp], length: int, sample_rate: int) -> list[bool]:
@@ -69,13 +101,3 @@ def _speaks(reference: Signals, starts: NDArray[np.intp], length: int, sample_ra
     loud = power > power.max(initial=0.0) * 10.0 ** (-BELOW_DB / 10.0)
     counts = [np.count_nonzero(loud[s // size : (s + length) // size]) for s in starts]
     return [bool(count * FRAME_S >= LEAST_SPEECH_S) for count in counts]
-
-
-def _gains(
-    reference: Signals, after: Signals, before: Signals, part: slice, sample_rate: int
-) -> tuple[float, float] | None:
-    speech = SpeechReference(reference[part], sample_rate)
-    late, early = speech.compare(after[part]), speech.compare(before[part])
-    if late.stoi is None or early.stoi is None or late.estoi is None or early.estoi is None:
-        return None
-    return late.stoi - early.stoi, late.estoi - early.estoi

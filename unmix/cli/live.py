@@ -53,7 +53,10 @@ _TOLD_SHARE = 1e-4
 )
 @click.option("--aligned", is_flag=True, help="Leave out the latency's samples: output as long as the input.")
 @click.option(
-    "--state", type=existing_file, metavar="FILE", help="Go on from this file if it exists; keep the state in it."
+    "--state",
+    type=existing_file,
+    metavar="FILE",
+    help="Go on from this file if it exists; keep the state in it, chunk by chunk.",
 )
 @click.option(
     "--report-s", type=click.FloatRange(min=0.1), default=60.0, show_default=True, help="Seconds between reports."
@@ -174,8 +177,10 @@ def _separator(
 
     lookahead_s = None if lookahead_ms is None else 1e-3 * lookahead_ms
     if scene is not None:
-        return LiveSeparator.from_scene(replace(scene, talkers=tuple(talkers)), variant, lookahead_s=lookahead_s)
-    return LiveSeparator(array, talkers, variant, sample_rate=sample_rate, lookahead_s=lookahead_s)
+        return LiveSeparator.from_scene(
+            replace(scene, talkers=tuple(talkers)), variant, lookahead_s=lookahead_s, wait=False
+        )
+    return LiveSeparator(array, talkers, variant, sample_rate=sample_rate, lookahead_s=lookahead_s, wait=False)
 
 
 def _incoming_stream() -> BinaryIO:

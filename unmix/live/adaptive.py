@@ -6,7 +6,7 @@ reverberation predicted recursively (`dereverb` with `room.prediction.recursive`
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from functools import partial
 
 import numpy as np
@@ -61,14 +61,18 @@ class CausalRoomStage:
         """The last `latency` samples; what was learned is forgotten."""
         return self._stage.flush()
 
-    def steer(self, talkers: Sequence[Talker]) -> None:
+    def prepare(self, talkers: Sequence[Talker]) -> Callable[[], None]:
         """Go along with talkers who moved a little; start anew from bearings that are others."""
         known = self._known(talkers, self._stage.frequencies_hz)
-        if max(map(_turn, self._seats, talkers)) < FOLLOWED:
-            self._stage.follow(known)
-        else:
-            self._stage.steer(known)
-        self._seats = tuple(talkers)
+
+        def change() -> None:
+            if max(map(_turn, self._seats, talkers)) < FOLLOWED:
+                self._stage.follow(known)
+            else:
+                self._stage.steer(known)
+            self._seats = tuple(talkers)
+
+        return change
 
     def state(self) -> State:
         """What was heard and learned, and where the talkers are."""

@@ -7,7 +7,7 @@ add |v[n] - u[n]| at once.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Protocol
 
@@ -88,7 +88,7 @@ class BankStage:
         self._convolver = convolver_for(self.channels, bank.taps.shape[-1])
         self._current = self._convolver.kernel(bank.taps)
         self._next: Kernel | None = None
-        self._waiting: tuple[Floats, float] | None = None
+        self._waiting: tuple[Kernel, float] | None = None
         self._faded = 0
         self._position = 0
         self.change: Change | None = None
@@ -96,16 +96,21 @@ class BankStage:
     @property
     def bank(self) -> FilterBank:
         """The filters that are applied, or that are being faded in."""
-        taps = self._waiting[0] if self._waiting else (self._next or self._current).taps
+        taps = (self._waiting[0] if self._waiting else self._next or self._current).taps
         return FilterBank(taps, self.latency, self.cut_share)
 
-    def steer(self, talkers: Sequence[Talker]) -> None:
-        """Fade to the filters of other bearings; a fade that runs is finished first."""
+    def prepare(self, talkers: Sequence[Talker]) -> Callable[[], None]:
+        """Design filters for other bearings; then a fade to them, which waits for one that runs."""
         most = self._convolver.capacity - self.latency - 1
         bank = self._design.within(talkers, before=self.latency, after=most)
-        self._waiting = (bank.taps, bank.cut_share)
-        if self._next is None:
-            self._begin()
+        kernel = self._convolver.kernel(bank.taps)
+
+        def change() -> None:
+            self._waiting = (kernel, bank.cut_share)
+            if self._next is None:
+                self._begin()
+
+        return change
 
     def push(self, chunk: Floats) -> Floats:
         """Take (channels, n) samples; return (talkers, n), late by `latency`."""
@@ -155,8 +160,8 @@ class BankStage:
     def _begin(self) -> None:
         if self._waiting is None:
             return
-        taps, self.cut_share = self._waiting
-        self._next, self._waiting, self._faded = self._convolver.kernel(taps), None, 0
+        self._next, self.cut_share = self._waiting
+        self._waiting, self._faded = None, 0
         self.change = Change(self._position, 0.0, 0.0, self.cut_share, False)
 
     def _finish(self) -> None:
@@ -175,7 +180,7 @@ class BankStage:
         if self._next is not None:
             arrays["next"] = self._next.taps
         if self._waiting is not None:
-            arrays["waiting"], arrays["waiting_cut"] = self._waiting[0], np.array(self._waiting[1])
+            arrays["waiting"], arrays["waiting_cut"] = self._waiting[0].taps, np.array(self._waiting[1])
         return arrays
 
     def restore(self, state: State) -> None:
@@ -184,7 +189,7 @@ class BankStage:
         kernel = self._convolver.kernel
         current = kernel(state["taps"])
         following = kernel(state["next"]) if "next" in state else None
-        waiting = (state["waiting"], float(state["waiting_cut"])) if "waiting" in state else None
+        waiting = (kernel(state["waiting"]), float(state["waiting_cut"])) if "waiting" in state else None
         self._convolver.restore(past)
         self._current, self._next, self._waiting = current, following, waiting
         self._faded, self._position = int(state["faded"]), int(state["position"])

@@ -17,6 +17,7 @@ from numpy.typing import ArrayLike, NDArray
 from unmix.array import Array
 from unmix.audio import HIGHEST_RATE_HZ, LOWEST_RATE_HZ
 from unmix.errors import InputError, UnmixWarning, UnsolvableError
+from unmix.live.ahead import Ahead, Prepared
 from unmix.live.bank import BankStage, Change
 from unmix.live.design import Designer, check_runs_live, noise_spectra
 from unmix.live.latency import measured_latency
@@ -64,6 +65,10 @@ class LiveSeparator:
         Seconds over which filters change when bearings do.
     source : callable, optional
         Asked every 0.1 s of audio with the time in seconds; returns talkers where they now are, or None.
+    wait : bool
+        Whether a change of bearings waits for its filters, which take many chunks' time to design (20 to 80 ms). The
+        same audio then gives the same output every time. Otherwise they are designed in a thread while the audio goes
+        on, and the change begins with the first chunk after; of several asked for meanwhile the last is made.
 
     Raises InputError for what was handed in, UnsolvableError for a variant that cannot run so (with the reason) and for
     bearings that coincide.
@@ -83,6 +88,7 @@ class LiveSeparator:
         lookahead_s: float | None = None,
         fade_s: float = FADE_S,
         source: BearingSource | None = None,
+        wait: bool = True,
     ) -> None:
         if not LOWEST_RATE_HZ <= sample_rate <= HIGHEST_RATE_HZ:
             raise InputError(f"sample rate {sample_rate} Hz; {LOWEST_RATE_HZ} to {HIGHEST_RATE_HZ} Hz are supported")
@@ -97,11 +103,17 @@ class LiveSeparator:
         self.talkers = tuple(talkers)
         self._source, self._poll = source, max(1, round(POLL_S * sample_rate))
         self._stage = self._make_stage()
+        self._ahead = None if wait else Ahead(self._stage.prepare)
         self._position = 0
 
     @classmethod
     def from_scene(
-        cls, scene: Scene, variant: str | Variant = "low-latency", *, lookahead_s: float | None = None
+        cls,
+        scene: Scene,
+        variant: str | Variant = "low-latency",
+        *,
+        lookahead_s: float | None = None,
+        wait: bool = True,
     ) -> LiveSeparator:
         """A separator for a scene's array and talkers; talkers with a track are followed along it."""
         if scene.orientation is not None:
@@ -117,6 +129,7 @@ class LiveSeparator:
             noise=noise_spectra(scene),
             lookahead_s=lookahead_s,
             source=source,
+            wait=wait,
         )
 
     @property
@@ -176,6 +189,8 @@ class LiveSeparator:
 
     def flush(self) -> Floats:
         """The last `latency_samples` samples, as if silence followed: (talkers, latency_samples)."""
+        if self._ahead is not None:
+            self._take(self._ahead.rest())
         self._position = 0
         return self._stage.flush()
 
@@ -183,11 +198,15 @@ class LiveSeparator:
         """Talkers, as many as before and in the same order, are somewhere else now: filters change over `fade_s`.
 
         Raises InputError for another number of talkers, UnsolvableError for bearings that coincide; the separator then
-        goes on as it was.
+        goes on as it was. Without `wait` this returns at once, and bearings that coincide are told as a warning by the
+        `push` that would have begun the change.
         """
         if len(talkers) != len(self.talkers):
             raise InputError(f"{len(talkers)} bearings for {len(self.talkers)} talkers; give one each, in their order")
-        self._stage.steer(talkers)
+        if self._ahead is not None:
+            self._ahead.ask(talkers, self._position / self.sample_rate)
+            return
+        self._stage.prepare(talkers)()
         self.talkers = tuple(talkers)
 
     def measure_latency(self) -> tuple[int, ...]:
@@ -200,7 +219,8 @@ class LiveSeparator:
             "format": _FORMAT,
             "made_for": self._fingerprint(),
             "position": self._position,
-            "talkers": [[t.name, t.azimuth, t.elevation, t.distance_m] for t in self.talkers],
+            "talkers": _plain(self.talkers),
+            "asked": _plain(self._ahead.asked) if self._ahead is not None and self._ahead.asked is not None else None,
         }
         buffer = io.BytesIO()
         text = np.frombuffer(json.dumps(head).encode(), np.uint8)
@@ -228,10 +248,12 @@ class LiveSeparator:
             self._stage.restore(arrays)
         except (KeyError, ValueError):
             raise InputError("the state is damaged; start without it") from None
+        if self._ahead is not None:
+            self._ahead.forget()
         self._position = head["position"]
-        self.talkers = tuple(
-            Talker(name, azimuth, elevation, distance) for name, azimuth, elevation, distance in head["talkers"]
-        )
+        self.talkers = _talkers(head["talkers"])
+        if head.get("asked") is not None:
+            self.set_bearings(_talkers(head["asked"]))
 
     def _make_stage(self) -> LiveStage:
         room = self.variant.room
@@ -246,6 +268,8 @@ class LiveSeparator:
         return CausalRoomStage(self._design, room, self.talkers)
 
     def _advance(self, samples: Floats) -> Floats:
+        if self._ahead is not None:
+            self._take(self._ahead.ready())
         out = self._stage.push(samples)
         self._position += samples.shape[1]
         return out
@@ -258,8 +282,19 @@ class LiveSeparator:
         try:
             self.set_bearings(found)
         except (InputError, UnsolvableError) as error:
-            at = self._position / self.sample_rate
-            warnings.warn(f"bearings at {at:.1f} s not taken over: {error}", UnmixWarning, stacklevel=4)
+            _tell_refused(self._position / self.sample_rate, error)
+
+    def _take(self, prepared: Prepared | None) -> None:
+        """Make a change that was prepared beside the audio."""
+        if prepared is None:
+            return
+        if prepared.change is not None:
+            prepared.change()
+            self.talkers = prepared.talkers
+        elif isinstance(prepared.error, InputError | UnsolvableError):
+            _tell_refused(prepared.at_s, prepared.error)
+        elif prepared.error is not None:
+            raise prepared.error
 
     def _checked(self, chunk: ArrayLike) -> Floats:
         given = np.asarray(chunk)
@@ -291,6 +326,18 @@ class LiveSeparator:
             self._fade,
         ]
         return hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
+
+
+def _tell_refused(at_s: float, error: Exception) -> None:
+    warnings.warn(f"bearings at {at_s:.1f} s not taken over: {error}", UnmixWarning, stacklevel=5)
+
+
+def _plain(talkers: Sequence[Talker]) -> list[list[str | float | None]]:
+    return [[t.name, t.azimuth, t.elevation, t.distance_m] for t in talkers]
+
+
+def _talkers(plain: Sequence[Sequence[Any]]) -> tuple[Talker, ...]:
+    return tuple(Talker(name, azimuth, elevation, distance) for name, azimuth, elevation, distance in plain)
 
 
 def track_source(talkers: Sequence[Talker], *, least_turn: float = LEAST_TURN) -> BearingSource:

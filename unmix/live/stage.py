@@ -6,7 +6,7 @@ back belongs to sample t - latency of the recording.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from typing import Any, Protocol
 
 import numpy as np
@@ -38,8 +38,12 @@ class LiveStage(Protocol):
     def flush(self) -> Floats:
         """The last `latency` samples, as if silence followed; the stage then stands at the start of a new stream."""
 
-    def steer(self, talkers: Sequence[Talker]) -> None:
-        """Change over to other bearings without a click; raises UnsolvableError and changes nothing when it cannot."""
+    def prepare(self, talkers: Sequence[Talker]) -> Callable[[], None]:
+        """Get ready for other bearings and return what changes over to them without a click.
+
+        This takes its time, changes nothing, and may run in another thread; what it returns takes next to none. Raises
+        UnsolvableError when it cannot.
+        """
 
     def state(self) -> State:
         """Everything that depends on what was pushed."""

@@ -61,6 +61,8 @@ DRIFT_PPM, DRIFT_SLIP = 2.0, 0.5
 
 HALF_WIDTH, KAISER_BETA = 512, 8.0
 """Of the windowed-sinc fractional delay: error under -80 dB up to 0.99 of the Nyquist frequency."""
+ADVANCED = 1 << 18
+"""Samples moved at a time."""
 PEAK_HALF_WIDTH = 64
 """Samples to either side of a peak that locate it."""
 
@@ -180,11 +182,7 @@ class OffsetFinder:
 
     def _cross(self, signal: Signals, start: int, S: Complexes, length: int, reach: int, offset: int) -> Complexes:
         """Weighted cross-spectrum of one stretch with the signal's samples that lie within `reach` of `offset`."""
-        first, last = start + offset - reach, start + offset + length + reach
-        stretch = np.zeros(last - first)
-        low, high = max(0, first), min(signal.size, last)
-        if low < high:
-            stretch[low - first : high - first] = signal[low:high]
+        stretch = _within(signal, start + offset - reach, start + offset + length + reach)
         return np.asarray(self._whiten(stretch, _transform_length(length, reach)) * S)
 
     def _whiten(self, stretch: Signals, n: int) -> Complexes:
@@ -241,22 +239,30 @@ def _interpolator(distance: Floats, half_width: int) -> Floats:
     )
 
 
-def advance(signal: Signals, samples: float, *, length: int | None = None) -> Floats:
+def advance(
+    signal: Signals, samples: float, *, length: int | None = None, out: NDArray[np.floating[Any]] | None = None
+) -> NDArray[np.floating[Any]]:
     """`signal` (samples,) moved earlier: y[n] = x(n + samples), n = 0..length - 1, zeros where x has no samples.
 
-    A fraction of a sample is made by band-limited interpolation.
+    A fraction of a sample is made by band-limited interpolation. The result goes into `out` (length,) where that is
+    given, in its precision.
     """
-    length = signal.size if length is None else length
+    moved = np.empty(signal.size if length is None else length) if out is None else out
     whole = round(samples)
     fraction = samples - whole
-    x = np.asarray(signal, dtype=np.float64)
-    margin = 0
-    if abs(fraction) > 1e-6:
-        margin = HALF_WIDTH
-        taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1, dtype=np.float64) + fraction, HALF_WIDTH)
-        x = scipy.signal.oaconvolve(x, taps)
-    moved = np.zeros(length)
-    low, high = max(0, -whole - margin), min(length, x.size - whole - margin)
-    if low < high:
-        moved[low:high] = x[low + whole + margin : high + whole + margin]
+    margin = HALF_WIDTH if abs(fraction) > 1e-6 else 0
+    taps = _interpolator(np.arange(-HALF_WIDTH, HALF_WIDTH + 1, dtype=np.float64) + fraction, HALF_WIDTH)
+    for first in range(0, moved.size, ADVANCED):
+        last = min(first + ADVANCED, moved.size)
+        x = _within(signal, first + whole - margin, last + whole + margin)
+        moved[first:last] = scipy.signal.oaconvolve(x, taps, mode="valid") if margin else x
     return moved
+
+
+def _within(signal: Signals, first: int, last: int) -> Floats:
+    """Samples first..last - 1 of a signal, zeros where it has none."""
+    stretch = np.zeros(last - first)
+    low, high = max(0, first), min(signal.size, last)
+    if low < high:
+        stretch[low - first : high - first] = signal[low:high]
+    return stretch

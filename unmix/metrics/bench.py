@@ -32,7 +32,7 @@ class Bench:
         Samples by which every signal is held back for BSS Eval, whose filters are causal.
     """
 
-    def __init__(self, references: Floats, sample_rate: int, *, filter_length: int, guard: int) -> None:
+    def __init__(self, references: Signals, sample_rate: int, *, filter_length: int, guard: int) -> None:
         self.references = references
         self.sample_rate = sample_rate
         self.filter_length = filter_length
@@ -40,21 +40,17 @@ class Bench:
 
     @cached_property
     def set(self) -> ReferenceSet:
-        """The references for BSS Eval, with room for the guard at the end."""
-        return ReferenceSet(np.pad(self.references, ((0, 0), (0, self.guard))), filter_length=self.filter_length)
+        """The references for BSS Eval."""
+        return ReferenceSet(self.references, filter_length=self.filter_length, guard=self.guard)
 
     @cached_property
     def speech(self) -> tuple[SpeechReference, ...]:
         """The references for STOI and ESTOI."""
         return tuple(SpeechReference(reference, self.sample_rate) for reference in self.references)
 
-    def hold_back(self, signals: Signals) -> Signals:
-        """`signals` (signals, samples) later by the guard."""
-        return np.pad(signals, ((0, 0), (self.guard, 0)))
-
     def split(self, signals: Signals) -> Distortion:
         """SDR, SIR and SAR of `signals` (signals, samples) against every reference."""
-        return self.set.split(self.hold_back(signals))
+        return self.set.split(signals)
 
     def figures(self, signal: Signals, distortion: Distortion, row: int, talker: int) -> Figures:
         """All figures of one signal (samples,) against one reference; `distortion` holds it in row `row`."""
@@ -89,7 +85,9 @@ def difference_to_mir_eval_db(bench: Bench, signals: Signals, ratios: Floats) ->
         warnings.simplefilter("ignore", FutureWarning)
         try:
             theirs = mir_eval.separation.bss_eval_sources(
-                bench.set.references, bench.hold_back(signals), compute_permutation=False
+                np.pad(bench.references, ((0, 0), (0, bench.guard))),
+                np.pad(signals, ((0, 0), (bench.guard, 0))),
+                compute_permutation=False,
             )
         except (ValueError, np.linalg.LinAlgError) as error:
             return None, f"mir_eval refuses: {str(error).splitlines()[0]}"

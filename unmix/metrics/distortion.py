@@ -25,8 +25,8 @@ SI-SDR [2]_ allows one gain instead of a filter: a = <e, s> / |s|^2, SI-SDR = |a
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -50,6 +50,9 @@ EXACT = "nothing is left but rounding: the estimate is the reference, filtered"
 DEPENDENT = 1e-4
 """A reference of whose innovation the others leave less than this (-40 dB) is a filtered copy of them."""
 
+CHUNK = 1 << 18
+"""Samples worked on at a time."""
+
 SINGULAR, RIDGE = 1e-14, 1e-13
 """Where pivots differ by more than this (a reference lacks energy in part of its band) G gets a ridge."""
 
@@ -69,13 +72,15 @@ def describe_unusable(signal: Signals) -> str | None:
 class Distortion:
     """Ratios of every estimate against every reference, (estimates, references), in dB; NaN where undefined.
 
-    `undefined` gives the reason, keyed by (figure, estimate, reference).
+    `undefined` gives the reason, keyed by (figure, estimate, reference). `filters` are those that make an estimate's
+    parts of the references, for `ReferenceSet.parts`: keyed by (estimate, reference), two rows of filters each.
     """
 
     sdr_db: Floats
     sir_db: Floats
     sar_db: Floats
     undefined: dict[tuple[str, int, int], str]
+    filters: dict[tuple[int, int], Floats] = field(default_factory=dict)
 
 
 class ReferenceSet:
@@ -88,6 +93,8 @@ class ReferenceSet:
         figures against it are undefined, those against the others are as if it were not there.
     filter_length : int
         Taps L of the allowed filter.
+    guard : int
+        Samples by which estimates are held back first, the filters being causal.
 
     Attributes
     ----------
@@ -95,7 +102,7 @@ class ReferenceSet:
         Whether a reference is so nearly band-limited that a ridge was needed to factor G.
     """
 
-    def __init__(self, references: Signals, *, filter_length: int = FILTER_LENGTH) -> None:
+    def __init__(self, references: Signals, *, filter_length: int = FILTER_LENGTH, guard: int = 0) -> None:
         self.references = references
         self.filter_length = filter_length
         self.unusable = {
@@ -105,15 +112,15 @@ class ReferenceSet:
         self.ridged = False
         self.dependent = False
         self._partial_factors: dict[int, Floats] = {}
-        self._copies = DelayedCopies(references, self._usable, filter_length)
-        self._too_short = references.shape[1] < max(1, len(self._usable)) * filter_length
+        self._copies = DelayedCopies(references, self._usable, filter_length, guard)
+        self._too_short = self._copies.samples < max(1, len(self._usable)) * filter_length
         if self._usable and not self._too_short:
             self._factor()
 
     def _factor(self) -> None:
         K = len(self._usable)
         # r[i, j, d] = sum_n s_i[n] s_j[n - d]; the delayed copies l of s_i and l' of s_j have the product r at l' - l.
-        r = self._copies.correlate(self.references[self._usable])
+        r = self._copies.correlate_with_each_other()
         scale = r[np.arange(K), np.arange(K), 0]
         self._scale = np.sqrt(scale)
         r = r / (self._scale[:, None, None] * self._scale[None, :, None])
@@ -150,21 +157,24 @@ class ReferenceSet:
         shape = (len(estimates), len(self.references))
         sdr, sir, sar = (np.full(shape, np.nan) for _ in range(3))
         undefined: dict[tuple[str, int, int], str] = {}
+        kept: dict[tuple[int, int], Floats] = {}
         bad = {e: why for e, signal in enumerate(estimates) if (why := describe_unusable(signal)) is not None}
         good = [e for e in range(len(estimates)) if e not in bad]
         if good and self._usable and not self._too_short:
-            target, interference, artifacts = self._energies(estimates[good])
+            used = estimates if len(good) == len(estimates) else estimates[good]
+            target, interference, artifacts, filters = self._energies(used)
             cells = np.ix_(good, self._usable)
             sdr[cells] = _ratio_db(target, interference + artifacts[:, None])
             sir[cells] = _ratio_db(target, interference)
             sar[cells] = _ratio_db(target + interference, artifacts[:, None])
+            kept = {(e, k): filters[row, i] for row, e in enumerate(good) for i, k in enumerate(self._usable)}
         for e, k in np.ndindex(*shape):
             for figure, values in (("sdr_db", sdr), ("sir_db", sir), ("sar_db", sar)):
                 reason = self._why_undefined(figure, e, k, bad, float(values[e, k]))
                 if reason is not None:
                     values[e, k] = np.nan
                     undefined[figure, e, k] = reason
-        return Distortion(sdr, sir, sar, undefined)
+        return Distortion(sdr, sir, sar, undefined, kept)
 
     def _why_undefined(self, figure: str, e: int, k: int, bad: dict[int, str], value: float) -> str | None:
         if k in self.unusable:
@@ -173,7 +183,7 @@ class ReferenceSet:
             return f"the estimate {bad[e]}"
         if self._too_short:
             needed = len(self._usable) * self.filter_length
-            return f"too short: {self.references.shape[1]} samples, and the filters have {needed} taps"
+            return f"too short: {self._copies.samples} samples, and the filters have {needed} taps"
         if figure == "sir_db" and len(self._usable) == 1:
             return "there is one reference, so nothing can interfere"
         if figure == "sir_db" and self.dependent:
@@ -194,7 +204,7 @@ class ReferenceSet:
         good = [e for e, signal in enumerate(estimates) if describe_unusable(signal) is None]
         if not good or not self._usable or self._too_short:
             return by_itself, alone
-        D = self._scaled_correlations(estimates[good])
+        D = self._scaled_correlations(estimates if len(good) == len(estimates) else estimates[good])
         c = self._joint_filters(D).T.reshape(D.shape)
         for i, k in enumerate(self._usable):
             own = scipy.linalg.cho_solve((self._own_factors[i], True), D[:, i].T, check_finite=False)
@@ -208,23 +218,17 @@ class ReferenceSet:
             alone[good, k] = self._quadratic(difference, self._lags)
         return by_itself, alone
 
-    def parts(self, estimate: Signals, talker: int) -> tuple[Floats, Floats]:
-        """s_target and e_interf of one estimate (samples,) against one reference, as signals of its length.
+    def parts(self, split: Distortion, estimate: int, talker: int) -> Iterator[Floats]:
+        """s_target and e_interf of an estimate that was split, against a reference: stretch by stretch, (2, n) each.
 
-        For an estimate and a reference of which the ratios are defined.
+        For a pair of which the ratios are defined. Together the stretches are as long as an estimate held back.
         """
-        i = self._usable.index(talker)
-        D = self._scaled_correlations(estimate[None])
-        filters = self._joint_filters(D).reshape(len(self._usable), -1) / self._scale[:, None]
-        own = scipy.linalg.cho_solve((self._own_factors[i], True), D[0, i], check_finite=False) / self._scale[i]
-        samples = self.references.shape[1]
-
-        def filtered(taps: Floats, k: int) -> Floats:
-            return np.asarray(scipy.signal.oaconvolve(self.references[k], taps)[:samples])
-
-        target = filtered(own, talker)
-        explained = sum(filtered(taps, k) for taps, k in zip(filters, self._usable, strict=True))
-        return target, np.asarray(explained - target)
+        left = self._copies.samples
+        for stretch in self._copies.filtered(split.filters[estimate, talker]):
+            yield stretch.reshape(2, -1)[:, :left]
+            left -= stretch[0].size
+            if left <= 0:
+                return
 
     def _factor_without(self, i: int) -> Floats:
         """Factor of G without the rows and columns of usable reference i."""
@@ -240,21 +244,27 @@ class ReferenceSet:
         c = scipy.linalg.cho_solve((self._factor_all, True), D.reshape(len(D), -1).T, check_finite=False)
         return np.asarray(c)
 
-    def _energies(self, estimates: Signals) -> tuple[Floats, Floats, Floats]:
-        """|s_target|^2 and |e_interf|^2, (estimates, usable references), and |e_artif|^2, (estimates,)."""
+    def _energies(self, estimates: Signals) -> tuple[Floats, Floats, Floats, Floats]:
+        """|s_target|^2 and |e_interf|^2, (estimates, usable references), |e_artif|^2, (estimates,), and filters.
+
+        Of each estimate and reference these make s_target and e_interf: (estimates, references, 2, references, L).
+        """
         E, K, L = len(estimates), len(self._usable), self.filter_length
         D = self._scaled_correlations(estimates)
         c = self._joint_filters(D)
-        target = np.empty((E, K))
+        target, parts = np.empty((E, K)), np.zeros((E, K, 2, K, L))
         differences = np.repeat(c[:, None, :], K, axis=1)
         for j in range(K):
             own = slice(j * L, (j + 1) * L)
             c_j = scipy.linalg.cho_solve((self._own_factors[j], True), D[:, j].T, check_finite=False)
             target[:, j] = np.einsum("le,el->e", c_j, D[:, j])
             differences[own, j] -= c_j
-        interference = self._quadratic(differences.reshape(K, L, K, E).transpose(3, 2, 0, 1), self._lags)
+            parts[:, j, 0, j] = c_j.T
+        parts[:, :, 1] = differences.reshape(K, L, K, E).transpose(3, 2, 0, 1)
+        interference = self._quadratic(parts[:, :, 1], self._lags)
         filters = c.T.reshape(E, K, L) / self._scale[:, None]
-        return target, interference, self._copies.residual_energy(estimates, filters)
+        artifacts = self._copies.residual_energy(estimates, filters)
+        return target, interference, artifacts, parts / self._scale[:, None]
 
     def _quadratic(self, c: Floats, lags: Floats) -> Floats:
         """c' G c of filters c (..., references, L) through the transform of G's correlations `lags`: (...).
@@ -294,12 +304,22 @@ def si_sdr_db(estimate: Signals, reference: Signals) -> tuple[float | None, str 
         why = describe_unusable(signal)
         if why is not None:
             return None, f"the {name} {why}"
-    e, s = np.asarray(estimate, dtype=np.float64), np.asarray(reference, dtype=np.float64)
-    gain = float(e @ s) / float(s @ s)
-    target = gain * s
-    numerator, denominator = float(target @ target), float(np.sum((target - e) ** 2))
+    gain = sum(float(e @ s) for e, s in _chunks(estimate, reference)) / sum(
+        float(s @ s) for _, s in _chunks(estimate, reference)
+    )
+    numerator = denominator = 0.0
+    for e, s in _chunks(estimate, reference):
+        target = gain * s
+        numerator += float(target @ target)
+        denominator += float(np.sum(np.square(target - e)))
     if numerator <= 10.0 ** (-ROUNDING_DB / 10.0) * denominator:
         return None, "the estimate is orthogonal to the reference"
     if denominator <= 10.0 ** (-ROUNDING_DB / 10.0) * numerator:
         return None, "nothing is left but rounding: the estimate is the reference, scaled"
     return 10.0 * float(np.log10(numerator / denominator)), None
+
+
+def _chunks(*signals: Signals) -> Iterator[tuple[Floats, ...]]:
+    """Signals (samples,) in double precision, a stretch at a time."""
+    for first in range(0, signals[0].size, CHUNK):
+        yield tuple(np.asarray(s[first : first + CHUNK], dtype=np.float64) for s in signals)

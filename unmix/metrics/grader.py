@@ -42,6 +42,14 @@ class _Before:
     best_channel: int | None
 
 
+@dataclass(frozen=True)
+class _Understood:
+    """The unprocessed microphone's figures of understanding for one talker, and STOI and ESTOI of its segments."""
+
+    figures: SpeechFigures
+    segments: Floats
+
+
 class Grader:
     """Grades the estimates of one scene, variant after variant.
 
@@ -96,10 +104,11 @@ class Grader:
             references, sample_rate, unprocessed=unprocessed, guard=self.guard, max_offset_s=max_offset_s
         )
         self._benches: dict[Span, Bench] = {}
+        self._splits: dict[Span, Distortion] = {}
         self._befores: dict[Span, list[_Before]] = {}
         self._image_sets: dict[Span, ReferenceSet] = {}
         self._speech_benches: dict[Span, SpeechBench] = {}
-        self._speech_befores: dict[tuple[Span, int], SpeechFigures] = {}
+        self._speech_befores: dict[tuple[Span, int], _Understood] = {}
 
     def grade(
         self,
@@ -149,7 +158,7 @@ class Grader:
             self._talker(k, time, offsets, matched, aligned, distortion, leakage) for k in range(len(self.names))
         )
         if speech:
-            talkers = tuple(self._with_speech(talker, k, time, aligned) for k, talker in enumerate(talkers))
+            talkers = tuple(self._with_speech(talker, k, time, aligned, distortion) for k, talker in enumerate(talkers))
         return Grades(
             talkers=talkers,
             against=self.against,
@@ -167,7 +176,7 @@ class Grader:
             ),
         )
 
-    def aligned(self, estimates: Signals, matched: Matched) -> tuple[Floats, Floats, Floats | None]:
+    def aligned(self, estimates: Signals, matched: Matched) -> tuple[Signals, Signals, Floats | None]:
         """What is graded, for figures of one's own: references, estimates, and the unprocessed microphone.
 
         Moved to one time and cut as `grade` does it: (references, n), (estimates, n) and (n,), which is None when the
@@ -179,14 +188,15 @@ class Grader:
 
     def _bench(self, time: Span) -> Bench:
         if time not in self._benches:
-            length = time.stop - time.start
-            moved = [
-                advance(s, time.start - base, length=length) if describe_unusable(s) is None else s[:length]
-                for s, base in zip(self.references, time.bases, strict=True)
-            ]
+            moved = np.empty((len(self.references), time.stop - time.start), dtype=self._clock.precision)
+            for row, s, base in zip(moved, self.references, time.bases, strict=True):
+                if describe_unusable(s) is None:
+                    advance(s, time.start - base, out=row)
+                else:
+                    row[:] = s[: row.size]
             _drop_oldest(self._benches)
             self._benches[time] = Bench(
-                np.array(moved, dtype=np.float64),
+                moved,
                 self.sample_rate,
                 filter_length=self.filter_length,
                 guard=self.guard,
@@ -199,7 +209,7 @@ class Grader:
         time: Span,
         offsets: dict[tuple[int, int], Offset],
         matched: Matched,
-        aligned: Floats,
+        aligned: Signals,
         distortion: Distortion,
         leakage: Floats | None,
     ) -> TalkerGrade:
@@ -242,23 +252,45 @@ class Grader:
             leakage_db=leaks,
         )
 
-    def _with_speech(self, talker: TalkerGrade, k: int, time: Span, aligned: Floats) -> TalkerGrade:
+    def _with_speech(
+        self, talker: TalkerGrade, k: int, time: Span, aligned: Signals, distortion: Distortion
+    ) -> TalkerGrade:
         """The grade with figures of understanding."""
         bench, e = self._speech_bench(time), talker.estimate
         after = SpeechFigures.none_because("no estimate was matched to this talker")
         if e is not None:
-            after = bench.figures(aligned[e], talker, k)
+            after = bench.figures(aligned[e], talker, distortion, e, k)
         before, segments = SpeechFigures.none_because("the unprocessed recording was not given"), None
         if self.unprocessed is not None:
-            microphone = np.asarray(self.unprocessed[time.start : time.stop], dtype=np.float64)
-            if (time, k) not in self._speech_befores:
-                _drop_oldest(self._speech_befores, len(self.names) * KEPT)
-                self._speech_befores[time, k] = bench.figures(microphone, talker.unprocessed, k)
-            before = self._speech_befores[time, k]
-            segments = None if e is None else bench.segments(aligned[e], microphone, k)
+            understood = self._understood(time, k, talker.unprocessed)
+            before, parts = understood.figures, bench.segments[k]
+            segments = None if e is None else parts.gains(parts.figures(aligned[e]), understood.segments)
         gain = after.gain_over(before)
         grade = SpeechGrade(after=after, before=before, gain=gain, speech_s=bench.speech_s(k), segments=segments)
         return replace(talker, speech=grade)
+
+    def _understood(self, time: Span, k: int, known: Figures) -> _Understood:
+        """The unprocessed microphone's figures of understanding; the same for every variant."""
+        if (time, k) not in self._speech_befores:
+            microphone, bench = self._microphone(time), self._speech_bench(time)
+            _drop_oldest(self._speech_befores, len(self.names) * KEPT)
+            self._speech_befores[time, k] = _Understood(
+                bench.figures(microphone, known, self._split(time), 0, k), bench.segments[k].figures(microphone)
+            )
+        return self._speech_befores[time, k]
+
+    def _microphone(self, time: Span) -> Signals:
+        """The unprocessed microphone, cut. References were moved to where it hears their talkers, so it stays."""
+        if self.unprocessed is None:
+            raise TypeError("the unprocessed recording was not given")
+        return self.unprocessed[time.start : time.stop]
+
+    def _split(self, time: Span) -> Distortion:
+        """The unprocessed microphone against every reference."""
+        if time not in self._splits:
+            _drop_oldest(self._splits)
+            self._splits[time] = self._bench(time).split(self._microphone(time)[None])
+        return self._splits[time]
 
     def _speech_bench(self, time: Span) -> SpeechBench:
         if time not in self._speech_benches:
@@ -275,30 +307,35 @@ class Grader:
         if time not in self._befores:
             _drop_oldest(self._befores)
             talkers = range(len(self.names))
-            unprocessed, best = self._unprocessed(time), self._best_microphones(time)
+            unprocessed = self._unprocessed(time)
+            best = self._best_microphones(time, unprocessed)
             self._befores[time] = [_Before(unprocessed[k], *best[k]) for k in talkers]
         return self._befores[time]
 
     def _unprocessed(self, time: Span) -> list[Figures]:
         if self.unprocessed is None:
             return [Figures.none_because("the unprocessed recording was not given") for _ in self.names]
-        bench, signal = self._bench(time), self.unprocessed[time.start : time.stop]
-        split = bench.split(signal[None])
-        # Each reference was moved to where the microphone hears its talker, so the microphone stays where it is.
+        bench, signal, split = self._bench(time), self._microphone(time), self._split(time)
         return [bench.figures(signal, split, 0, k) for k in range(len(self.names))]
 
-    def _best_microphones(self, time: Span) -> list[tuple[Figures | None, int | None]]:
+    def _best_microphones(self, time: Span, unprocessed: list[Figures]) -> list[tuple[Figures | None, int | None]]:
         """Figures and channel of the microphone with the highest SDR for each talker."""
         if self.microphones is None:
             return [(None, None) for _ in self.names]
         bench = self._bench(time)
-        split = bench.split(self.microphones[:, time.start : time.stop])
+        same = [
+            self.unprocessed is not None and np.array_equal(channel, self.unprocessed) for channel in self.microphones
+        ]
+        split = self._split(time) if all(same) else bench.split(self.microphones[:, time.start : time.stop])
         found: list[tuple[Figures | None, int | None]] = []
         for k, sdr in enumerate(split.sdr_db.T):
             if not np.isfinite(sdr).any():
                 found.append((Figures.none_because(split.undefined["sdr_db", 0, k]), None))
                 continue
             best = int(np.nanargmax(sdr))
+            if same[best]:
+                found.append((unprocessed[k], best))
+                continue
             offset = self._clock.finders[k].find(self.microphones[best]).samples
             late = 0.0 if offset is None else offset - time.bases[k]
             signal = advance(self.microphones[best], time.start + late, length=time.stop - time.start)
@@ -306,7 +343,7 @@ class Grader:
         return found
 
     def _leakage(
-        self, aligned: Floats, matched: Matched, time: Span, image_outputs: Signals | None
+        self, aligned: Signals, matched: Matched, time: Span, image_outputs: Signals | None
     ) -> tuple[Floats | None, str | None]:
         if image_outputs is not None:
             return leakage_of_outputs_db(image_outputs), "filters"
@@ -314,16 +351,18 @@ class Grader:
             return None, None
         if time not in self._image_sets:
             _drop_oldest(self._image_sets)
-            images = np.pad(self.images[:, time.start : time.stop], ((0, 0), (0, self.guard)))
-            self._image_sets[time] = ReferenceSet(images, filter_length=self.filter_length)
+            self._image_sets[time] = ReferenceSet(
+                self.images[:, time.start : time.stop], filter_length=self.filter_length, guard=self.guard
+            )
         given = [k for k, e in enumerate(matched) if e is not None]
         leakage = np.full((len(matched), len(matched)), np.nan)
-        signals = self._bench(time).hold_back(aligned[[e for e in matched if e is not None]])
+        order = [e for e in matched if e is not None]
+        signals = aligned if order == list(range(len(aligned))) else aligned[order]
         leakage[given] = projected_leakage_db(signals, self._image_sets[time], given)
         return leakage, "projection"
 
     def _cross_check(
-        self, time: Span, aligned: Floats, distortion: Distortion, matched: Matched
+        self, time: Span, aligned: Signals, distortion: Distortion, matched: Matched
     ) -> tuple[float | None, str | None]:
         order = [e for e in matched if e is not None]
         if len(order) < len(matched):
@@ -336,7 +375,7 @@ class Grader:
         time: Span,
         offsets: dict[tuple[int, int], Offset],
         matched: Matched,
-        aligned: Floats,
+        aligned: Signals,
         why_no_cross_check: str | None,
     ) -> Iterator[str]:
         for k, e in enumerate(matched):

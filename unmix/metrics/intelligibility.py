@@ -188,7 +188,8 @@ class _Segments:
 
     def unit_scale(self, loudest: float) -> Floats:
         """Factors that make centred segments as long as 1; 0 for those that are rounding only."""
-        return np.divide(1.0, self.spread, out=np.zeros_like(self.spread), where=self.spread > SILENT * loudest)
+        heard = self.spread > SILENT * loudest
+        return np.asarray(np.divide(1.0, self.spread, out=np.zeros_like(self.spread), where=heard))
 
 
 def _correlation(x: _Segments, y: _Segments) -> float:

@@ -8,27 +8,33 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.metrics.bands import importance_weighted_db
+from unmix.metrics.bands import weighted_ratio_db
 from unmix.metrics.bench import Bench
+from unmix.metrics.distortion import Distortion
 from unmix.metrics.equivalent import EquivalentRatio
 from unmix.metrics.grades import Figures
 from unmix.metrics.information import InformationReference
 from unmix.metrics.intelligibility import SpeechReference
-from unmix.metrics.segments import SegmentGains, segment_gains
+from unmix.metrics.segments import SegmentReference
 from unmix.metrics.speech_figures import SPEECH_FIGURES, SpeechFigures, SpeechGrade
 from unmix.metrics.words import words_dantale_percent, words_ieee_percent
 
 __all__ = ["SpeechBench", "disagreements"]
 
-Floats = NDArray[np.float64]
+Signals = NDArray[np.floating[Any]]
 
 
 LONGEST_S = 300.0
 """Of a longer recording, equivalent ratio and bits are of the stretch of this length in which the talker is loudest."""
+
+
+CHUNK = 1 << 18
+"""Samples worked on at a time."""
 
 
 class SpeechBench:
@@ -61,13 +67,18 @@ class SpeechBench:
             EquivalentRatio(self._bench.references[:, p], k, self._speech[k]) for k, p in enumerate(self._stretches)
         ]
 
+    @cached_property
+    def segments(self) -> list[SegmentReference]:
+        """The references in segments of 3 s."""
+        return [SegmentReference(s, self._bench.sample_rate) for s in self._bench.references]
+
     def speech_s(self, talker: int) -> float:
         """Seconds of speech that the measure in bits rests on; 0 when it is undefined."""
         reference = self._information[talker]
         return reference.speech_s if reference.undefined is None else 0.0
 
-    def figures(self, signal: Floats, known: Figures, talker: int) -> SpeechFigures:
-        """The figures of one signal (samples,) whose STOI and SIR are `known`."""
+    def figures(self, signal: Signals, known: Figures, split: Distortion, row: int, talker: int) -> SpeechFigures:
+        """The figures of one signal (samples,) whose STOI and SIR are `known`; `split` holds it in row `row`."""
         undefined: dict[str, str] = {}
         words: tuple[float | None, float | None] = (None, None)
         if known.stoi is not None:
@@ -79,7 +90,7 @@ class SpeechBench:
         stoi = known.stoi if whole else self._speech[talker].compare(signal[part]).stoi
         ratio, why_no_ratio = self._equivalent[talker].ratio_db(stoi)
         bits, why_no_bits = self._information[talker].bits_per_s(signal[part])
-        sir, why_no_sir = self._weighted(signal, known, talker)
+        sir, why_no_sir = self._weighted(known, split, row, talker)
         for name, why in zip(SPEECH_FIGURES[2:], (why_no_ratio, why_no_sir, why_no_bits), strict=True):
             if why is not None:
                 undefined[name] = why
@@ -92,24 +103,30 @@ class SpeechBench:
             undefined=undefined,
         )
 
-    def _weighted(self, signal: Floats, known: Figures, talker: int) -> tuple[float | None, str | None]:
+    def _weighted(self, known: Figures, split: Distortion, row: int, talker: int) -> tuple[float | None, str | None]:
         if known.sir_db is None:
             return None, known.undefined.get("sir_db", "SIR is undefined")
-        target, interference = self._bench.set.parts(self._bench.hold_back(signal[None])[0], talker)
-        ratio = importance_weighted_db(target, interference, self._bench.sample_rate)
+        samples = self._bench.references.shape[1] + self._bench.guard
+        ratio = weighted_ratio_db(self._bench.set.parts(split, row, talker), samples, self._bench.sample_rate)
         return ratio, None if ratio is not None else "no band holds both talker and interference"
 
-    def segments(self, after: Floats, before: Floats, talker: int) -> SegmentGains:
-        """Gains over segments of 3 s."""
-        return segment_gains(self._bench.references[talker], after, before, self._bench.sample_rate)
 
-
-def _loudest(reference: Floats, length: int) -> slice:
+def _loudest(reference: Signals, length: int) -> slice:
     """The stretch of `length` samples with the most energy, or all of a shorter signal."""
     if reference.size <= length:
         return slice(0, reference.size)
-    energy = np.concatenate([[0.0], np.cumsum(np.square(np.nan_to_num(reference)))])
-    start = int(np.argmax(energy[length:] - energy[:-length]))
+    best, start, energy = 0.0, 0, 0.0
+    for first in range(0, reference.size - length, CHUNK):
+        last = min(first + CHUNK, reference.size - length)
+        entering, leaving = (
+            np.square(np.nan_to_num(reference[a : a + last - first]), dtype=np.float64) for a in (first + length, first)
+        )
+        # Beyond that of the first stretch: what has come in since, less what has gone out.
+        energies = energy + np.cumsum(entering - leaving)
+        highest = int(np.argmax(energies))
+        if energies[highest] > best:
+            best, start = float(energies[highest]), first + highest + 1
+        energy = float(energies[-1])
     return slice(start, start + length)
 
 

@@ -22,6 +22,8 @@ Signals = NDArray[np.floating[Any]]
 Matched = list[int | None]
 GRID_S = 0.064
 """Stretches start on this grid, five frames of STOI long, whose figures change with where frames begin."""
+LONG_S = 600.0
+"""Longer signals are kept in single precision once moved (rounded at -150 dB of each sample), not to fill memory."""
 Offsets = dict[tuple[int, int], Offset]
 
 
@@ -53,6 +55,8 @@ class Timebase:
     ----------
     finders : list of OffsetFinder
         One per reference.
+    precision : type
+        Of signals once they are moved.
     heard : list of Offset, or None
         By how much the microphone is behind each reference; None without a microphone.
     """
@@ -68,6 +72,7 @@ class Timebase:
     ) -> None:
         self.guard = guard
         self._grid = GRID_S * sample_rate
+        self.precision = np.float32 if references.shape[1] > LONG_S * sample_rate else np.float64
         self.finders = [OffsetFinder(s, sample_rate, max_offset_s=max_offset_s) for s in references]
         self.heard = None if unprocessed is None else [finder.find(unprocessed) for finder in self.finders]
 
@@ -80,7 +85,7 @@ class Timebase:
         )
         return {(e, k): self.finders[k].find(estimates[e]) for e, k in pairs}
 
-    def align(self, estimates: Signals, offsets: Offsets, matched: Matched) -> tuple[Span, Floats]:
+    def align(self, estimates: Signals, offsets: Offsets, matched: Matched) -> tuple[Span, Signals]:
         """The time to grade by, and the estimates moved to it and cut, (estimates, stop - start)."""
         behind = {k: offsets[e, k].samples for k, e in enumerate(matched) if e is not None}
         bases = self._bases(behind)
@@ -90,9 +95,10 @@ class Timebase:
             if e is not None and offset is not None:
                 latencies[e] = offset - bases[k]
         span = self._span(bases, latencies, estimates.shape[1])
-        length = span.stop - span.start
-        moved = [advance(e, span.start + d, length=length) for e, d in zip(estimates, latencies, strict=True)]
-        return span, np.array(moved).reshape(len(estimates), length)
+        moved = np.empty((len(estimates), span.stop - span.start), dtype=self.precision)
+        for row, e, latency in zip(moved, estimates, latencies, strict=True):
+            advance(e, span.start + latency, out=row)
+        return span, moved
 
     def _bases(self, behind: dict[int, float | None]) -> tuple[float, ...]:
         """Where each reference goes: to its talker at the microphone, else by its estimate, else where it is."""

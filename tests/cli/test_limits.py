@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from tests.cli.conftest import Run
@@ -37,3 +38,29 @@ def test_a_missing_array_is_one_line(run: Run, tmp_path: Path) -> None:
     ran = run("limits", tmp_path / "nothing.toml")
     assert ran.status == 1
     assert ran.err.count("\n") == 1 and "no such file" in ran.err
+
+
+def test_trade_offs_of_the_presets(run: Run, array: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    from unmix.export import tradeoffs
+
+    whole, asked = tradeoffs.measure_tradeoffs, {}
+
+    def measured(array, talkers, **options):  # type: ignore[no-untyped-def]
+        asked.update(options, azimuth_deg=[float(np.degrees(t.azimuth)) for t in talkers])
+        return whole(array, talkers, ["delay-and-sum"], seconds=1.0, **options)
+
+    monkeypatch.setattr(tradeoffs, "measure_tradeoffs", measured)
+    picture = array.parent / "t.svg"
+    given = ("limits", array, "--tradeoffs", picture, "--room", 0.4, 75.6, 1.0, "--snr", 25)
+    ran = run(*given, "--sweep-separation", 60)
+    assert ran.status == 0, ran.err
+    assert "Presets for a device" in ran.out and "T20 0.4 s" in ran.out and f"Written: {picture}" in ran.out
+    assert "latency of the filters" in picture.read_text()
+    assert asked["azimuth_deg"] == pytest.approx([30.0, -30.0])
+    assert asked["size_m"] == pytest.approx([6.0, 4.5, 2.8]) and asked["snr_db"] == 25.0
+    tree = run(*given, "--overwrite", "--json").json
+    assert {p["variant"] for p in tree["tradeoffs"]["points"]} == {"delay-and-sum"}
+    again = run(*given)
+    assert again.status == 1 and "exists already" in again.err
+    crowded = run("limits", array, "--tradeoffs", array.parent / "u.svg", "--talkers", 4, "--sweep-separation", 120)
+    assert crowded.status == 1 and "do not fit around the array" in crowded.err

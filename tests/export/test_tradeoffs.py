@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from tests.conftest import circle
+from tests.test_sofa import free_field
 from unmix.errors import InputError, UnsolvableError
 from unmix.export.shorten import shorten_to
 from unmix.export.sir import speech_spectra
@@ -43,6 +46,37 @@ def test_the_model_beats_delays_alone_and_those_the_microphone(found: Tradeoffs)
     best = {v: max(p.sir_db or -99.0 for p in found.along("latency", v)) for v in found.variants}
     assert found.unprocessed_sir_db is not None
     assert best["model"] > best["delay-and-sum"] + 20.0 > found.unprocessed_sir_db + 15.0
+
+
+def test_a_summary_names_the_least_that_will_do(found: Tradeoffs) -> None:
+    line = found.summary("model", loss_db=3.0)
+    points = [p for p in found.points if p.variant == "model" and p.sir_db is not None]
+    best = max(p.sir_db or -99.0 for p in points)
+    assert line.best_db == best
+    for axis, least, cost in (
+        ("latency", line.latency_ms, lambda p: p.latency_ms),
+        ("work", line.mac_per_s, lambda p: p.mac_per_s),
+        ("word", line.bits, lambda p: p.bits),
+    ):
+        along = [p for p in points if p.axis == axis]
+        assert least in [cost(p) for p in along if p.sir_db >= best - 3.0]
+        assert all(p.sir_db < best - 3.0 for p in along if cost(p) < least)
+    # Eight bits are too few for the model, and more loss allowed asks for no more.
+    assert line.bits is not None and line.bits > 8
+    wide = found.summary("model", loss_db=20.0)
+    assert wide.mac_per_s is not None and line.mac_per_s is not None and wide.mac_per_s < line.mac_per_s
+
+
+def test_plain_values_are_read_back(found: Tradeoffs) -> None:
+    assert Tradeoffs.from_dict(json.loads(json.dumps(found.to_dict()))) == found
+    with pytest.raises(InputError, match=r"trade-offs: .*points.* export again"):
+        Tradeoffs.from_dict({"sample_rate": 16000})
+
+
+def test_measured_responses_are_refused_in_one_line() -> None:
+    plain = circle(3)
+    with pytest.raises(InputError, match="not for measured responses; give the array as positions"):
+        measure_tradeoffs(replace(plain, responses=free_field(plain)), SEATS, sample_rate=RATE)
 
 
 def test_the_picture_is_drawn(found: Tradeoffs, tmp_path: Path) -> None:

@@ -18,10 +18,13 @@ from unmix.cli.common import (
     say,
 )
 from unmix.cli.presets import complete_variant
+from unmix.cli.reporting import REPORT, no_report_option, refuse_report
 from unmix.cli.seats import bearing_option, who_and_where
+from unmix.cli.tradeoffs import check_picture, measured_tradeoffs, print_tradeoffs, save_tradeoffs
 
 if TYPE_CHECKING:
     from unmix.export.job import Exported
+    from unmix.export.tradeoffs import Tradeoffs
 
 __all__ = ["command"]
 
@@ -56,8 +59,9 @@ WORDS: list[Any] = ["float32", "s24", "s16", "s12", "s8"]
     type=click.FloatRange(0.0, 1.5),
     default=0.3,
     show_default=True,
-    help="Reverberation time of the picture's room; 0: none.",
+    help="Reverberation time of the picture's and the report's room; 0: none.",
 )
+@no_report_option
 @overwrite_option
 @json_option
 def command(**options: Any) -> None:
@@ -65,23 +69,38 @@ def command(**options: Any) -> None:
 
     SCENE_OR_ARRAY is a scene file, whose array, talkers and rate are taken, or an array file with --bearing for each
     talker and --rate. Tap length follows from --loss-db. Every figure is by formula and measured on speech, without a
-    room; they stand in export.json, which --json prints.
+    room; they stand in export.json, which --json prints. The report compares the presets on the same array, in a room.
     """
-    plot, t20_s, as_json = (options.pop(name) for name in ("plot", "plot_t20_s", "as_json"))
+    plot, t20_s, no_report, as_json = (options.pop(n) for n in ("plot", "plot_t20_s", "no_report", "as_json"))
+    source, bearings, out, overwrite = (options[n] for n in ("source", "bearings", "out", "overwrite"))
     if plot is not None:
-        _check_picture(plot, options["overwrite"])
+        check_picture(plot, overwrite=overwrite)
+    if not no_report:
+        refuse_report(out, overwrite=overwrite)
+    why_not = _why_not_compared(source, bearings, asked=plot is not None)
     exported = _export(**options)
-    tree = exported.to_dict()
-    if plot is not None:
-        tree["tradeoffs"] = _picture(
-            exported, options["source"], options["bearings"], plot, t20_s, options["overwrite"]
-        )
+    found: Tradeoffs | None = None
+    if not why_not and (plot is not None or not no_report):
+        array, talkers, _ = who_and_where(source, bearings)
+        found = measured_tradeoffs(array, talkers, sample_rate=exported.bank.sample_rate, t20_s=t20_s or None)
+    if plot is not None and found is not None:
+        save_tradeoffs(found, plot, overwrite=overwrite)
+    report = None if no_report else _report(out, found, why_not, overwrite=overwrite)
     if as_json:
+        tree = exported.to_dict()
+        if found is not None:
+            tree["tradeoffs"] = found.to_dict()
+        tree["report"] = None if report is None else str(report)
         print_json(tree)
         return
-    _print(exported, options["out"])
-    if plot is not None:
-        say(f"Picture of the presets on this array: {plot}")
+    _print(exported, out)
+    if found is not None:
+        print_tradeoffs(found)
+    elif not no_report:
+        say(f"The presets were not compared: {why_not}")
+    for what, path in (("Picture of the presets on this array", plot), ("Report", report)):
+        if path is not None:
+            say(f"{what}: {path}")
 
 
 def _export(
@@ -124,28 +143,36 @@ def _export(
         )  # fmt: skip
 
 
-def _check_picture(plot: Path, overwrite: bool) -> None:
-    from unmix.files import refuse_to_replace
-    from unmix.report.figures import check_format
-
-    check_format(plot)
-    refuse_to_replace(plot, overwrite=overwrite)
-
-
-def _picture(
-    exported: Exported, source: Path, bearings: Sequence[str], plot: Path, t20_s: float, overwrite: bool
-) -> dict[str, Any]:
-    """Measure the presets on the array and draw them."""
-    from unmix.export.tradeoffs import measure_tradeoffs
-    from unmix.report.figures import save_figure, tradeoff_figure
+def _why_not_compared(source: Path, bearings: Sequence[str], *, asked: bool) -> str:
+    """Why the presets cannot be measured on the array; empty when they can. An error when they were asked for."""
+    from unmix.errors import InputError
+    from unmix.export.tradeoffs import check_tradeoffs
 
     array, talkers, _ = who_and_where(source, bearings)
-    with progress_bar("measuring presets") as report:
-        found = measure_tradeoffs(
-            array, talkers, sample_rate=exported.bank.sample_rate, t20_s=t20_s or None, progress=report
-        )
-    save_figure(tradeoff_figure(found), plot, overwrite=overwrite)
-    return found.to_dict()
+    try:
+        check_tradeoffs(array, talkers)
+    except InputError as error:
+        if asked:
+            raise
+        return str(error)
+    return ""
+
+
+def _report(out: Path, found: Tradeoffs | None, why_not: str, *, overwrite: bool) -> Path | None:
+    """Write tradeoffs.json and the report; when that fails the filters stand all the same, and a warning says so."""
+    import warnings
+
+    from unmix.errors import UnmixError, UnmixWarning
+    from unmix.files import write_json
+    from unmix.report.export_page import TRADEOFFS, material_of_export, write_export_report
+
+    try:
+        tree = {"not_measured": why_not} if found is None else found.to_dict()
+        write_json(out / TRADEOFFS, tree, overwrite=overwrite)
+        return write_export_report(material_of_export(out), out / REPORT, overwrite=overwrite).path
+    except UnmixError as error:
+        warnings.warn(f"no report was written: {error}", UnmixWarning, stacklevel=2)
+        return None
 
 
 def _print(exported: Exported, out: Path) -> None:

@@ -8,8 +8,11 @@ from typing import TYPE_CHECKING
 import click
 
 from unmix.cli.common import existing_file, json_option, overwrite_option, print_json, print_table, say
+from unmix.cli.tradeoffs import check_picture, measured_tradeoffs, print_tradeoffs, save_tradeoffs
 
 if TYPE_CHECKING:
+    from unmix.array import Array
+    from unmix.export.tradeoffs import Tradeoffs
     from unmix.jobs.limits import Limits
 
 __all__ = ["command"]
@@ -49,9 +52,13 @@ _SHOWN_HZ = (125.0, 250.0, 500.0, 1000.0, 2000.0, 4000.0)
 @click.option("--sweep", is_flag=True, help="Also sweep number of microphones, size and shape.")
 @click.option(
     "--sweep-separation", type=click.FloatRange(1.0, 180.0), default=45.0, show_default=True, metavar="DEG",
-    help="Separation for which the sweep is made.",
+    help="Separation for which sweep and trade-offs are made.",
 )  # fmt: skip
 @click.option("--plot", type=existing_file, metavar="FILE", help="Picture (svg, png or pdf).")
+@click.option(
+    "--tradeoffs", type=existing_file, metavar="FILE",
+    help="Picture of SIR and STOI of the presets against latency, work and word length, measured on rendered speech.",
+)  # fmt: skip
 @overwrite_option
 @json_option
 def command(
@@ -66,6 +73,7 @@ def command(
     sweep: bool,
     sweep_separation: float,
     plot: Path | None,
+    tradeoffs: Path | None,
     overwrite: bool,
     as_json: bool,
 ) -> None:
@@ -76,14 +84,19 @@ def command(
     from math import radians
 
     from unmix.array import Array
-    from unmix.files import refuse_to_replace
     from unmix.jobs.limits import LimitsOptions, limits
     from unmix.limits.ladder import SEPARATIONS_DEG
     from unmix.limits.rooms import RoomCase
     from unmix.limits.tolerances import Tolerances
 
-    if plot is not None:
-        refuse_to_replace(plot, overwrite=overwrite)
+    for picture in (plot, tradeoffs):
+        if picture is not None:
+            check_picture(picture, overwrite=overwrite)
+    loaded = Array.load(array)
+    measured = None
+    if tradeoffs is not None:
+        measured = _tradeoffs(loaded, talkers, sweep_separation, room, snr_db, sample_rate)
+        save_tradeoffs(measured, tradeoffs, overwrite=overwrite)
     options = LimitsOptions(
         talkers=talkers,
         separations_deg=tuple(s for s in SEPARATIONS_DEG if s <= 360.0 / talkers),
@@ -95,18 +108,49 @@ def command(
         tolerances=Tolerances(tolerances[0], radians(tolerances[1]), 1e-3 * tolerances[2]),
         sweep_deg=sweep_separation if sweep else None,
     )
-    found = limits(Array.load(array), options)
+    found = limits(loaded, options)
     if plot is not None:
         from unmix.report.figures import save_figure
         from unmix.report.limits_figure import limits_figure
 
         save_figure(limits_figure(found), plot, overwrite=overwrite)
     if as_json:
-        print_json(found.to_dict())
+        print_json(found.to_dict() | ({} if measured is None else {"tradeoffs": measured.to_dict()}))
         return
     _print(found)
-    if plot is not None:
-        say(f"Written: {plot}")
+    if measured is not None:
+        print_tradeoffs(measured)
+    for picture in (plot, tradeoffs):
+        if picture is not None:
+            say(f"Written: {picture}")
+
+
+def _tradeoffs(
+    array: Array,
+    talkers: int,
+    apart_deg: float,
+    room: tuple[float, float, float],
+    snr_db: float,
+    sample_rate: int,
+) -> Tradeoffs:
+    """The presets with talkers side by side before the array, in the room that was named."""
+    from unmix.errors import InputError
+    from unmix.export.tradeoffs import ROOM_M
+    from unmix.scene import Talker
+
+    if talkers * apart_deg > 360.0:
+        raise InputError(
+            f"{talkers} talkers {apart_deg:g} degrees apart do not fit around the array; lower one of them"
+        )
+    t60_s, volume_m3, distance_m = room
+    scale = (volume_m3 / (ROOM_M[0] * ROOM_M[1] * ROOM_M[2])) ** (1 / 3)
+    seats = [
+        Talker.at(f"talker-{k + 1}", apart_deg * (0.5 * (talkers - 1) - k), distance_m=distance_m)
+        for k in range(talkers)
+    ]
+    return measured_tradeoffs(
+        array, seats, sample_rate=sample_rate, t20_s=t60_s, size_m=[scale * edge for edge in ROOM_M], snr_db=snr_db
+    )
 
 
 def _print(found: Limits) -> None:

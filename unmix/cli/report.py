@@ -62,9 +62,9 @@ def command(
 ) -> None:
     """Turn the folder of a job into one HTML file that opens anywhere.
 
-    FOLDER is what `solve`, `grade`, `batch`, `demo` or `render` wrote. The file needs no network, carries pictures and
-    sound inside itself, and prints. With --listening it is a page for listeners, and a key that tells which signal was
-    which: keep the key, send the page, and read the answers with `unmix grade --listeners`.
+    FOLDER is what `solve`, `grade`, `batch`, `demo`, `render` or `export` wrote. The file needs no network, carries
+    pictures and sound inside itself, and prints. With --listening it is a page for listeners, and a key that tells
+    which signal was which: keep the key, send the page, and read the answers with `unmix grade --listeners`.
     """
     if listening is None and (others or variants or talkers):
         raise click.UsageError("--with, --variant and --talker belong to --listening")

@@ -16,6 +16,7 @@ from collections.abc import Callable, Iterator, Sequence
 from dataclasses import asdict, dataclass, replace
 from typing import Any, Literal
 
+import msgspec
 import numpy as np
 from numpy.typing import NDArray
 
@@ -35,7 +36,7 @@ from unmix.scene import Talker
 from unmix.solvers.stationary import FilterBank
 from unmix.variant import PRESETS, Variant, load_variant
 
-__all__ = ["LIVE_PRESETS", "Tradeoff", "Tradeoffs", "measure_tradeoffs"]
+__all__ = ["LIVE_PRESETS", "Summary", "Tradeoff", "Tradeoffs", "check_tradeoffs", "measure_tradeoffs"]
 
 Floats = NDArray[np.float64]
 Axis = Literal["latency", "work", "word"]
@@ -77,6 +78,22 @@ class Tradeoff:
 
 
 @dataclass(frozen=True)
+class Summary:
+    """A variant in one line: what it gives at best, and the least that comes within a loss of its best SIR.
+
+    best_db, stoi  the best SIR among its points, and the STOI there
+    latency_ms, mac_per_s, bits   least latency, work and word length within the loss; None where nothing was varied
+    """
+
+    variant: str
+    best_db: float | None
+    stoi: float | None
+    latency_ms: float | None
+    mac_per_s: float | None
+    bits: int | None
+
+
+@dataclass(frozen=True)
 class Tradeoffs:
     """Points of all variants, the unprocessed microphone beside them, and on what they were measured."""
 
@@ -101,9 +118,34 @@ class Tradeoffs:
         """Names, in the order given."""
         return list(dict.fromkeys(point.variant for point in self.points))
 
+    def summary(self, variant: str, *, loss_db: float = 1.0) -> Summary:
+        """A variant in one line; `loss_db` of SIR may be given away."""
+        graded = [p for p in self.points if p.variant == variant and p.sir_db is not None]
+        best = max(graded, key=lambda p: p.sir_db or 0.0, default=None)
+        if best is None or best.sir_db is None:
+            return Summary(variant, None, None, None, None, None)
+        enough = [p for p in graded if p.sir_db is not None and p.sir_db >= best.sir_db - loss_db]
+        work = [p.mac_per_s for p in enough if p.axis == "work" and p.mac_per_s is not None]
+        return Summary(
+            variant=variant,
+            best_db=best.sir_db,
+            stoi=best.stoi,
+            latency_ms=min((p.latency_ms for p in enough if p.axis == "latency"), default=None),
+            mac_per_s=min(work, default=None),
+            bits=min((p.bits for p in enough if p.axis == "word"), default=None),
+        )
+
     def to_dict(self) -> dict[str, Any]:
         """Plain values."""
         return asdict(self)
+
+    @classmethod
+    def from_dict(cls, tree: dict[str, Any]) -> Tradeoffs:
+        """From plain values, as `to_dict` gives them. Raises InputError for others."""
+        try:
+            return msgspec.convert(tree, cls)
+        except msgspec.ValidationError as error:
+            raise InputError(f"trade-offs: {error}; export again") from None
 
 
 def measure_tradeoffs(
@@ -115,21 +157,23 @@ def measure_tradeoffs(
     t20_s: float | None = 0.3,
     seconds: float = 4.0,
     seed: int = 1,
+    size_m: Sequence[float] = ROOM_M,
+    snr_db: float = SNR_DB,
     progress: Callable[[float], None] | None = None,
 ) -> Tradeoffs:
     """Render speech on an array and grade each variant along the three axes.
 
-    t20_s  reverberation time of the room in seconds; None for none
+    t20_s   reverberation time of the room in seconds; None for none
+    size_m  edges of the room
+    snr_db  speech over the microphones' own noise
 
     Raises InputError for fewer than two talkers or a variant that cannot run on a device, UnsolvableError for bearings
     that coincide.
     """
-    if len(talkers) < 2:
-        raise InputError(f"{len(talkers)} talkers: a trade-off in SIR needs two at least")
-    if array.responses is not None:
-        raise InputError("trade-offs are measured on rendered speech; give the array without its measured responses")
+    check_tradeoffs(array, talkers)
     chosen = [load_variant(variant) for variant in variants]
-    rendered = _rendered(array, talkers, sample_rate, t20_s, seconds, seed)
+    room = None if t20_s is None else RoomSpec(size_m=list(size_m), t20_s=t20_s)
+    rendered = _rendered(array, talkers, sample_rate, room, seconds, seed, snr_db)
     grader = Grader(
         rendered.early,
         sample_rate=sample_rate,
@@ -147,15 +191,32 @@ def measure_tradeoffs(
     return Tradeoffs(tuple(points), sir, stoi, t20_s, sample_rate)
 
 
+def check_tradeoffs(array: Array, talkers: Sequence[Talker]) -> None:
+    """Raise InputError for an array or talkers that trade-offs cannot be measured on."""
+    if len(talkers) < 2:
+        raise InputError(f"{len(talkers)} talkers: a trade-off in SIR needs two at least")
+    if array.responses is not None:
+        raise InputError(
+            "trade-offs are measured on speech rendered for free microphones, not for measured responses; give the "
+            "array as positions"
+        )
+
+
 def _rendered(
-    array: Array, talkers: Sequence[Talker], sample_rate: int, t20_s: float | None, seconds: float, seed: int
+    array: Array,
+    talkers: Sequence[Talker],
+    sample_rate: int,
+    room: RoomSpec | None,
+    seconds: float,
+    seed: int,
+    snr_db: float,
 ) -> RenderedScene:
     speech = speech_material(len(talkers), sample_rate, seconds)
     spec = RenderSpec(
         duration_s=seconds,
         sample_rate=sample_rate,
         seed=seed,
-        room=None if t20_s is None else RoomSpec(size_m=list(ROOM_M), t20_s=t20_s),
+        room=room,
         array=ArraySpec(positions_m=array.positions_m.tolist(), reference_channel=array.reference_channel),
         talker=[
             TalkerSpec(
@@ -166,7 +227,7 @@ def _rendered(
             )
             for talker in talkers
         ],
-        noise=NoiseSpec(sensor_snr_db=SNR_DB),
+        noise=NoiseSpec(sensor_snr_db=snr_db),
     )
     return render_scene(spec, clips={t.name: row for t, row in zip(talkers, speech, strict=True)})
 

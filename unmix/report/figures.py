@@ -266,7 +266,7 @@ def tradeoff_figure(tradeoffs: Tradeoffs) -> Figure:
     """SIR and STOI of the worst talker against latency, multiply-accumulates and word length, one line per variant."""
     heads = {
         "latency": "latency of the filters, ms",
-        "work": "million multiply-accumulates per second, direct",
+        "work": "million MAC/s, direct convolution",
         "word": "bits",
     }
     with styled():
@@ -280,7 +280,7 @@ def tradeoff_figure(tradeoffs: Tradeoffs) -> Figure:
         axes[0, 0].set_ylabel("SIR, dB")
         axes[1, 0].set_ylabel("STOI")
         axes[0, 0].set_xscale("symlog", linthresh=0.5, base=2)
-        axes[0, 0].set_xlim(left=0.0)
+        axes[0, 0].set_xlim(-0.03, 1.2 * max((p.latency_ms for p in tradeoffs.points), default=1.0))
         axes[0, 1].set_xscale("log")
         axes[0, 2].set_xticks([8, 12, 16, 24, 32], ["8", "12", "16", "24", "float"])
         for shown in axes[1, :2]:
@@ -300,7 +300,18 @@ def _tradeoff(axes: Axes, tradeoffs: Tradeoffs, axis: Any, figure_name: str) -> 
         ]
         up = [np.nan if getattr(p, figure_name) is None else getattr(p, figure_name) for p in points]
         mark = MARKS[k % len(MARKS)]
-        axes.plot(across, up, marker=mark, markersize=4, linewidth=1.2, color=COLOURS[k % len(COLOURS)], label=variant)
+        # A single point must not drown in the lines of others.
+        size = 4 if len(points) > 1 else 7
+        axes.plot(
+            across,
+            up,
+            marker=mark,
+            markersize=size,
+            linewidth=1.2,
+            color=COLOURS[k % len(COLOURS)],
+            label=variant,
+            zorder=2 + (len(points) == 1),
+        )
     before = tradeoffs.unprocessed_sir_db if figure_name == "sir_db" else tradeoffs.unprocessed_stoi
     if before is not None:
         axes.axhline(before, color=QUIET, linewidth=0.8, linestyle="--", label="unprocessed")

@@ -1,4 +1,4 @@
-"""A job's folder in, its report out: for a scene or for a batch."""
+"""A job's folder in, its report out: for a scene, for a batch or for exported filters."""
 
 from __future__ import annotations
 
@@ -7,6 +7,7 @@ from typing import Any
 
 from unmix.report.batch_material import is_batch, material_of_batch
 from unmix.report.batch_page import write_batch_report
+from unmix.report.export_page import is_export, material_of_export, write_export_report
 from unmix.report.material import material_of_folder
 from unmix.report.page import PageFile
 from unmix.report.scene_page import REPORT, write_scene_report
@@ -24,7 +25,7 @@ def write_report(
     sound_mb: float | None = None,
     overwrite: bool = False,
 ) -> PageFile:
-    """Write the report on what `solve`, `grade`, `batch`, `demo` or `render` left in a folder, as one HTML file.
+    """Write the report on what a job (`solve`, `batch`, `export`, ...) left in a folder, as one HTML file.
 
     Parameters
     ----------
@@ -60,5 +61,7 @@ def write_report(
         options["sound_mb"] = sound_mb
     if is_batch(place):
         return write_batch_report(material_of_batch(place), path, **options)
+    if is_export(place):
+        return write_export_report(material_of_export(place), path, hide_names=hide_names, overwrite=overwrite)
     material = material_of_folder(place, scene=None if scene is None else Path(scene))
     return write_scene_report(material, path, **options)

@@ -13,6 +13,7 @@ from tests.conftest import speech
 from unmix.audio import resample, write_audio
 from unmix.errors import FileError, InputError
 from unmix.jobs.grade import grade, grade_files, grade_scene, read_grades
+from unmix.jobs.grade_inputs import read_signal, recording_of_file
 from unmix.scene import Scene
 
 Floats = NDArray[np.float64]
@@ -266,3 +267,29 @@ def test_files(tmp_path: Path, truth: Floats, estimates: Floats) -> None:
         grade_files([tmp_path / "mix.wav", made[0]], references)
     with pytest.raises(FileError, match=r"none\.wav: no such file"):
         grade_files(made, [tmp_path / "none.wav", references[0]])
+
+
+@pytest.mark.parametrize(
+    ("subtype", "precision"), [("PCM_24", np.float32), ("FLOAT", np.float32), ("DOUBLE", np.float64)]
+)
+def test_long_files_are_read_in_single_precision_where_that_loses_nothing(
+    tmp_path: Path, truth: Floats, monkeypatch: pytest.MonkeyPatch, subtype: str, precision: type
+) -> None:
+    write_audio(tmp_path / "a.wav", truth[:1], RATE, subtype=subtype)
+    short, _ = read_signal(tmp_path / "a.wav", RATE)
+    monkeypatch.setattr("unmix.jobs.grade_inputs.LONG_S", 1.0)
+    long, _ = read_signal(tmp_path / "a.wav", RATE)
+    assert (short.dtype, long.dtype) == (np.float64, precision)
+    assert np.array_equal(short, long)
+
+
+def test_only_one_microphone_of_a_long_recording_is_read(
+    tmp_path: Path, truth: Floats, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    write_audio(tmp_path / "mix.wav", truth, RATE)
+    one, every, said = recording_of_file(tmp_path / "mix.wav", RATE, truth.shape[1], 1)
+    assert every.shape == truth.shape and np.array_equal(one, every[1]) and not said
+    monkeypatch.setattr("unmix.jobs.grade_inputs.ALL_MICROPHONES_S", 1.0)
+    alone, only, said = recording_of_file(tmp_path / "mix.wav", RATE, truth.shape[1], 1)
+    assert only.shape == (1, truth.shape[1]) and np.array_equal(alone, one)
+    assert "best single microphone is not looked for" in said[0]

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from tests.conftest import speech
 from unmix.metrics.alignment import advance
-from unmix.metrics.distortion import ReferenceSet
+from unmix.metrics.distortion import Distortion, ReferenceSet
 from unmix.metrics.grader import Grader
 from unmix.metrics.grades import FIGURES, Figures, Grades
 
@@ -262,3 +262,56 @@ def test_grades_show_themselves(rng: np.random.Generator) -> None:
     assert "&lt;mate&gt;" in shown
     assert f"{grades.talkers[0].sir_db:.1f}" in shown
     assert "the unprocessed recording was not given" in shown
+
+
+def _figures_of(grades: Grades) -> Floats:
+    """Every figure of a grade that is a ratio in dB, STOI or ESTOI."""
+    rows = [[t, t.unprocessed, t.gain, t.best_microphone] for t in grades.talkers]
+    figures = [getattr(f, name) for row in rows for f in row for name in FIGURES]
+    more = [getattr(t.speech.after, name) for t in grades.talkers for name in ("equivalent_snr_db", "sii_sir_db")]
+    return np.array([*figures, *more, *(t.speech.segments.stoi.mean for t in grades.talkers)], dtype=float)
+
+
+def test_long_signals_in_single_precision_and_in_stretches_have_the_same_figures(
+    rng: np.random.Generator, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    references = _talkers(10.0).astype(np.float32)
+    heard = np.array([_heard(references, rng), _heard(_moved(references, 3.3), rng)], dtype=np.float32)
+    estimates = _moved(_separated(references, rng), -7.3).astype(np.float32)
+
+    def graded() -> Grades:
+        grader = Grader(references, sample_rate=RATE, names=NAMES, unprocessed=heard[0], microphones=heard)
+        return grader.grade(estimates, speech=True)
+
+    short = graded()
+    for name in ("timebase.LONG_S", "resampling.KEEP"):
+        monkeypatch.setattr(f"unmix.metrics.{name}", 0)
+    for module in ("alignment.ADVANCED", "distortion.CHUNK", "speech.CHUNK", "resampling.PIECE"):
+        monkeypatch.setattr(f"unmix.metrics.{module}", 5000)
+    monkeypatch.setattr("unmix.metrics.speech.LONGEST_S", 8.0)
+    monkeypatch.setattr("unmix.metrics.bands.FRAMES", 3)
+    long = graded()
+    monkeypatch.setattr("unmix.metrics.timebase.LONG_S", 600.0)
+    double = graded()
+    assert np.isfinite(_figures_of(short)).all()
+    assert _figures_of(long) == pytest.approx(_figures_of(double), abs=1e-6)
+    whole = slice(None, -6)  # what follows looks at the loudest 8 s only
+    assert _figures_of(long)[whole] == pytest.approx(_figures_of(short)[whole], abs=1e-6)
+
+
+def test_the_microphone_is_judged_once(rng: np.random.Generator, monkeypatch: pytest.MonkeyPatch) -> None:
+    references = _talkers()
+    heard = _heard(references, rng)
+    grader = Grader(references, sample_rate=RATE, names=NAMES, unprocessed=heard, microphones=heard[None])
+    calls: list[Floats] = []
+    split = ReferenceSet.split
+
+    def counted(self: ReferenceSet, signals: Floats) -> Distortion:
+        calls.append(signals)
+        return split(self, signals)
+
+    monkeypatch.setattr(ReferenceSet, "split", counted)
+    for _ in range(2):
+        grades = grader.grade(_separated(references, rng), speech=True)
+        assert all(t.best_channel == 0 and t.best_microphone == t.unprocessed for t in grades.talkers)
+    assert len(calls) == 3  # the microphone, and each variant

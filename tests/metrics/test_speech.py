@@ -17,7 +17,7 @@ from unmix.metrics.grades import Figures, Grades
 from unmix.metrics.information import BANDS, HOP, PRODUCTION, RATE_HZ, STACK, InformationReference, _covariance
 from unmix.metrics.intelligibility import SpeechReference
 from unmix.metrics.segments import segment_gains
-from unmix.metrics.speech import disagreements
+from unmix.metrics.speech import _loudest, disagreements
 from unmix.metrics.speech_figures import SPEECH_FIGURES, SpeechFigures, SpeechGrade
 from unmix.metrics.words import words_dantale_percent, words_ieee_percent
 
@@ -208,3 +208,20 @@ def test_covariance_of_stacked_frames_is_that_of_the_vectors(rng: np.random.Gene
     rows = [np.array([x[t : t + STACK].reshape(-1) for t in range(len(x) - STACK + 1)]) for x in (a, b)]
     centred = [r - r.mean(axis=0) for r in rows]
     assert _covariance(a, b) == pytest.approx(centred[0].T @ centred[1] / len(rows[0]), abs=1e-11)
+
+
+def test_the_loudest_stretch_is_found_piece_by_piece(rng: np.random.Generator, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("unmix.metrics.speech.CHUNK", 64)
+    for _ in range(20):
+        x = rng.standard_normal(1000) * rng.uniform(0.1, 1.0, 1000)
+        energies = [np.sum(x[start : start + 300] ** 2) for start in range(701)]
+        best = int(np.argmax(energies))
+        assert _loudest(x, 300) == slice(best, best + 300)
+    assert _loudest(x, 1000) == slice(0, 1000)
+
+
+def test_segments_left_out_to_save_time_are_not_called_silent(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("unmix.metrics.segments.MOST_SEGMENTS", 2)
+    clean = speech("novel-reader", 12.0)
+    found = segment_gains(clean, clean, clean, RATE)
+    assert (found.used, found.silent) == (2, 0)

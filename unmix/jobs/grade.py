@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.audio import read_audio
+from unmix.audio import Recording
 from unmix.errors import FileError, InputError
 from unmix.files import path_from, refuse_to_replace, write_json
 from unmix.jobs.grade_inputs import (
@@ -21,8 +21,10 @@ from unmix.jobs.grade_inputs import (
     estimates_of_scene,
     fit,
     read_signal,
+    recording_of_file,
     recording_of_scene,
     references_of_scene,
+    stacked,
 )
 from unmix.metrics.assignment import match_names
 from unmix.metrics.distortion import FILTER_LENGTH
@@ -114,12 +116,10 @@ def grade(
     if match == "name" and len(given) != len(truth):
         raise InputError(f"{len(given)} estimates for {len(truth)} references; give one each, or match='best'")
     if microphones is not None:
-        microphones = check_signals(microphones, "microphones")
-        if not 0 <= reference_channel < len(microphones):
-            raise InputError(
-                f"reference_channel {reference_channel}: there are microphones 0 to {len(microphones) - 1}"
-            )
-        unprocessed = microphones[reference_channel] if unprocessed is None else unprocessed
+        channels = check_signals(microphones, "microphones")
+        if not 0 <= reference_channel < len(channels):
+            raise InputError(f"reference_channel {reference_channel}: there are microphones 0 to {len(channels) - 1}")
+        unprocessed = channels[reference_channel] if unprocessed is None else unprocessed
     fitted, notes = _fit_all(
         given.shape[1], sample_rate, references=truth, unprocessed=unprocessed, microphones=microphones, images=images
     )
@@ -141,8 +141,8 @@ def _fit_all(samples: int, sample_rate: int, **signals: Signals | None) -> tuple
     for what, array in signals.items():
         if array is None:
             continue
-        rows = check_signals(array if array.ndim == 2 else array[None], what)
-        rows, said = fit(rows, samples, sample_rate, what)
+        given = check_signals(array if array.ndim == 2 else array[None], what)
+        rows, said = fit(given, samples, sample_rate, what)
         fitted[what] = rows[0] if what == "unprocessed" else rows
         notes += said
     return fitted, notes
@@ -159,7 +159,7 @@ def grader_of_scene(scene: Scene, *, against: str | None = None, filter_length: 
     available = {talker.name: tuple(talker.references) for talker in scene.talkers}
     kind = choose_kind(available, against)
     references, notes = references_of_scene(scene, kind)
-    images: Floats | None = None
+    images: Signals | None = None
     said: list[str] = []
     if all("image" in kinds for kinds in available.values()):
         images, said = (references, []) if kind == "image" else references_of_scene(scene, "image")
@@ -257,34 +257,30 @@ def grade_files(
         refuse_to_replace(Path(out_dir) / "grades.json", overwrite=overwrite)
     if not estimates or not references:
         raise InputError("give at least one estimate and one reference")
-    first, sample_rate = read_audio(estimates[0])
+    first = Recording.open([estimates[0]])
+    sample_rate, samples, notes = first.sample_rate, first.samples, list[str]()
     check_options(sample_rate, filter_length)
-    samples, notes = first.shape[1], []
 
-    def stack(paths: Sequence[str | Path]) -> Floats:
-        rows = []
+    def stack(paths: Sequence[str | Path]) -> Signals:
+        rows: list[Signals] = []
         for path in map(Path, paths):
             signal, said = read_signal(path, sample_rate)
             fitted, more = fit(signal, samples, sample_rate, str(path))
             rows.append(fitted)
             notes.extend(said + more)
-        return np.array(rows)
+        return stacked(rows)
 
-    microphones = None
+    microphone = microphones = None
     if unprocessed is not None:
-        channels = len(read_audio(unprocessed)[0])
-        read = [read_signal(Path(unprocessed), sample_rate, channel=c) for c in range(channels)]
-        if not 0 <= unprocessed_channel < channels:
-            raise InputError(f"{unprocessed}: there is no channel {unprocessed_channel}; it has 0 to {channels - 1}")
-        microphones, said = fit(np.array([signal for signal, _ in read]), samples, sample_rate, str(unprocessed))
-        notes += read[0][1] + said
+        microphone, microphones, said = recording_of_file(Path(unprocessed), sample_rate, samples, unprocessed_channel)
+        notes += said
     names = [Path(path).stem for path in references]
     matched, match, said = _match([Path(path).stem for path in estimates], names, match, "estimates")
     grader = Grader(
         stack(references),
         sample_rate=sample_rate,
         names=names,
-        unprocessed=None if microphones is None else microphones[unprocessed_channel],
+        unprocessed=microphone,
         microphones=microphones,
         filter_length=filter_length,
     )

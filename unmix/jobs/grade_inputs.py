@@ -11,9 +11,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.audio import HIGHEST_RATE_HZ, LOWEST_RATE_HZ, Recording, Samples, read_audio, resample
+from unmix.audio import HIGHEST_RATE_HZ, LOWEST_RATE_HZ, Recording, Samples, resample
+from unmix.audio_open import open_audio
 from unmix.errors import FileError, InputError
 from unmix.files import safe_names
+from unmix.metrics.timebase import LONG_S
 from unmix.scene import REFERENCE_KINDS, Scene
 
 __all__ = [
@@ -24,8 +26,10 @@ __all__ = [
     "estimates_of_scene",
     "fit",
     "read_signal",
+    "recording_of_file",
     "recording_of_scene",
     "references_of_scene",
+    "stacked",
 ]
 
 Floats = NDArray[np.float64]
@@ -33,12 +37,17 @@ Signals = NDArray[np.floating[Any]]
 
 AUDIO_SUFFIXES = (".wav", ".flac", ".w64", ".rf64", ".aiff", ".aif")
 PLAIN = "plain"
+EXACT_IN_SINGLE = ("PCM_S8", "PCM_U8", "PCM_16", "PCM_24", "FLOAT")
+"""Sample formats, by libsndfile's names, whose every value a float of 32 bits holds."""
 ABSURD = 2.0
 """Signals whose lengths differ by more than this factor do not belong together."""
 UNNOTICED_S = 0.002
 """Lengths that differ by less than this are made equal without a word: rates that were converted round differently."""
-ALL_MICROPHONES_S = 600.0
+ALL_MICROPHONES_S = LONG_S
 """Longer recordings are graded against the reference microphone only, so that not all channels are held at once."""
+NOT_LOOKED_FOR = (
+    f"the best single microphone is not looked for in recordings beyond {ALL_MICROPHONES_S / 60:.0f} minutes"
+)
 
 
 @dataclass(frozen=True)
@@ -46,7 +55,7 @@ class Estimates:
     """Estimates with the names they came under; `notes` say what was changed."""
 
     names: tuple[str, ...]
-    signals: Floats
+    signals: Signals
     notes: tuple[str, ...] = ()
 
 
@@ -89,7 +98,7 @@ def choose_kind(available: Mapping[str, Sequence[str]], against: str | None) -> 
     raise InputError(f"the talkers have no kind of reference in common; give {' or '.join(REFERENCE_KINDS)} for all")
 
 
-def fit(signals: Floats, samples: int, sample_rate: int, what: str) -> tuple[Floats, list[str]]:
+def fit(signals: Signals, samples: int, sample_rate: int, what: str) -> tuple[Signals, list[str]]:
     """`signals` (rows, n) trimmed or padded with zeros to `samples`, and a note that names `what` if that mattered.
 
     Raises InputError when the lengths have nothing to do with each other.
@@ -109,12 +118,31 @@ def fit(signals: Floats, samples: int, sample_rate: int, what: str) -> tuple[Flo
     return fitted, [f"{what}: {lengths}; {verb}"]
 
 
-def read_signal(path: Path, sample_rate: int, *, channel: int | None = None) -> tuple[Floats, list[str]]:
+def _read_all(path: Path) -> tuple[Signals, int]:
+    """A whole file (channels, samples) and its rate; a long one in single precision where that holds its samples."""
+    recording = Recording.open([path])
+    signals = np.empty((len(recording.channels), recording.samples), dtype=_precision(path, recording))
+    at = 0
+    for chunk in recording.chunks():
+        signals[:, at : at + chunk.shape[1]] = chunk
+        at += chunk.shape[1]
+    return signals, recording.sample_rate
+
+
+def _precision(path: Path, recording: Recording) -> type[np.floating[Any]]:
+    """Single precision for what is long and has 24 significant bits or fewer, so that none is lost."""
+    if recording.duration_s <= LONG_S:
+        return np.float64
+    with open_audio(path) as stream:
+        return np.float32 if stream.subtype in EXACT_IN_SINGLE else np.float64
+
+
+def read_signal(path: Path, sample_rate: int, *, channel: int | None = None) -> tuple[Signals, list[str]]:
     """One signal (samples,) at `sample_rate` from a file, and a note if it was resampled.
 
     A file of several channels needs `channel`. Raises FileError or InputError naming the file.
     """
-    signals, rate = read_audio(path)
+    signals, rate = _read_all(path)
     if len(signals) > 1 and channel is None:
         raise InputError(f"{path}: has {len(signals)} channels; give a file with one")
     index = 0 if len(signals) == 1 or channel is None else channel
@@ -123,13 +151,13 @@ def read_signal(path: Path, sample_rate: int, *, channel: int | None = None) -> 
     if rate == sample_rate:
         return signals[index], []
     try:
-        converted = resample(signals[index : index + 1], rate, sample_rate)[0]
+        converted = resample(np.asarray(signals[index : index + 1], dtype=np.float64), rate, sample_rate)[0]
     except (RuntimeError, ValueError) as error:
         raise FileError(f"{path}: cannot be resampled from {rate} to {sample_rate} Hz ({error}); convert it") from None
     return converted, [f"{path}: resampled from {rate} to {sample_rate} Hz"]
 
 
-def references_of_scene(scene: Scene, kind: str) -> tuple[Floats, list[str]]:
+def references_of_scene(scene: Scene, kind: str) -> tuple[Signals, list[str]]:
     """The talkers' references of one kind, (talkers, samples) at the recording's rate and length, and notes."""
     rows, notes = [], []
     for talker in scene.talkers:
@@ -139,10 +167,10 @@ def references_of_scene(scene: Scene, kind: str) -> tuple[Floats, list[str]]:
         fitted, more = fit(signal, scene.recording.samples, scene.sample_rate, str(path))
         rows.append(fitted)
         notes += said + more
-    return np.array(rows), notes
+    return stacked(rows), notes
 
 
-def _excerpt(signal: Floats, scene: Scene) -> Floats:
+def _excerpt(signal: Signals, scene: Scene) -> Signals:
     """A signal that is as long as the recording's files, cut as the scene cuts the recording."""
     recording = scene.recording
     if isinstance(recording, Samples):
@@ -153,15 +181,31 @@ def _excerpt(signal: Floats, scene: Scene) -> Floats:
     return signal
 
 
-def recording_of_scene(scene: Scene) -> tuple[Floats, Floats | None, list[str]]:
+def recording_of_scene(scene: Scene) -> tuple[Signals, Signals | None, list[str]]:
     """The reference microphone (samples,), all of them (channels, samples) unless too long, and notes."""
     reference = scene.array.reference_channel
     if scene.recording.duration_s <= ALL_MICROPHONES_S:
         microphones = scene.recording.read()
         return microphones[reference], microphones, []
     one = np.concatenate([chunk[reference] for chunk in scene.recording.chunks()])
-    note = f"the best single microphone is not looked for in recordings beyond {ALL_MICROPHONES_S / 60:.0f} minutes"
-    return one, None, [note]
+    return one, None, [NOT_LOOKED_FOR]
+
+
+def recording_of_file(path: Path, sample_rate: int, samples: int, channel: int) -> tuple[Signals, Signals, list[str]]:
+    """The reference microphone (samples,), all of them (channels, samples), that one only if too long, and notes.
+
+    Raises FileError or InputError naming the file.
+    """
+    recording = Recording.open([path])
+    if not 0 <= channel < len(recording.channels):
+        raise InputError(f"{path}: there is no channel {channel}; it has 0 to {len(recording.channels) - 1}")
+    every = recording.duration_s <= ALL_MICROPHONES_S
+    read = [read_signal(path, sample_rate, channel=c) for c in (recording.channels if every else [channel])]
+    notes = [*read[0][1]]
+    signals, said = fit(stacked([signal for signal, _ in read]), samples, sample_rate, str(path))
+    if not every and len(recording.channels) > 1:
+        said.append(NOT_LOOKED_FOR)
+    return signals[channel if every else 0], signals, notes + said
 
 
 def estimates_of_scene(scene: Scene, folder: Path) -> Estimates:
@@ -180,7 +224,15 @@ def estimates_of_scene(scene: Scene, folder: Path) -> Estimates:
         fitted, more = fit(signal, scene.recording.samples, scene.sample_rate, str(path))
         rows.append(fitted)
         notes += said + more
-    return Estimates(tuple(files), np.array(rows), tuple(notes))
+    return Estimates(tuple(files), stacked(rows), tuple(notes))
+
+
+def stacked(rows: list[Signals]) -> Signals:
+    """Signals of one length as one array (rows, samples); `rows` is emptied on the way, so that none is held twice."""
+    together = np.empty((len(rows), rows[0].size), dtype=np.result_type(*rows))
+    for k in reversed(range(len(rows))):
+        together[k] = rows.pop()
+    return together
 
 
 def _files_of_solution(record: Path) -> dict[str, Path]:

@@ -26,6 +26,8 @@ BLOCK = 96
 """Outputs of a block, about: fewer waste the overlap of their inputs, more waste the zeros of the matrix."""
 MOST_PHASES = 1000
 """Rates in a ratio with more output phases than this would need a matrix of gigabytes."""
+PIECE = 1 << 17
+"""Outputs computed at a time."""
 KEEP = 3_000_000
 """Results up to this many samples (five minutes at 10 kHz) are kept whole."""
 
@@ -44,7 +46,8 @@ class Resampled:
 
             self._whole = np.asarray(resample_oct(np.asarray(x, dtype=np.float64), rate_out, rate_in))
         elif self._whole is None and self.size <= KEEP:
-            self._whole = self._computed(0, self.size)
+            pieces = (self._computed(a, min(a + PIECE, self.size)) for a in range(0, self.size, PIECE))
+            self._whole = np.concatenate([*pieces]) if self.size else np.zeros(0)
 
     def stretch(self, first: int, last: int) -> Floats:
         """Samples first..last - 1 of the result, which must lie within it."""

@@ -40,7 +40,14 @@ def start(plan: Path, out: Path, workers: int = 1) -> subprocess.Popen[bytes]:
     """The command in a process group of its own."""
     code = "from unmix.cli import main; main()"
     command = [sys.executable, "-c", code, "batch", str(plan), "--out", str(out), "--workers", str(workers), "--json"]
-    return subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, start_new_session=True)
+    return subprocess.Popen(
+        command,
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        start_new_session=True,
+        # Where the tests run in the background, the interrupt is ignored, and so it would be in what they start.
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),
+    )
 
 
 def parts(out: Path) -> int:

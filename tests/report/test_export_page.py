@@ -8,6 +8,7 @@ from pathlib import Path
 import pytest
 
 from tests.conftest import circle
+from tests.report.conftest import Open, accessibility_findings
 from unmix.errors import FileError, InputError
 from unmix.export.job import export_bank
 from unmix.export.tradeoffs import measure_tradeoffs
@@ -91,3 +92,13 @@ def test_a_report_there_is_not_replaced_unasked(made: Path, tmp_path: Path) -> N
     page(made, tmp_path / "r.html")
     with pytest.raises(FileError, match="exists already"):
         page(made, tmp_path / "r.html")
+
+
+@pytest.mark.parametrize(("width", "dark"), [(1200, False), (390, True)])
+def test_a_browser_shows_it(measured: Path, tmp_path: Path, open_page: Open, width: int, dark: bool) -> None:
+    page(measured, tmp_path / "r.html")
+    shown = open_page(tmp_path / "r.html", width=width, dark=dark, bypass_csp=True)
+    assert shown.evaluate("document.documentElement.scrollWidth") <= width
+    assert accessibility_findings(shown) == []
+    picture = shown.locator("svg.figure").bounding_box()
+    assert picture["width"] >= min(60 * 15, 0.85 * width)  # as wide as the text, up to 60 rem

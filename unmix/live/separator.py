@@ -66,7 +66,7 @@ class LiveSeparator:
     source : callable, optional
         Asked every 0.1 s of audio with the time in seconds; returns talkers where they now are, or None.
     wait : bool
-        Whether a change of bearings waits for its filters, which take many chunks' time to design (20 to 80 ms). The
+        Whether a change of bearings waits for its filters, which take the time of several chunks to design. The
         same audio then gives the same output every time. Otherwise they are designed in a thread while the audio goes
         on, and the change begins with the first chunk after; of several asked for meanwhile the last is made.
 

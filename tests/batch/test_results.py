@@ -9,9 +9,13 @@ import pytest
 
 from tests.batch.conftest import PLAN, rows_of, write_plan
 from unmix.batch.compare import compare
+from unmix.batch.items import plan_items
+from unmix.batch.plan import Plan
 from unmix.batch.ranking import Metric, analyse, table_of
-from unmix.batch.results import open_results, query
+from unmix.batch.results import open_results, query, write_results
 from unmix.batch.run import BatchResult, run_batch
+from unmix.batch.scores import Scores
+from unmix.batch.store import Store
 from unmix.errors import FileError, InputError
 
 SIR = Metric("sir_db", "sir_db_gain")
@@ -161,3 +165,14 @@ def test_scores_that_are_wrong(tmp_path: Path, csv: str, message: str) -> None:
     (tmp_path / "words.csv").unlink()
     with pytest.raises(FileError, match=r"words\.csv: no such file"):
         run_batch(plan, tmp_path / "out")
+
+
+def test_a_table_made_block_by_block_is_the_same(
+    tmp_path: Path, batch: tuple[Path, BatchResult], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    plan, _ = batch
+    (tmp_path / "parts").symlink_to(plan.parent / "out" / "parts")
+    monkeypatch.setattr("unmix.batch.results.BLOCK", 1)
+    written = write_results(plan_items(Plan.load(plan), plan), Store(tmp_path), Scores({}, {}))
+    assert (written.done, written.failures, written.missing) == (6, 0, 0)
+    assert rows_of(tmp_path, without=()) == rows_of(plan.parent / "out", without=())

@@ -6,7 +6,7 @@ import contextlib
 import re
 import tempfile
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import IO, Any
 
@@ -27,6 +27,9 @@ __all__ = ["MEASURED_COLUMNS", "Written", "figure_columns", "open_results", "que
 PARQUET, CSV = "results.parquet", "results.csv"
 MEMORY = "512MB"
 """What DuckDB may hold; the rest of a large table it keeps on disk for the while."""
+BLOCK = 20_000
+"""Items whose rows are put in order at a time. Items come in the plan's order, so blocks need only follow each other:
+a whole table of a million would be sorted on disk."""
 MEASURED_COLUMNS = ("solve_time_s", "grade_time_s", "real_time_factor", "peak_memory_mb")
 """Columns that differ from run to run; all others are determined by the plan and the data."""
 
@@ -90,8 +93,6 @@ def write_results(items: Items, store: Store, scores: Scores) -> Written:
     with tempfile.TemporaryDirectory(prefix=".tables-", dir=folder) as name:
         aside = Path(name)
         try:
-            with (aside / "rows.json").open("wb") as stream:
-                done, failed, failures, missing = _write_rows(stream, items, store, scores)
             _write_lines(
                 aside / "scenes.json", [s.labels | {"s": i, "scene": s.name} for i, s in enumerate(items.scenes)]
             )
@@ -99,7 +100,6 @@ def write_results(items: Items, store: Store, scores: Scores) -> Written:
             _write_lines(aside / "variants.json", settings)
         except OSError as error:
             raise FileError(f"{folder}: cannot be written ({error.strerror}); is the disk full?") from None
-        columns = figure_columns(items, scores)
         parquet, csv = folder / PARQUET, folder / CSV
         connection = duckdb.connect()
         try:
@@ -107,8 +107,10 @@ def write_results(items: Items, store: Store, scores: Scores) -> Written:
             connection.execute("SET threads = 1")
             connection.execute(f"SET memory_limit = '{MEMORY}'")
             connection.execute(f"SET temp_directory = {_quoted(aside / 'spill')}")
+            tally = _write_blocks(connection, aside, items, store, scores)
             with write_aside(parquet, overwrite=True) as made:
-                connection.execute(f"COPY ({_select(aside, columns)}) TO {_quoted(made)} (FORMAT parquet)")
+                blocks = f"SELECT * FROM read_parquet({_quoted(aside / 'block-*.parquet')})"
+                connection.execute(f"COPY ({blocks}) TO {_quoted(made)} (FORMAT parquet, ROW_GROUP_SIZE {BLOCK})")
             with write_aside(csv, overwrite=True) as made:
                 connection.execute(
                     f"COPY (SELECT * FROM read_parquet({_quoted(parquet)})) TO {_quoted(made)} (FORMAT csv, HEADER)"
@@ -118,28 +120,52 @@ def write_results(items: Items, store: Store, scores: Scores) -> Written:
             raise FileError(f"{folder}: tables cannot be written ({line}); is the disk full?") from None
         finally:
             connection.close()
-    return Written(done, failed, failures, missing, (parquet, csv))
+    return Written(tally.done, tally.failed, tally.failures, tally.missing, (parquet, csv))
 
 
-def _write_rows(stream: IO[bytes], items: Items, store: Store, scores: Scores) -> tuple[int, dict[str, str], int, int]:
-    done = failures = missing = 0
-    failed: dict[str, str] = {}
-    present = store.keys()
+@dataclass
+class _Tally:
+    """Items seen so far."""
+
+    done: int = 0
+    failures: int = 0
+    missing: int = 0
+    failed: dict[str, str] = field(default_factory=dict)
+
+
+def _write_blocks(connection: Any, aside: Path, items: Items, store: Store, scores: Scores) -> _Tally:
+    """The rows as Parquet files, whose names sort as the items do; one without rows when there are no items."""
+    tally, present = _Tally(), store.keys()
+    select = _select(aside, figure_columns(items, scores))
+    for number, first in enumerate(range(0, max(1, len(items)), BLOCK)):
+        indices = range(first, min(first + BLOCK, len(items)))
+        try:
+            with (aside / "rows.json").open("wb") as stream:
+                _write_rows(stream, indices, present, items, store, scores, tally)
+        except OSError as error:
+            raise FileError(f"{store.folder}: cannot be written ({error.strerror}); is the disk full?") from None
+        made = aside / f"block-{number:08d}.parquet"
+        connection.execute(f"COPY ({select}) TO {_quoted(made)} (FORMAT parquet)")
+    return tally
+
+
+def _write_rows(
+    stream: IO[bytes], indices: range, present: set[str], items: Items, store: Store, scores: Scores, tally: _Tally
+) -> None:
     encoder = msgspec.json.Encoder()
-    for index in range(len(items)):
+    for index in indices:
         key = items.key(index)
         part = store.read(key) if key in present else None
         if part is None:
-            missing += 1
+            tally.missing += 1
             continue
         if part.error is None:
-            done += 1
+            tally.done += 1
         else:
-            failures += 1
-            if len(failed) < MOST_FAILURES_NAMED:
-                failed[items.name(index)] = part.error
+            tally.failures += 1
+            if len(tally.failed) < MOST_FAILURES_NAMED:
+                tally.failed[items.name(index)] = part.error
         stream.write(encoder.encode_lines(list(_rows(items, index, key, part, scores))))
-    return done, failed, failures, missing
 
 
 def _rows(items: Items, index: int, key: str, part: Part, scores: Scores) -> Iterator[dict[str, Any]]:

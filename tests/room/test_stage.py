@@ -149,6 +149,25 @@ def test_damaged_recordings_come_through(damage: str, rng: np.random.Generator) 
         assert any("silent" in line for line in solved.warnings)
 
 
+def test_one_talker_alone_is_dereverberated() -> None:
+    made = rendered(1, 0.4)
+    solved = solve(scene_of(made), "full")
+    assert solved.fallbacks == ()
+    stoi = [figures(s, made, "stoi")[0] for s in (solved.signals, made.mixture[:1])]
+    assert stoi[0] > stoi[1]
+    assert figures(solved.signals, made, "sdr_db")[0] > figures(made.mixture[:1], made, "sdr_db")[0] + 3.0
+
+
+def test_numbers_that_are_lost_fall_back_by_name(monkeypatch: pytest.MonkeyPatch) -> None:
+    from unmix.room import chain
+
+    made = rendered(2, 0.3, seconds=3.0)
+    monkeypatch.setattr(chain, "gains", lambda early, noise, post: np.full(early.shape, np.nan, np.float32))
+    solved = solve(scene_of(made), "full")
+    assert np.isfinite(solved.signals).all()
+    assert "singular beyond repair" in solved.fallbacks[0]
+
+
 @pytest.mark.parametrize("seconds", [0.2, 0.9, 1.3])
 def test_short_recordings_say_so(seconds: float) -> None:
     made = rendered(2, 0.3, seconds=3.0)

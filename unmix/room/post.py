@@ -35,6 +35,7 @@ from unmix.settings import PostSettings
 __all__ = ["background_level", "distortionless", "frame_weights", "gains", "posterior_masks", "restore"]
 
 _LOADING = 1e-6
+_OWN_IN_REST = np.float32(1e-4)
 _RESTORE_LOADING = 1e-4
 _QUIET_SHARE = 0.2
 _LEAST_LEVEL = 1e-3
@@ -70,7 +71,9 @@ def distortionless(
     filters = np.empty((f, masks.shape[1], s.shape[1]), z.dtype)
     for k in range(masks.shape[1]):
         own = masks[:, k : k + 1] * each
-        phi = loaded(s @ np.swapaxes(weighted_conjugate(s, each - own), 1, 2), _LOADING)
+        # A little of the talker counts as the rest: with one talker and no noise there would be none at all.
+        rest = each - (1.0 - _OWN_IN_REST) * own
+        phi = loaded(s @ np.swapaxes(weighted_conjugate(s, rest), 1, 2), _LOADING)
         r = s @ np.swapaxes(weighted_conjugate(z[:, reference : reference + 1], own), 1, 2)
         u = safe_solve(phi, r)
         at_reference = r[:, at : at + 1].real

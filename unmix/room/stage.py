@@ -243,8 +243,12 @@ class RoomStage:
         if result.talkers is None:
             note(result, fallback="model", why="the delays alone explain the recording as well as anything learned")
             return modelled.copy()
-        note(result)
         out = self._transform.synthesise(result.talkers, stretch.shape[1], workers=self._bands.workers)
+        if not np.isfinite(out).all():
+            note(result, fallback="model", why="the statistics were singular beyond repair")
+            self._warm = None
+            return modelled.copy()
+        note(result)
         return out.astype(np.float64) * level
 
     def _refined(self, stretch: Floats, start_s: float, stop_s: float) -> ChainResult:

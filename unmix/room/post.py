@@ -35,7 +35,7 @@ from unmix.settings import PostSettings
 __all__ = ["background_level", "distortionless", "frame_weights", "gains", "posterior_masks", "restore"]
 
 _LOADING = 1e-6
-_OWN_IN_REST = np.float32(1e-4)
+_OWN_IN_REST = np.float32(1e-5)
 _RESTORE_LOADING = 1e-4
 _QUIET_SHARE = 0.2
 _LEAST_LEVEL = 1e-3

@@ -78,7 +78,8 @@ def test_a_scheduler_that_goes_away_and_has_no_workers(tmp_path: Path) -> None:
 
     plan = write_plan(tmp_path)
     with LocalCluster(n_workers=0, processes=False, dashboard_address=None) as started:
-        threading.Timer(3.0, started.close).start()
+        closing = threading.Timer(3.0, started.close)
+        closing.start()
         with (
             pytest.warns(UnmixWarning, match="no worker is connected yet; waiting"),
             pytest.raises(
@@ -86,6 +87,7 @@ def test_a_scheduler_that_goes_away_and_has_no_workers(tmp_path: Path) -> None:
             ),
         ):
             run_batch(plan, tmp_path / "out", cluster=started.scheduler_address)
+        closing.join()  # two closings at once end in an error of the library's own
     assert run_batch(plan, tmp_path / "out", workers=1).ran == 6
 
 

@@ -79,9 +79,13 @@ class ClusterEngine:
                 if not flight.items:
                     return
                 yield [self._keep(flight, future) for future in self._ended(flight)]
-        except FileError:
+        except (FileError, InputError):
             raise
-        except (OSError, CancelledError) as error:
+        except Exception as error:
+            # A call under way when the connection goes ends in whatever the library had in hand (an unbound variable
+            # of its own among them), so the client is asked, not the error.
+            if not isinstance(error, (OSError, CancelledError)) and self._client.status == "running":
+                raise
             line = (str(error).splitlines() or [type(error).__name__])[0]
             raise FileError(
                 f"{self._address}: the scheduler is gone ({line}); what was finished is kept: start it and run again"
@@ -163,9 +167,10 @@ class ClusterEngine:
         return sorted(found, key=lambda r: -r.seconds)
 
     def _close(self, flight: _Flight) -> None:
-        with contextlib.suppress(OSError, TimeoutError):
+        with contextlib.suppress(OSError, TimeoutError, CancelledError, UnboundLocalError):
             self._client.cancel([*flight.items, *flight.bundles.values()], force=True)
-        self._client.close(timeout=ANSWER_S)
+        with contextlib.suppress(OSError, TimeoutError, CancelledError, UnboundLocalError):
+            self._client.close(timeout=ANSWER_S)
 
 
 def _connect(address: str) -> Any:

@@ -10,37 +10,33 @@ import pytest
 
 from tests.room.scenes import RATE, rendered, scene_of
 from unmix.errors import InputError
-from unmix.jobs.reverberant import _known
+from unmix.jobs.reverberant import look_of
 from unmix.jobs.solve import paths_of, solve
-from unmix.room.frames import RecursiveDereverberation
-from unmix.room.low_latency import AdaptiveFilters, Bearings
+from unmix.room.causal import CausalStage, causal_stage
+from unmix.room.low_latency import AdaptiveFilters
 from unmix.settings import PredictionSettings, RoomSettings
 from unmix.variant import PRESETS, Variant
 
 RECURSIVE = Variant(
     name="recursive", room=RoomSettings(prediction=PredictionSettings(recursive=True), refinement=None, post=None)
 )
-Made = AdaptiveFilters | RecursiveDereverberation
 
 
-def stage(variant: Variant) -> Made:
+def stage(variant: Variant) -> CausalStage:
     scene = scene_of(rendered(2, 0.3))
-    known = partial(_known, scene, variant, paths_of(scene, variant), None)
-
-    def at_first(frequencies_hz: np.ndarray) -> Bearings:
-        return known(frequencies_hz, 0.0)
-
+    paths = paths_of(scene, variant)
+    known = partial(
+        look_of, variant, paths, array=scene.array, sample_rate=RATE, temperature_c=scene.temperature_c, spectra=None
+    )
     assert variant.room is not None
-    if variant.room.low_latency is not None:
-        return AdaptiveFilters(variant.room, at_first, sample_rate=RATE, reference=0)
-    return RecursiveDereverberation(variant.room, at_first, sample_rate=RATE, channels=7)
+    return causal_stage(variant.room, known, sample_rate=RATE, channels=7, reference=0)
 
 
-FORMS: list[Callable[[], Made]] = [partial(stage, PRESETS["low-latency"]), partial(stage, RECURSIVE)]
+FORMS: list[Callable[[], CausalStage]] = [partial(stage, PRESETS["low-latency"]), partial(stage, RECURSIVE)]
 
 
 @pytest.mark.parametrize("make", FORMS, ids=["low-latency", "recursive"])
-def test_chunks_do_not_matter_and_latency_is_as_stated(make: Callable[[], Made]) -> None:
+def test_chunks_do_not_matter_and_latency_is_as_stated(make: Callable[[], CausalStage]) -> None:
     x = rendered(2, 0.3).mixture[:, : 2 * RATE]
     out = []
     for chunk in (32, 777, x.shape[1]):
@@ -58,7 +54,7 @@ def test_chunks_do_not_matter_and_latency_is_as_stated(make: Callable[[], Made])
 
 
 @pytest.mark.parametrize("make", FORMS, ids=["low-latency", "recursive"])
-def test_state_is_all_there_is(make: Callable[[], Made]) -> None:
+def test_state_is_all_there_is(make: Callable[[], CausalStage]) -> None:
     x = rendered(2, 0.3).mixture[:, :RATE]
     one, other = make(), make()
     one.push(x[:, :9001])

@@ -2,34 +2,29 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from dataclasses import replace
 from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.errors import InputError
+from unmix.array import Array
 from unmix.model.delays import Paths
 from unmix.model.noise import Spectra
 from unmix.physics import speed_of_sound
-from unmix.room.aligned import Aligned
-from unmix.room.frames import RecursiveDereverberation
-from unmix.room.low_latency import AdaptiveFilters, Bearings
-from unmix.room.stage import Look, RoomStage, Turned
-from unmix.room.stft import Complexes
+from unmix.room.causal import Aligned, asks_for_causal, causal_stage
+from unmix.room.chain import Look
+from unmix.room.stage import RoomStage, Turned
 from unmix.scene import Scene
-from unmix.settings import RoomSettings
 from unmix.solvers.baselines import steering
 from unmix.solvers.pose import pose
 from unmix.solvers.stationary import solution_response
 from unmix.solvers.streaming import Separator
 from unmix.variant import Variant
 
-__all__ = ["room_stage"]
+__all__ = ["look_of", "room_stage"]
 
 Floats = NDArray[np.float64]
-
-Known = Callable[[Floats, float], Bearings]
 
 _COURSE = 32
 """Parts of a segment in which a moving talker counts as standing still, when the segment is judged."""
@@ -52,24 +47,38 @@ def room_stage(
     if variant.room is None:
         raise ValueError("the variant has no room stage")
 
-    known = partial(_known, scene, variant, paths, spectra)
-    settings = variant.room
-    if settings.low_latency is not None or (settings.prediction is not None and settings.prediction.recursive):
-        return _causal(scene, settings, paths, known)
+    rate, settings = scene.sample_rate, variant.room
+    known = partial(
+        look_of,
+        variant,
+        array=scene.array,
+        sample_rate=rate,
+        temperature_c=scene.temperature_c,
+        spectra=spectra,
+    )
+    if asks_for_causal(settings):
+        stage = causal_stage(
+            settings,
+            lambda frequencies_hz: known(paths.still(0.0), frequencies_hz),
+            sample_rate=rate,
+            channels=scene.array.channels,
+            reference=scene.array.reference_channel,
+        )
+        where = (lambda time_s: known(paths.still(time_s), stage.frequencies_hz)) if paths.moving else None
+        return Aligned(stage, sample_rate=rate, where=where)
 
     def look(frequencies_hz: Floats, start_s: float, stop_s: float) -> Look:
-        middle = known(frequencies_hz, 0.5 * (start_s + stop_s))
-        omega = np.asarray(2.0 * np.pi * frequencies_hz / scene.sample_rate)
-        course: tuple[Complexes, ...] = ()
-        if paths.moving:
-            times = start_s + (np.arange(_COURSE) + 0.5) / _COURSE * (stop_s - start_s)
-            course = tuple(steering(paths.still(float(t)), omega, scene.sample_rate) for t in times)
-        return Look(middle.rows, middle.responses, course)
+        middle = known(paths.still(0.5 * (start_s + stop_s)), frequencies_hz)
+        if not paths.moving:
+            return middle
+        times = start_s + (np.arange(_COURSE) + 0.5) / _COURSE * (stop_s - start_s)
+        omega = _omega(frequencies_hz, rate)
+        return replace(middle, course=tuple(steering(paths.still(float(t)), omega, rate) for t in times))
 
     return RoomStage(
-        variant.room,
+        settings,
         model=model,
-        sample_rate=scene.sample_rate,
+        sample_rate=rate,
         channels=scene.array.channels,
         talkers=paths.talkers,
         reference=scene.array.reference_channel,
@@ -79,42 +88,24 @@ def room_stage(
     )
 
 
-def _known(
-    scene: Scene, variant: Variant, paths: Paths, spectra: Spectra | None, frequencies_hz: Floats, time_s: float
-) -> Bearings:
-    """The constrained solution's rows and the bearings' responses at one time."""
-    still = paths.still(time_s)
-    omega = np.asarray(2.0 * np.pi * frequencies_hz / scene.sample_rate)
-    posed = pose(
-        variant,
-        still,
-        scene.array,
-        sample_rate=scene.sample_rate,
-        temperature_c=scene.temperature_c,
-        spectra=spectra,
-    )
-    return Bearings(solution_response(posed.problem, omega), steering(still, omega, scene.sample_rate))
+def look_of(
+    variant: Variant,
+    paths: Paths,
+    frequencies_hz: Floats,
+    *,
+    array: Array,
+    sample_rate: int,
+    temperature_c: float,
+    spectra: Spectra | None,
+) -> Look:
+    """The constrained solution's rows and the bearings' responses of paths at rest, at frequencies in hertz."""
+    omega = _omega(frequencies_hz, sample_rate)
+    posed = pose(variant, paths, array, sample_rate=sample_rate, temperature_c=temperature_c, spectra=spectra)
+    return Look(solution_response(posed.problem, omega), steering(paths, omega, sample_rate))
 
 
-def _causal(scene: Scene, settings: RoomSettings, paths: Paths, known: Known) -> Aligned:
-    """The forms that run frame by frame."""
-    rate = scene.sample_rate
-
-    def at_first(frequencies_hz: Floats) -> Bearings:
-        return known(frequencies_hz, 0.0)
-
-    stage: AdaptiveFilters | RecursiveDereverberation
-    if settings.low_latency is not None:
-        stage = AdaptiveFilters(settings, at_first, sample_rate=rate, reference=scene.array.reference_channel)
-    elif settings.refinement is not None or settings.post is not None:
-        raise InputError(
-            'room.prediction.recursive runs frame by frame, refinement and post do not: start from base = "dereverb"'
-        )
-    else:
-        stage = RecursiveDereverberation(settings, at_first, sample_rate=rate, channels=scene.array.channels)
-    frequencies_hz = stage.frequencies_hz
-    where = (lambda time_s: known(frequencies_hz, time_s)) if paths.moving else None
-    return Aligned(stage, sample_rate=rate, where=where)
+def _omega(frequencies_hz: Floats, sample_rate: float) -> Floats:
+    return np.asarray(2.0 * np.pi * frequencies_hz / sample_rate)
 
 
 def _turned(scene: Scene, paths: Paths) -> Turned:

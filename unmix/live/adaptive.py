@@ -12,15 +12,14 @@ from functools import partial
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.live.design import Designer, is_recursive
+from unmix.jobs.reverberant import look_of
+from unmix.live.design import Designer
 from unmix.live.stage import State
-from unmix.room.frames import RecursiveDereverberation
-from unmix.room.low_latency import AdaptiveFilters, Bearings
+from unmix.room.causal import causal_stage
+from unmix.room.chain import Look
 from unmix.scene import Talker
 from unmix.settings import RoomSettings
-from unmix.solvers.baselines import steering
-from unmix.solvers.pose import check_solvable, pose
-from unmix.solvers.stationary import solution_response
+from unmix.solvers.pose import check_solvable
 
 __all__ = ["CausalRoomStage"]
 
@@ -35,13 +34,13 @@ class CausalRoomStage:
 
     def __init__(self, design: Designer, settings: RoomSettings, talkers: Sequence[Talker]) -> None:
         self._design, self._seats = design, tuple(talkers)
-        known = partial(self._known, talkers)
-        rate, array = design.sample_rate, design.array
-        self._stage: AdaptiveFilters | RecursiveDereverberation
-        if is_recursive(settings):
-            self._stage = RecursiveDereverberation(settings, known, sample_rate=rate, channels=array.channels)
-        else:
-            self._stage = AdaptiveFilters(settings, known, sample_rate=rate, reference=array.reference_channel)
+        self._stage = causal_stage(
+            settings,
+            partial(self._known, talkers),
+            sample_rate=design.sample_rate,
+            channels=design.array.channels,
+            reference=design.array.reference_channel,
+        )
 
     @property
     def latency(self) -> int:
@@ -91,21 +90,20 @@ class CausalRoomStage:
             self._stage.follow(self._known(seats, self._stage.frequencies_hz))
         self._seats = seats
 
-    def _known(self, talkers: Sequence[Talker], frequencies_hz: Floats) -> Bearings:
+    def _known(self, talkers: Sequence[Talker], frequencies_hz: Floats) -> Look:
         """What the model knows of talkers. Raises UnsolvableError where their bearings coincide."""
         design = self._design
         paths = design.paths(talkers)
         check_solvable(paths)
-        posed = pose(
+        return look_of(
             design.variant,
             paths,
-            design.array,
+            frequencies_hz,
+            array=design.array,
             sample_rate=design.sample_rate,
             temperature_c=design.temperature_c,
             spectra=design.spectra,
         )
-        omega = np.asarray(2.0 * np.pi * frequencies_hz / design.sample_rate, np.float64)
-        return Bearings(solution_response(posed.problem, omega), steering(paths, omega, design.sample_rate))
 
 
 def _turn(old: Talker, new: Talker) -> float:

@@ -15,13 +15,14 @@ from unmix.live.bank import fitted
 from unmix.live.refit import refit
 from unmix.model.delays import Paths, paths_from_bearings
 from unmix.model.noise import Spectra
+from unmix.room.causal import asks_for_causal
 from unmix.scene import Scene, Talker
 from unmix.settings import RoomSettings
 from unmix.solvers.assemble import assemble
 from unmix.solvers.stationary import FilterBank
 from unmix.variant import Variant
 
-__all__ = ["Designer", "check_is_filters", "check_runs_live", "is_causal", "is_recursive", "noise_spectra"]
+__all__ = ["Designer", "check_is_filters", "check_runs_live", "is_causal", "noise_spectra"]
 
 Floats = NDArray[np.float64]
 
@@ -96,15 +97,9 @@ class Designer:
 _USE = "use a variant that is filters alone, such as model or linear-constraint"
 
 
-def is_recursive(room: RoomSettings) -> bool:
-    """Whether a room stage predicts late reverberation frame by frame and does nothing that needs more."""
-    recursive = room.prediction is not None and room.prediction.recursive
-    return room.low_latency is None and recursive and room.refinement is None and room.post is None
-
-
 def is_causal(room: RoomSettings) -> bool:
-    """Whether a room stage runs chunk by chunk."""
-    return room.low_latency is not None or is_recursive(room)
+    """Whether a room stage runs chunk by chunk, and asks for nothing that needs whole segments."""
+    return room.low_latency is not None or (asks_for_causal(room) and room.refinement is None and room.post is None)
 
 
 def check_is_filters(variant: Variant, *, spectra: Spectra | None) -> None:

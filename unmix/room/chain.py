@@ -25,7 +25,7 @@ from unmix.room.refinement import Refined, independent_start, refine, scaled
 from unmix.room.stft import Complexes, Reals
 from unmix.settings import LearnedSettings, PostSettings, PredictionSettings, RoomSettings
 
-__all__ = ["STAGES", "ChainResult", "Start", "run_chain"]
+__all__ = ["STAGES", "ChainResult", "Look", "run_chain"]
 
 STAGES = ("prediction", "refinement", "constrained", "filter", "restoration")
 """What changes the model's output, in order."""
@@ -36,18 +36,16 @@ _NOISE_IN_GAIN = 2.0
 
 
 @dataclass(frozen=True)
-class Start:
-    """Where a segment starts.
+class Look:
+    """What the model knows of the talkers at the stage's frequencies.
 
-    model      (frequencies, K, M): the constrained solution's separating matrix
-    look       (frequencies, M, K): relative responses of the bearings, one at the reference channel
-    warm       (frequencies, K, M): rows of the previous segment's matrix, None at the beginning
-    course     responses of the bearings over equal parts of the segment, where something moves
+    rows       (frequencies, K, M): separating matrix of the constrained solution
+    responses  (frequencies, M, K): relative responses of the bearings, one at the reference channel
+    course     the same over equal parts of a stretch, where something moves; else empty
     """
 
-    model: Complexes
-    look: Complexes
-    warm: Complexes | None = None
+    rows: Complexes
+    responses: Complexes
     course: tuple[Complexes, ...] = ()
 
 
@@ -72,35 +70,40 @@ class ChainResult:
 
 def run_chain(
     x: Complexes,
-    start: Start,
+    look: Look,
     settings: RoomSettings,
     reference: int,
     bands: Bands,
     frequencies_hz: NDArray[np.float64],
+    *,
+    warm: Complexes | None = None,
 ) -> ChainResult:
-    """Carry spectra (frequencies, M, frames) through the parts that the settings name."""
-    model_rows = start.model.astype(x.dtype)
+    """Carry spectra (frequencies, M, frames) through the parts that the settings name.
+
+    ``warm`` (frequencies, K, M) are the rows of the previous segment's matrix, to start from in place of the model's.
+    """
+    model_rows, bearings = look.rows.astype(x.dtype), look.responses.astype(x.dtype)
     z = _predicted(x, settings.prediction, bands)
     refined, responses, verdict = None, None, None
     steps = [model_rows]
     if settings.refinement is not None:
         refined = refine(
             z,
-            start.model if start.warm is None else start.warm,
-            start.look,
+            look.rows if warm is None else warm,
+            bearings,
             settings.refinement,
             bands,
-            iterations=None if start.warm is None else settings.refinement.warm_iterations,
+            iterations=None if warm is None else settings.refinement.warm_iterations,
         )
         rows, responses = scaled(refined.matrix, refined.talkers, reference)
         steps.append(rows)
         if settings.learned is not None:
             steps.append(_constrained(z, responses, settings.learned, bands))
         if settings.judge:
-            verdict = judge(x, start.course or (start.look,), responses, rows, frequencies_hz, bands)
+            verdict = judge(x, look.course or (bearings,), responses, rows, frequencies_hz, bands)
     carried = None if refined is None else independent_start(refined.matrix[:, : refined.talkers])
     if verdict is not None and not verdict.helps:
-        return ChainResult(None, carried, responses, refined, verdict, np.zeros((len(STAGES), start.model.shape[1])))
+        return ChainResult(None, carried, responses, refined, verdict, np.zeros((len(STAGES), model_rows.shape[1])))
     talkers, shares = _finished(x, z, steps, settings, reference, bands)
     return ChainResult(talkers, carried, responses, refined, verdict, shares)
 

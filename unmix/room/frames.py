@@ -6,13 +6,15 @@ forgetting (`prediction.RecursivePrediction`), the constrained solution's rows, 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-from unmix.room.low_latency import Bearings, BearingsAt
+from unmix.room.blockwise import Blockwise
+from unmix.room.chain import Look
 from unmix.room.prediction import RecursivePrediction
 from unmix.room.stft import Transform
 from unmix.settings import RoomSettings
@@ -22,13 +24,15 @@ __all__ = ["RecursiveDereverberation"]
 Floats = NDArray[np.float64]
 
 
-class RecursiveDereverberation:
-    """Causal, of fixed latency: as many samples out as in, and sample t of what comes out belongs to t - latency.
+class RecursiveDereverberation(Blockwise):
+    """The model on frames whose late reverberation has been predicted from those before.
 
-    Samples come in chunks of any size; what comes out does not depend on how they were cut. Memory is constant.
+    look  from the stage's frequencies in hertz to what the model knows there
     """
 
-    def __init__(self, settings: RoomSettings, bearings: BearingsAt, *, sample_rate: float, channels: int) -> None:
+    def __init__(
+        self, settings: RoomSettings, look: Callable[[Floats], Look], *, sample_rate: float, channels: int
+    ) -> None:
         if settings.prediction is None:
             raise ValueError("the settings predict nothing")
         self._prediction = settings.prediction
@@ -38,13 +42,18 @@ class RecursiveDereverberation:
         self._channels = channels
         self._recent: Floats
         self._sum: Floats
-        self.follow(bearings(self._transform.frequencies_hz))
+        self.follow(look(self._transform.frequencies_hz))
         self._begin()
 
     @property
     def frequencies_hz(self) -> Floats:
         """Frequencies at which bearings are to be known."""
         return self._transform.frequencies_hz
+
+    @property
+    def block(self) -> int:
+        """Samples between frames."""
+        return self._transform.hop
 
     @property
     def latency(self) -> int:
@@ -56,31 +65,13 @@ class RecursiveDereverberation:
         """Number of talkers."""
         return int(self._rows.shape[1])
 
-    def push(self, chunk: Floats) -> Floats:
-        """Take (channels, n) samples; return (talkers, n)."""
-        hop = self._transform.hop
-        self._in: Floats = np.concatenate([self._in, chunk], axis=1)
-        ready: list[Floats] = [self._out]
-        while self._in.shape[1] >= hop:
-            ready.append(self._step(self._in[:, :hop]))
-            self._in = self._in[:, hop:]
-        out = np.concatenate(ready, axis=1)
-        self._out: Floats = out[:, chunk.shape[1] :]
-        return out[:, : chunk.shape[1]]
-
-    def flush(self) -> Floats:
-        """The last ``latency`` samples, as if silence followed; the stage then stands at the start of a new stream."""
-        rest = self.push(np.zeros((self._channels, self.latency)))
-        self._begin()
-        return rest
-
-    def steer(self, bearings: Bearings) -> None:
+    def steer(self, look: Look) -> None:
         """Other bearings from the next frame on; overlapping frames fade one into the other."""
-        self.follow(bearings)
+        self.follow(look)
 
-    def follow(self, bearings: Bearings) -> None:
+    def follow(self, look: Look) -> None:
         """The same: nothing was learned of the talkers."""
-        self._rows = bearings.rows.astype(np.complex64)
+        self._rows = look.rows.astype(np.complex64)
 
     def state(self) -> dict[str, NDArray[Any]]:
         """Everything that depends on what was pushed."""

@@ -23,7 +23,6 @@ filter.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from itertools import pairwise
 from typing import Any, cast
 
@@ -31,12 +30,14 @@ import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
+from unmix.room.blockwise import Blockwise
+from unmix.room.chain import Look
 from unmix.room.linalg import adjoint, power
 from unmix.room.refinement import independent_start, look_penalty, scaled_rows, update_rows
 from unmix.room.stft import Complexes, Transform
 from unmix.settings import RoomSettings
 
-__all__ = ["AdaptiveFilters", "Bearings", "BearingsAt"]
+__all__ = ["AdaptiveFilters"]
 
 Floats = NDArray[np.float64]
 
@@ -46,25 +47,15 @@ _SPREAD = 0.05
 """Power from elsewhere, beside that of each talker, in what is believed before anything is heard."""
 
 
-@dataclass(frozen=True)
-class Bearings:
-    """What the model knows at the stage's frequencies: rows (frequencies, K, M), responses (frequencies, M, K)."""
+class AdaptiveFilters(Blockwise):
+    """Filters that are learned from what is heard, started from and held to the bearings.
 
-    rows: Complexes
-    responses: Complexes
-
-
-BearingsAt = Callable[[Floats], Bearings]
-"""From frequencies in hertz to what the model knows there."""
-
-
-class AdaptiveFilters:
-    """Causal, of fixed latency: as many samples out as in, and sample t of what comes out belongs to t - latency.
-
-    Samples come in chunks of any size; what comes out does not depend on how they were cut. Memory is constant.
+    look  from the stage's frequencies in hertz to what the model knows there
     """
 
-    def __init__(self, settings: RoomSettings, bearings: BearingsAt, *, sample_rate: float, reference: int) -> None:
+    def __init__(
+        self, settings: RoomSettings, look: Callable[[Floats], Look], *, sample_rate: float, reference: int
+    ) -> None:
         if settings.low_latency is None:
             raise ValueError("the settings have no low-latency form")
         own, transform = settings.low_latency, settings.transform
@@ -84,13 +75,18 @@ class AdaptiveFilters:
         self._prior_frames = own.prior_s * sample_rate / hop
         self._size = scipy.fft.next_fast_len(self._past + self._lookahead + self._block, real=True)
         self._taper = self._tapered()
-        self._hold(bearings(self._transform.frequencies_hz))
+        self._hold(look(self._transform.frequencies_hz))
         self._begin()
 
     @property
     def frequencies_hz(self) -> Floats:
         """Frequencies at which bearings are to be known."""
         return self._transform.frequencies_hz
+
+    @property
+    def block(self) -> int:
+        """Samples that are filtered at once."""
+        return self._block
 
     @property
     def latency(self) -> int:
@@ -109,31 +105,14 @@ class AdaptiveFilters:
             "Floats", scipy.fft.irfft(self._kernel, self._size, axis=-1)[..., : self._past + self._lookahead + 1]
         )
 
-    def push(self, chunk: Floats) -> Floats:
-        """Take (channels, n) samples; return (talkers, n)."""
-        self._in: Floats = np.concatenate([self._in, chunk], axis=1)
-        ready: list[Floats] = [self._out]
-        while self._in.shape[1] >= self._block:
-            ready.append(self._step(self._in[:, : self._block]))
-            self._in = self._in[:, self._block :]
-        out = np.concatenate(ready, axis=1)
-        self._out: Floats = out[:, chunk.shape[1] :]
-        return out[:, : chunk.shape[1]]
-
-    def flush(self) -> Floats:
-        """The last ``latency`` samples, as if silence followed; the stage then stands at the start of a new stream."""
-        rest = self.push(np.zeros((self._in.shape[0], self.latency)))
-        self._begin()
-        return rest
-
-    def steer(self, bearings: Bearings) -> None:
+    def steer(self, look: Look) -> None:
         """Other bearings from now on: what was learned of the old ones is given up, filters are cross-faded."""
-        self._hold(bearings)
+        self._hold(look)
         self._forget_all()
 
-    def follow(self, bearings: Bearings) -> None:
+    def follow(self, look: Look) -> None:
         """Bearings that have moved on a little: what was learned stays, the pull is toward the new ones."""
-        self._hold(bearings)
+        self._hold(look)
 
     def state(self) -> dict[str, NDArray[Any]]:
         """Everything that depends on what was pushed."""
@@ -150,10 +129,10 @@ class AdaptiveFilters:
             value = np.array(state[name])
             setattr(self, f"_{name}", value if value.ndim else value.item())
 
-    def _hold(self, bearings: Bearings) -> None:
+    def _hold(self, look: Look) -> None:
         """What is believed before anything is heard, and the pull toward the bearings that stays."""
-        self._bearings = bearings
-        a = bearings.responses.astype(np.complex64)
+        self._believed_of = look
+        a = look.responses.astype(np.complex64)
         m = a.shape[1]
         spread = (_SPREAD / m) * np.eye(m, dtype=np.complex64)
         self._others = look_penalty(a, 1.0).astype(np.complex64)
@@ -162,7 +141,7 @@ class AdaptiveFilters:
 
     def _begin(self) -> None:
         """The start of a stream."""
-        f, m, k = self._bearings.responses.shape
+        f, m, k = self._believed_of.responses.shape
         self._in = np.zeros((m, 0))
         self._out = np.zeros((k, self._block))
         self._history = np.zeros((m, self._size))
@@ -175,8 +154,8 @@ class AdaptiveFilters:
         self._kernel = self._fading = self._kernels(self._projected)
 
     def _forget_all(self) -> None:
-        f, m, k = self._bearings.responses.shape
-        self._rows = independent_start(self._bearings.rows).astype(np.complex64)
+        f, m, k = self._believed_of.responses.shape
+        self._rows = independent_start(self._believed_of.rows).astype(np.complex64)
         self._weighted = np.zeros((f, k, m, m), np.complex64)
         self._covariance = np.zeros((f, m, m), np.complex64)
         self._count = 0.0
@@ -241,8 +220,9 @@ class AdaptiveFilters:
             v, c = v + self._believed[b], c + self._believed_all[b]
         level = np.trace(c, axis1=1, axis2=2).real[:, None, None] / m
         held = np.float32(self._look_weight) * self._others[b] + share * self._believed[b]
-        update_rows(self._rows[b], v, c + (share * level) * self._believed_all[b], held)
-        self._projected[b] = scaled_rows(self._rows[b], c + (share * level) * self._believed_all[b], self._reference)
+        c = c + (share * level) * self._believed_all[b]
+        update_rows(self._rows[b], v, c, held)
+        self._projected[b] = scaled_rows(self._rows[b], c, self._reference)
 
     def _kernels(self, rows: Complexes) -> Complexes:
         """Spectra (talkers, channels, frequencies) of the filters that the rows become, cut to what they may see."""

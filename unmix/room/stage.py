@@ -16,13 +16,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from unmix.room.bands import Bands
-from unmix.room.chain import STAGES, ChainResult, Start, run_chain
+from unmix.room.chain import STAGES, ChainResult, Look, run_chain
 from unmix.room.judge import MOST_STRANGE, Verdict
 from unmix.room.stft import Complexes, Transform
 from unmix.settings import RoomSettings
 from unmix.solvers.streaming import Separator
 
-__all__ = ["Look", "LookAt", "RoomReport", "RoomStage", "SegmentReport", "Turned"]
+__all__ = ["LookAt", "RoomReport", "RoomStage", "SegmentReport", "Turned"]
 
 Floats = NDArray[np.float64]
 Fallback = Literal["none", "model", "silence"]
@@ -32,20 +32,6 @@ SHORTEST_S = 1.0
 
 FULL_QUALITY_S = 8.0
 """Recordings below this are refined from few frames."""
-
-
-@dataclass(frozen=True)
-class Look:
-    """What the model knows of the talkers at the stage's frequencies.
-
-    rows       (frequencies, K, M): separating matrix of the constrained solution
-    responses  (frequencies, M, K): relative responses of the bearings, one at the reference channel
-    course     the same over equal parts of the stretch, where something moves; else empty
-    """
-
-    rows: Complexes
-    responses: Complexes
-    course: tuple[Complexes, ...] = ()
 
 
 Turned = Callable[[float, float], float]
@@ -257,9 +243,9 @@ class RoomStage:
         frequencies_hz = self._transform.frequencies_hz
         look = self._look(frequencies_hz, start_s, stop_s)
         # Rows learned where talkers stood a segment ago mislead once they have moved on.
-        start = Start(look.rows, look.responses.astype(x.dtype), None if self._turned else self._warm, look.course)
+        warm = None if self._turned else self._warm
         with self._bands.running() as bands:
-            result = run_chain(x, start, self._settings, self._reference, bands, frequencies_hz)
+            result = run_chain(x, look, self._settings, self._reference, bands, frequencies_hz, warm=warm)
         self._warm, self._responses = result.rows, result.responses
         return result
 

@@ -1,50 +1,60 @@
-"""A causal stage of fixed latency as a separator of recordings: what comes out is aligned with what went in."""
+"""The forms of the room stage that run block by block, late by a fixed number of samples."""
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from unmix.room.low_latency import Bearings
+from unmix.errors import InputError
+from unmix.room.chain import Look
+from unmix.room.frames import RecursiveDereverberation
+from unmix.room.low_latency import AdaptiveFilters
 from unmix.room.stage import RoomReport
+from unmix.settings import RoomSettings
 
-__all__ = ["Aligned", "Causal"]
+__all__ = ["Aligned", "CausalStage", "asks_for_causal", "causal_stage"]
 
 Floats = NDArray[np.float64]
+CausalStage = AdaptiveFilters | RecursiveDereverberation
 
 
-class Causal(Protocol):
-    """As many samples out as in; sample t of what comes out belongs to t - latency."""
+def asks_for_causal(settings: RoomSettings) -> bool:
+    """Whether the settings ask for one of these forms."""
+    return settings.low_latency is not None or (settings.prediction is not None and settings.prediction.recursive)
 
-    @property
-    def latency(self) -> int:
-        """Samples by which what comes out is late."""
 
-    def push(self, chunk: Floats) -> Floats:
-        """Take (channels, n) samples; return (talkers, n)."""
+def causal_stage(
+    settings: RoomSettings, look: Callable[[Floats], Look], *, sample_rate: float, channels: int, reference: int
+) -> CausalStage:
+    """The form that the settings ask for; ``look`` goes from frequencies in hertz to what the model knows there.
 
-    def flush(self) -> Floats:
-        """The last ``latency`` samples."""
-
-    def follow(self, bearings: Bearings) -> None:
-        """Bearings that have moved on a little."""
+    Raises InputError for recursive prediction with parts that need whole segments.
+    """
+    if settings.low_latency is not None:
+        return AdaptiveFilters(settings, look, sample_rate=sample_rate, reference=reference)
+    if settings.refinement is not None or settings.post is not None:
+        raise InputError(
+            'room.prediction.recursive runs frame by frame, refinement and post do not: start from base = "dereverb"'
+        )
+    return RecursiveDereverberation(settings, look, sample_rate=sample_rate, channels=channels)
 
 
 class Aligned:
-    """Drops the first ``latency`` samples and gives the rest at the end.
+    """A causal stage as a separator of recordings: what comes out is aligned with what went in.
+
+    Drops the first ``latency`` samples and gives the rest at the end.
 
     where  from a time in seconds to the bearings then; None while nothing moves
     """
 
     def __init__(
         self,
-        stage: Causal,
+        stage: CausalStage,
         *,
         sample_rate: float,
-        where: Callable[[float], Bearings] | None = None,
+        where: Callable[[float], Look] | None = None,
         every_s: float = 0.25,
     ) -> None:
         self._stage, self._rate = stage, sample_rate

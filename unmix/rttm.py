@@ -1,4 +1,4 @@
-"""Who speaks when, as RTTM: the SPEAKER lines of NIST's Rich Transcription evaluation plan (2009)."""
+"""Who speaks when, as RTTM files: their SPEAKER lines, as NIST laid them down for its evaluation RT-09."""
 
 from __future__ import annotations
 

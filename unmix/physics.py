@@ -21,6 +21,7 @@ __all__ = [
     "speech_spectrum_db",
     "speed_of_sound",
     "unit_vector",
+    "wrapped",
 ]
 
 Floats = NDArray[np.float64]
@@ -78,6 +79,11 @@ def direction_angles(vectors: ArrayLike) -> tuple[Floats, Floats]:
     """Azimuth and elevation in radians of vectors of shape (..., 3): the inverse of `unit_vector`."""
     v = np.asarray(vectors, dtype=np.float64)
     return np.arctan2(v[..., 1], v[..., 0]), np.arctan2(v[..., 2], np.hypot(v[..., 0], v[..., 1]))
+
+
+def wrapped(angle: ArrayLike) -> Floats:
+    """Angles in radians, brought to between -pi and pi: what a difference of azimuths amounts to."""
+    return np.asarray(np.angle(np.exp(1j * np.asarray(angle))))
 
 
 def pairwise_distances(positions_m: ArrayLike) -> Floats:

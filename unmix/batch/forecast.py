@@ -19,7 +19,7 @@ PER_TALKER_GRADED = 0.05
 RENDERING_IN_A_ROOM, RENDERING = 0.6, 0.1
 """Processor seconds per second of recording, of one core; rough, and replaced by what has been measured."""
 PART_BYTES, ROW_BYTES = 8192, 1500
-DEFAULT_DURATION_S, DEFAULT_MICROPHONES, DEFAULT_TALKERS = 15.0, 8, 3
+DEFAULT_DURATION_S, DEFAULT_MICROPHONES = 15.0, 8
 MEASURED_FROM = 200
 """So many finished items, spread over the plan, are looked at for what they took."""
 

@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Annotated, Literal
 
@@ -16,7 +17,17 @@ from unmix.files import read_toml
 from unmix.metrics.grades import FIGURES
 from unmix.metrics.speech_figures import SPEECH_FIGURES
 
-__all__ = ["MetricTable", "Plan", "RandomSeats", "RenderTable", "RoomTable", "ScoresTable", "SeatsTable", "VaryTable"]
+__all__ = [
+    "MetricTable",
+    "Plan",
+    "RandomSeats",
+    "RenderTable",
+    "RoomTable",
+    "ScoresTable",
+    "SeatsTable",
+    "VaryTable",
+    "refuse_namesakes",
+]
 
 Share = Annotated[float, Meta(gt=0.0, le=1.0)]
 
@@ -164,3 +175,12 @@ def _check(plan: Plan, path: Path) -> None:
     for name in names:
         if name in (*FIGURES, *SPEECH_FIGURES, "leakage_alone_db") or names.count(name) > 1:
             raise InputError(f"{path}: key `metric`: {name!r} is taken; choose another name")
+
+
+def refuse_namesakes(what: str, names: Sequence[str], remedy: str) -> None:
+    """Raise InputError when two of a plan's scenes or variants have one name: rows are told apart by it."""
+    taken: set[str] = set()
+    for name in names:
+        if name in taken:
+            raise InputError(f"two {what} are called {name!r}; {remedy}")
+        taken.add(name)

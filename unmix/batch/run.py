@@ -47,13 +47,12 @@ class Engine(Protocol):
 
 @dataclass
 class Progress:
-    """How far a batch is; `rate` in items per second, `left_s` None until the rate is known."""
+    """How far a batch is; `rate` in items per second, None until it is known."""
 
     total: int
     done: int = 0
     failures: int = 0
     rate: float | None = None
-    left_s: float | None = None
     slowest: Running | None = None
     _times: list[tuple[float, int]] = field(default_factory=list)
 
@@ -70,7 +69,6 @@ class Progress:
         since, before = self._times[0]
         if self.done > before and now > since:
             self.rate = (self.done - before) / (now - since)
-            self.left_s = (self.total - self.done) / self.rate
 
 
 @dataclass(frozen=True)

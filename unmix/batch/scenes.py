@@ -12,7 +12,7 @@ import msgspec
 import numpy as np
 
 from unmix.batch.digests import Digests, Stamp, digest_of
-from unmix.batch.plan import Plan, RandomSeats, RenderTable, RoomTable, SeatsTable
+from unmix.batch.plan import Plan, RandomSeats, RenderTable, RoomTable, SeatsTable, refuse_namesakes
 from unmix.errors import InputError
 from unmix.files import convert_tree, read_toml
 from unmix.render.spec import RenderSpec
@@ -60,11 +60,7 @@ def plan_scenes(plan: Plan, base: Path) -> list[SceneSource]:
     scenes = [_from_file(path, base, digests) for path in _scene_files(plan, base)]
     for index, table in enumerate(plan.render):
         scenes += _rendered(table, base, digests, f"key `render[{index}]`")
-    taken: set[str] = set()
-    for scene in scenes:
-        if scene.name in taken:
-            raise InputError(f"two scenes are called {scene.name!r}; give one [[render]] table another `name`")
-        taken.add(scene.name)
+    refuse_namesakes("scenes", [s.name for s in scenes], "give one [[render]] table another `name`")
     return scenes
 
 

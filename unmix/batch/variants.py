@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from unmix.batch.plan import Plan, VaryTable
+from unmix.batch.plan import Plan, VaryTable, refuse_namesakes
 from unmix.errors import InputError
 from unmix.files import convert_tree
 from unmix.variant import PRESETS, Variant, load_variant
@@ -36,11 +36,7 @@ def plan_variants(plan: Plan, base: Path) -> list[Variant]:
     variants = [load_variant(name) for entry in plan.variants for name in _named(entry, base)]
     for index, vary in enumerate(plan.vary):
         variants += _varied(vary, base, f"key `vary[{index}].fields`")
-    taken: set[str] = set()
-    for variant in variants:
-        if variant.name in taken:
-            raise InputError(f"two variants are called {variant.name!r}; give one of them another `name`")
-        taken.add(variant.name)
+    refuse_namesakes("variants", [v.name for v in variants], "give one of them another `name`")
     return variants
 
 

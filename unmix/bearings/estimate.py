@@ -20,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from unmix.bearings.space import SearchSpace
-from unmix.physics import direction_angles
+from unmix.physics import direction_angles, wrapped
 
 __all__ = ["BearingEstimate", "bearing_estimate"]
 
@@ -85,7 +85,7 @@ def _deviations(x: Floats, spread: Floats, u: Floats, space: SearchSpace) -> tup
     draws = x + (normal * np.sqrt(np.maximum(values, 0.0))) @ vectors.T
     azimuth, elevation = direction_angles(space.lift(draws))
     azimuth0, elevation0 = direction_angles(u)
-    turned = np.angle(np.exp(1j * (azimuth - azimuth0)))
+    turned = wrapped(azimuth - azimuth0)
     azimuth_std, elevation_std = (float(np.sqrt(np.mean(e**2))) for e in (turned, elevation - elevation0))
     if space.rank == 1 and space.region != "ring":
         # Anywhere on the cone: root mean square height of a circle of radius sqrt(1 - x^2).

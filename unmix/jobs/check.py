@@ -30,7 +30,7 @@ from unmix.jobs.findings import ChannelFigures, Checked, Finding
 from unmix.limits.ambiguity import ambiguity_hz
 from unmix.limits.ladder import noise_gain, responses
 from unmix.model.delays import wave_delays
-from unmix.physics import speed_of_sound, unit_vector
+from unmix.physics import speed_of_sound, unit_vector, wrapped
 from unmix.scene import Scene
 
 __all__ = ["check"]
@@ -140,7 +140,7 @@ def _resolution(scene: Scene) -> tuple[float | None, float | None, float]:
     azimuth = np.array([t.azimuth for t in scene.talkers if t.azimuth is not None])
     if len(azimuth) < 2:
         azimuth = np.radians([-0.5, 0.5]) * ASSUMED_SEPARATION_DEG
-    gaps = np.degrees(np.abs(np.angle(np.exp(1j * (azimuth[:, None] - azimuth)))))
+    gaps = np.degrees(np.abs(wrapped(azimuth[:, None] - azimuth)))
     separation = float(gaps[np.triu_indices(len(azimuth), 1)].min())
     if len(azimuth) > scene.array.channels:
         return None, ambiguous, separation

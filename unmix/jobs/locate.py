@@ -26,6 +26,7 @@ from unmix.jobs.locate_search import find_in_recording, orient, space_of
 from unmix.jobs.locate_task import METHODS, LocateTask, Method, Progress, check_task, warnings_of
 from unmix.jobs.located import Located, LocatedTalker, ScoreMap
 from unmix.jobs.naming import name_talkers
+from unmix.physics import wrapped
 from unmix.scene import Scene
 from unmix.track import Orientation, Track
 
@@ -221,7 +222,7 @@ def _score_map(seen: Scan, space: SearchSpace) -> ScoreMap:
     """Largest score along each azimuth, smoothed by the width of the grid."""
     azimuth = np.linspace(-np.pi, np.pi, 181)
     points = np.arctan2(space.directions[:, 1], space.directions[:, 0])
-    kernel = np.exp(-0.5 * (np.angle(np.exp(1j * (azimuth[:, None] - points))) / np.radians(4.0)) ** 2)
+    kernel = np.exp(-0.5 * (wrapped(azimuth[:, None] - points) / np.radians(4.0)) ** 2)
     return ScoreMap(azimuth, kernel @ seen.score)
 
 

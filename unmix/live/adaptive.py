@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from unmix.jobs.reverberant import look_of
 from unmix.live.design import Designer
-from unmix.live.stage import State
+from unmix.live.stage import State, turn
 from unmix.room.causal import causal_stage
 from unmix.room.chain import Look
 from unmix.scene import Talker
@@ -65,7 +65,7 @@ class CausalRoomStage:
         known = self._known(talkers, self._stage.frequencies_hz)
 
         def change() -> None:
-            if max(map(_turn, self._seats, talkers)) < FOLLOWED:
+            if max(map(turn, self._seats, talkers)) < FOLLOWED:
                 self._stage.follow(known)
             else:
                 self._stage.steer(known)
@@ -104,8 +104,3 @@ class CausalRoomStage:
             temperature_c=design.temperature_c,
             spectra=design.spectra,
         )
-
-
-def _turn(old: Talker, new: Talker) -> float:
-    around = abs(float(np.angle(np.exp(1j * ((new.azimuth or 0.0) - (old.azimuth or 0.0))))))
-    return max(around, abs(new.elevation - old.elevation))

@@ -21,7 +21,7 @@ from unmix.live.ahead import Ahead, Prepared
 from unmix.live.bank import BankStage, Change
 from unmix.live.design import Designer, check_runs_live, noise_spectra
 from unmix.live.latency import measured_latency
-from unmix.live.stage import LiveStage
+from unmix.live.stage import LiveStage, turn
 from unmix.model.delays import Paths
 from unmix.model.noise import Spectra
 from unmix.scene import Scene, Talker
@@ -346,17 +346,12 @@ def track_source(talkers: Sequence[Talker], *, least_turn: float = LEAST_TURN) -
 
     def source(time_s: float) -> Sequence[Talker] | None:
         now = [_at(talker, time_s) for talker in talkers]
-        if told and max(map(_turn, told, now)) < least_turn:
+        if told and max(map(turn, told, now)) < least_turn:
             return None
         told[:] = now
         return now
 
     return source
-
-
-def _turn(old: Talker, new: Talker) -> float:
-    around = abs(float(np.angle(np.exp(1j * ((new.azimuth or 0.0) - (old.azimuth or 0.0))))))
-    return max(around, abs(new.elevation - old.elevation))
 
 
 def _at(talker: Talker, time_s: float) -> Talker:

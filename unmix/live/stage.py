@@ -12,9 +12,10 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from unmix.physics import wrapped
 from unmix.scene import Talker
 
-__all__ = ["LiveStage", "State"]
+__all__ = ["LiveStage", "State", "turn"]
 
 Floats = NDArray[np.float64]
 State = dict[str, NDArray[Any]]
@@ -50,3 +51,9 @@ class LiveStage(Protocol):
 
     def restore(self, state: State) -> None:
         """Go on from a state; raises KeyError or ValueError when it is not one of this stage's."""
+
+
+def turn(old: Talker, new: Talker) -> float:
+    """By how many radians a talker has turned: azimuth or elevation, whichever turned more."""
+    around = abs(float(wrapped((new.azimuth or 0.0) - (old.azimuth or 0.0))))
+    return max(around, abs(new.elevation - old.elevation))

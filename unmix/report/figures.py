@@ -22,6 +22,7 @@ from unmix.errors import InputError
 from unmix.export.tradeoffs import Tradeoffs
 from unmix.files import write_aside
 from unmix.jobs.located import Located, LocatedTalker
+from unmix.physics import wrapped
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -198,7 +199,7 @@ def _over_time(axes: Axes, located: Located) -> None:
         axes.plot(time_s, azimuth, color=colour, linewidth=0.8, zorder=2)
         for a, _ in talker.candidates if _aside(talker) else ():
             # Mirrored, what goes to the left goes to the right.
-            other = np.degrees(np.angle(np.exp(1j * (a + talker.azimuth - talker.track.at(time_s)[0]))))
+            other = np.degrees(wrapped(a + talker.azimuth - talker.track.at(time_s)[0]))
             axes.plot(time_s, _unjumped(other), color=colour, linewidth=0.9, linestyle=":", zorder=2)
         speaks = np.zeros(len(time_s), dtype=bool)
         for start, stop in talker.active_s:
@@ -252,7 +253,7 @@ def _ring(axes: PolarAxes, located: Located) -> None:
 
 def _aside(talker: LocatedTalker) -> bool:
     """Whether the other candidates lie at another azimuth, and not just above or below."""
-    return any(abs(np.angle(np.exp(1j * (a - talker.azimuth)))) > np.radians(2.0) for a, _ in talker.candidates)
+    return any(abs(wrapped(a - talker.azimuth)) > np.radians(2.0) for a, _ in talker.candidates)
 
 
 def _unjumped(azimuth_deg: np.ndarray[Any, np.dtype[np.float64]]) -> np.ndarray[Any, np.dtype[np.float64]]:

@@ -59,7 +59,7 @@ class AdaptiveFilters(Blockwise):
         if settings.low_latency is None:
             raise ValueError("the settings have no low-latency form")
         own, transform = settings.low_latency, settings.transform
-        self._own, self._reference = own, reference
+        self._reference = reference
         self._look_weight = settings.refinement.look_weight if settings.refinement else 0.0
         self._block = max(1, round(own.block_s * sample_rate))
         blocks = max(1, round(transform.frame_s / transform.overlap * sample_rate / self._block))
